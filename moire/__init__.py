@@ -6,7 +6,9 @@
 
 from __future__ import annotations
 
+import sys
 from importlib import import_module
+from types import ModuleType
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
@@ -20,9 +22,20 @@ __all__ = ["__version__", "examine", "mend", "read", "write"]
 _ROOMS = {"examine": "examine", "mend": "mend", "read": "scanfile", "write": "scanfile"}
 
 
-def __getattr__(name: str) -> Any:
-    if name in _ROOMS:
+class _Package(ModuleType):
+    """The package, whose functions keep their names when the rooms of the same name load."""
+
+    def __setattr__(self, name: str, value: Any) -> None:
+        # Importing the room moire.examine must not hide the function moire.examine.
+        if not (name in _ROOMS and isinstance(value, ModuleType)):
+            super().__setattr__(name, value)
+
+    def __getattr__(self, name: str) -> Any:
+        if name not in _ROOMS:
+            raise AttributeError(f"module 'moire' has no attribute {name!r}")
         value = getattr(import_module(f"moire.{_ROOMS[name]}"), name)
-        globals()[name] = value
+        setattr(self, name, value)
         return value
-    raise AttributeError(f"module 'moire' has no attribute {name!r}")
+
+
+sys.modules[__name__].__class__ = _Package
