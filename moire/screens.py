@@ -1,0 +1,139 @@
+"""From lattices to screens: which ink, what ruling, what angle, and is it a halftone at all."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+from numpy.typing import NDArray
+
+from moire.lattice import Lattice, grid_distance, wrap
+from moire.model import Ink, Screen
+from moire.peaks import Peak
+from moire.units import fold_angle, lpi_to_lpcm, page_angle
+
+# What each ink absorbs of red, green and blue, relative to its main band; process inks on coated
+# paper (ISO 12647-2 solids, value from memory).
+SIGNATURES: dict[Ink, tuple[float, float, float]] = {
+    "cyan": (1.0, 0.33, 0.125),
+    "magenta": (0.19, 1.0, 0.69),
+    "yellow": (0.06, 0.125, 1.0),
+    "black": (1.0, 1.0, 1.0),
+}
+
+
+def name_inks(lattices: tuple[Lattice, ...]) -> tuple[Ink, ...]:
+    """Ink of each lattice by its colour alone; the angle cannot tell cyan from magenta.
+
+    Each ink is given once to the four strongest; a further lattice takes the nearest ink.
+    A grey scan shows one ink as black and cannot name several.
+    """
+    from scipy.optimize import linear_sum_assignment
+
+    if not lattices:
+        return ()
+    if len(lattices[0].first.colour) != 3:
+        return ("black",) if len(lattices) == 1 else ("unknown",) * len(lattices)
+    inks = list(SIGNATURES)
+    likeness = np.array([[_cosine(_colour(g), SIGNATURES[ink]) for ink in inks] for g in lattices])
+    names: list[Ink] = [inks[int(i)] for i in likeness.argmax(axis=1)]
+    rows, columns = linear_sum_assignment(-likeness[:4])
+    for row, column in zip(rows, columns, strict=True):
+        if likeness[row, column] > likeness[row].max() - 0.15:
+            names[row] = inks[column]
+    return tuple(
+        name if likeness[row].max() > 0.85 else "unknown" for row, name in enumerate(names)
+    )
+
+
+def _colour(lattice: Lattice) -> NDArray[np.float64]:
+    a, b = lattice.first, lattice.second
+    return a.colour * a.amplitude + b.colour * b.amplitude
+
+
+def _cosine(a: NDArray[np.float64], b: tuple[float, float, float]) -> float:
+    return float(a @ np.array(b) / (np.linalg.norm(a) * np.linalg.norm(b) + 1e-12))
+
+
+def measure_screen(
+    k1_cpi: NDArray[np.float64],
+    k2_cpi: NDArray[np.float64],
+    sigma_cpi: tuple[float, float],
+    *,
+    ink: Ink,
+) -> Screen:
+    """Ruling and angle of a dot screen from its two lattice vectors.
+
+    Parameters
+    ----------
+    k1_cpi, k2_cpi : ndarray, shape (2,)
+        Cycles per inch, fy down the page.
+    sigma_cpi : (float, float)
+        Standard uncertainty of a component of each.
+    ink : str
+    """
+    w1, w2 = 1 / max(sigma_cpi[0], 1e-9) ** 2, 1 / max(sigma_cpi[1], 1e-9) ** 2
+    r1, r2 = float(np.hypot(*k1_cpi)), float(np.hypot(*k2_cpi))
+    ruling = (w1 * r1 + w2 * r2) / (w1 + w2)
+    a1 = fold_angle(page_angle(*k1_cpi), 90)
+    a2 = fold_angle(page_angle(*k2_cpi), 90)
+    gap = (a2 - a1 + 45) % 90 - 45
+    angle = fold_angle(a1 + gap * w2 / (w1 + w2), 90)
+    noise = 1 / math.sqrt(w1 + w2)
+    # Two vectors that disagree beyond their noise show a stretch that neither alone reveals.
+    ruling_sigma = max(noise, abs(r1 - r2) / 2 / math.sqrt(2))
+    angle_sigma = max(math.degrees(noise / ruling), abs(gap) / 2 / math.sqrt(2))
+    return Screen(
+        ruling_lpi=ruling,
+        ruling_lpi_sigma=ruling_sigma,
+        ruling_lpcm=lpi_to_lpcm(ruling),
+        angle_deg=angle,
+        angle_deg_sigma=angle_sigma,
+        ink=ink,
+        shape="dot",
+    )
+
+
+def is_halftone(lattice: Lattice, lattices: tuple[Lattice, ...], peaks: tuple[Peak, ...], size: int) -> bool:
+    """Vote on whether a square lattice is print or cloth.
+
+    Print: its fundamentals dominate every line that no screen explains, and at least one of:
+    the screens explain most of the energy, the (1,1) order is present, or the square is exact.
+    Cloth has its strongest lines elsewhere.
+    """
+    tolerance = 0.35 / size
+    others = [p for p in peaks if not any(_belongs(p, g, tolerance) for g in lattices)]
+    others = [p for p in others if not on_axis(p.f) or p.amplitude < 0.5 * lattice.strength]
+    strongest = max((p.amplitude * p.coherence for p in others), default=0.0)
+    dominance = lattice.strength / max(strongest, 1e-9)
+    mine = sum(p.amplitude**2 for p in peaks if any(_belongs(p, g, tolerance) for g in lattices))
+    share = mine / max(sum(p.amplitude**2 for p in peaks), 1e-9)
+    diagonal = any(
+        grid_distance(p.f, wrap(lattice.k1 + sign * lattice.k2)) < tolerance for p in peaks for sign in (1, -1)
+    )
+    exact = lattice.squareness_bins < 0.3
+    if on_axis(lattice.k1) and not exact:
+        return False
+    return dominance > 0.6 and (share > 0.35 or diagonal or exact)
+
+
+def on_axis(f: NDArray[np.float64], within_deg: float = 1.0) -> bool:
+    """Whether a frequency lies along a pixel axis."""
+    return bool(min(abs(f[0]), abs(f[1])) < math.tan(math.radians(within_deg)) * max(abs(f[0]), abs(f[1])))
+
+
+def _belongs(peak: Peak, lattice: Lattice, tolerance: float) -> bool:
+    return order_of(peak.f, lattice, tolerance, limit=4) is not None
+
+
+def order_of(
+    f: NDArray[np.float64], lattice: Lattice, tolerance: float, *, limit: int
+) -> tuple[int, int] | None:
+    """Integer order (m, n) of a line on a lattice, folded on the sampling grid, lowest first."""
+    for total in range(1, limit + 1):
+        for m in range(-total, total + 1):
+            for n in {total - abs(m), abs(m) - total}:
+                place = wrap(m * lattice.k1 + n * lattice.k2)
+                if grid_distance(f, place) < tolerance * (1 + total / 4):
+                    return (m, n)
+    return None
