@@ -4,25 +4,27 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass, replace
-from typing import Any, Literal
+from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
 
 import moire
 from moire.beats import rosette_parents
-from moire.folding import Unfolded, unfold
+from moire.folds import judge_fold
 from moire.grids import BLOCK_SCORE, BlockGrid, find_block_grid, sort_line
-from moire.lattice import Lattice, find_lattices
-from moire.model import Candidate, Examination, Finding, Ink, Kind, Line, Scan, Screen
-from moire.peaks import Peak, find_candidates, polish, refine
-from moire.screens import is_halftone, measure_screen, name_inks, on_axis, order_of
-from moire.spectrum import tile_means, tile_phasors, tile_spectrum
+from moire.lattice import Lattice, find_lattices, missing_partners
+from moire.measures import line_levels
+from moire.model import Examination, Finding, Ink, Kind, Line, Scan, Viewing
+from moire.peaks import Peak, find_candidates, measure_bins, polish, refine
+from moire.screens import is_halftone, name_inks, order_of
+from moire.spectrum import tile_spectrum
 from moire.verdict import judge
 from moire.vision import lightness, viewing_condition, visibility
+from moire.weaves import Threads, find_threads, measure_weave
 
 _TILES_AT_MOST = 1200
-_SETTLED = 0.9
+_CALLED_Z = 3.0
 
 
 def examine(scan: Scan, *, viewing: Literal["monitor", "print"] = "monitor") -> Examination:
@@ -109,6 +111,10 @@ class _Survey:
         pitch = max(size // 2, math.isqrt(area // _TILES_AT_MOST))
         spectrum = tile_spectrum(mixed, size=size, pitch=pitch)
         peaks = tuple(p for p in refine(channels, find_candidates(spectrum), size=size) if _credible(p))
+        # A partner too weak to stand out by itself counts where a coherent line calls for it.
+        called = measure_bins(spectrum, missing_partners(peaks, size=size, aspect=_aspect(scan)))
+        called = tuple(c for c in called if c.z > _CALLED_Z)
+        peaks += tuple(p for p in refine(channels, called, size=size) if _credible(p) and p.coherence > 0.9)
         peaks = polish(channels, peaks, size=min(size, 64))
         jpeg = scan.jpeg or blocks is not None
         lattices = find_lattices(peaks, size=size, aspect=_aspect(scan), jpeg=jpeg)
@@ -117,49 +123,80 @@ class _Survey:
             scan=scan, channels=channels, size=size, peaks=peaks, lattices=lattices, blocks=blocks
         )  # fmt: skip
 
-    def findings(self, condition: Any) -> tuple[Finding, ...]:
+    def findings(self, condition: Viewing) -> tuple[Finding, ...]:
         """Named findings, screens first, then what remains."""
         groups = self._group()
         used = [peak for group in groups for peak, _ in group.lines]
-        levels = _line_levels(self.channels, used, self.size)
+        levels = {}
+        if used:
+            amplitude, _, mean, _ = line_levels(
+                lightness(self.channels),
+                np.array([p.f for p in used]),
+                np.stack([p.weight for p in used]),
+                size=self.size,
+            )
+            levels = {id(p): (float(a), float(m)) for p, a, m in zip(used, amplitude, mean, strict=True)}
         out = []
         for group in groups:
             lines, worst = [], 0.0
             for peak, order in group.lines:
-                amplitude, mean = levels[id(peak)]
-                lines.append(_line(peak, order, amplitude))
+                swing, tone = levels[id(peak)]
+                lines.append(_line(peak, order, swing))
                 f = (float(peak.f[0]), float(peak.f[1]))
-                worst = max(worst, visibility(f, amplitude, mean, viewing=condition, ppi=self.scan.ppi))
+                worst = max(worst, visibility(f, swing, tone, viewing=condition, ppi=self.scan.ppi))
             out.append(replace(group.finding, lines=tuple(lines), visibility=worst))
         return tuple(out)
 
     def _group(self) -> list[_Group]:
-        groups = [self._screen_group(g, ink) for g, ink in zip(self.lattices, name_inks(self.lattices), strict=True)]
+        inks = name_inks(self.lattices)
+        groups = [self._screen_group(g, ink) for g, ink in zip(self.lattices, inks, strict=True)]
         taken = {id(p) for g in self.lattices for p in (g.first, g.second)}
         rest = []
-        tolerance = 0.15 / self.size
         for peak in self.peaks:
             if id(peak) in taken:
                 continue
             for group, lattice in zip(groups, self.lattices, strict=True):
-                order = order_of(peak.f, lattice, tolerance, limit=6)
+                order = order_of(peak.f, lattice, 0.15 / self.size, limit=6)
                 if order is not None:
                     group.lines.append((peak, order))
                     break
             else:
                 rest.append(peak)
-        leftovers: dict[Kind, _Group] = {}
+        threads = None if self.lattices else find_threads(tuple(rest), size=self.size)
+        if threads is not None:
+            groups.append(self._cloth_group(threads))
+            rest = [p for p in rest if not any(p is m for m in threads.members)]
+        merged: dict[tuple[Kind, tuple[int, ...]], _Group] = {}
         for peak in rest:
             found = self._leftover(peak, tuple(rest))
-            same = leftovers.get(found.finding.kind)
-            if same is None or found.finding.kind in ("rosette", "banding", "unexplained"):
-                groups.append(found)
-                leftovers.setdefault(found.finding.kind, found)
+            key = (found.finding.kind, found.finding.parents)
+            if key in merged and found.finding.kind != "banding":
+                merged[key].lines.extend(found.lines)
             else:
-                same.lines.append((peak, None))
-        if self.blocks is not None and "block-grid" not in leftovers:
+                merged[key] = found
+                groups.append(found)
+        if self.blocks is not None and all(g.finding.kind != "block-grid" for g in groups):
             groups.append(_block_group(self.blocks))
         return groups
+
+    def _cloth_group(self, threads: Threads) -> _Group:
+        coverage, regions = _extent(threads.warp.weight, threads.weft.weight, self.size)
+        ppi = self.scan.ppi
+        finding = Finding(
+            kind="weave",
+            confidence=round(float(min(threads.warp.local_coherence, threads.weft.local_coherence)), 3),
+            visibility=0.0,
+            coverage=coverage,
+            regions=regions,
+            lines=(),
+            period_px=float(1 / np.hypot(*threads.warp.f)),
+            period_mm=_period_mm(threads.warp.f, ppi),
+            weave=None if ppi is None else measure_weave(threads, ppi),
+            evidence=(f"thread lines near both axes, bound as in a {threads.pattern} weave",),
+        )
+        named: list[tuple[Peak, tuple[int, int] | None]] = [(threads.warp, (1, 0)), (threads.weft, (0, 1))]
+        rest = [(p, None) for p in threads.members if p is not threads.warp and p is not threads.weft]
+        return _Group(finding=finding, lines=named + rest)
 
     def _screen_group(self, lattice: Lattice, ink: Ink) -> _Group:
         coverage, regions = _extent(lattice.first.weight, lattice.second.weight, self.size)
@@ -173,17 +210,16 @@ class _Survey:
             evidence.append(f"absorbs red {r:.2f}, green {g:.2f}, blue {b:.2f}: {ink}")
         else:
             evidence.append("grey scan: the ink's colour was not recorded")
-        kind: Kind = "halftone"
-        settled, screen, candidates = True, None, ()
-        if ppi is not None:
-            options = unfold(lattice.k1, ppi, contrast=self._contrast(lattice))
-            if options:
-                kind, settled, screen, candidates, words = _decide(options, lattice, ppi, ink)
-                evidence.append(words)
-        else:
+        fold = None
+        if ppi is None:
             evidence.append("sampling rate unknown: ruling not given, folding not judged")
+        else:
+            fold = judge_fold(
+                lattice, self.channels, ppi, ink=ink, alone=len(self.lattices) == 1, size=self.size
+            )
+            evidence.append("no usual ruling fits" if fold is None else fold.words)
         finding = Finding(
-            kind=kind,
+            kind="halftone" if fold is None else fold.kind,
             confidence=round(float(1 - math.exp(-(min(lattice.first.z, lattice.second.z) - 4) / 2)), 3),
             visibility=0.0,
             coverage=coverage,
@@ -191,9 +227,9 @@ class _Survey:
             lines=(),
             period_px=float(1 / np.hypot(*lattice.k1)),
             period_mm=_period_mm(lattice.k1, ppi),
-            screen=screen,
-            candidates=candidates,
-            settled=settled,
+            screen=None if fold is None else fold.screen,
+            candidates=() if fold is None else fold.candidates,
+            settled=fold is not None and fold.settled,
             evidence=tuple(evidence),
         )
         first = replace(lattice.first, f=lattice.k1)
@@ -225,20 +261,6 @@ class _Survey:
         )
         return _Group(finding=finding, lines=[(peak, None)])
 
-    def _contrast(self, lattice: Lattice) -> float:
-        """Observed modulation over that of a screen of this tone without loss, strongest channel."""
-        channel = int(np.argmax(lattice.first.colour))
-        plane = _linear(self.channels[..., channel])[..., None]
-        phasors, _, _ = tile_phasors(plane, np.stack([lattice.k1, lattice.k2]), size=self.size)
-        tone = tile_means(plane, size=self.size)[..., 0]
-        white = float(np.percentile(plane, 99))
-        swing = np.abs(phasors[..., 0]).max(axis=0)
-        weight = np.minimum(lattice.first.weight, lattice.second.weight)
-        strong = weight >= max(0.5 * float(weight.max()), 1e-6)
-        share = np.clip(1 - tone[strong] / max(white, 1e-6), 0.05, 0.95)
-        expected = 2 * _disc_coefficient(share) * white
-        return float(np.median(swing[strong] / np.maximum(expected, 1e-6)))
-
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class _Group:
@@ -256,44 +278,6 @@ def _aspect(scan: Scan) -> tuple[float, float]:
         return (1.0, 1.0)
     mean = math.sqrt(scan.ppi[0] * scan.ppi[1])
     return (scan.ppi[0] / mean, scan.ppi[1] / mean)
-
-
-def _decide(
-    options: tuple[Unfolded, ...], lattice: Lattice, ppi: tuple[float, float], ink: Ink
-) -> tuple[Kind, bool, Screen, tuple[Candidate, ...], str]:
-    best = options[0]
-    rate = np.array(ppi)
-    aspect = rate / math.sqrt(ppi[0] * ppi[1])
-    k1 = np.array([best.fx_cpi, best.fy_cpi])
-    turned = np.array([k1[1], -k1[0]])
-    # The second vector's order is the one that brings it nearest to the first turned by 90 degrees.
-    order2 = np.rint(turned / rate - lattice.k2)
-    flipped = np.rint(turned / rate + lattice.k2)
-    near = np.abs(turned / rate - lattice.k2 - order2).sum()
-    k2 = (lattice.k2 + order2) * rate
-    if np.abs(turned / rate + lattice.k2 - flipped).sum() < near:
-        k2 = (flipped - lattice.k2) * rate
-    scale = float(math.sqrt(ppi[0] * ppi[1]) * aspect.max())
-    sigma = (float(lattice.first.sigma.max()) * scale, float(lattice.second.sigma.max()) * scale)
-    screen = measure_screen(k1, k2, sigma, ink=ink)
-    total = {"direct": sum(o.probability for o in options if o.order == (0, 0))}
-    listed = tuple(
-        Candidate(ruling_lpi=o.ruling_lpi, angle_deg=o.angle_deg, order=o.order, probability=o.probability)
-        for o in options[:5]
-        if o.probability > 0.005
-    )
-    edge = float(np.abs(np.abs(np.stack([lattice.k1, lattice.k2])) - 0.5).min())
-    if best.order == (0, 0) and best.probability >= _SETTLED and edge > 0.005:
-        words = f"not folded: probability {total['direct']:.3f} by ruling, angle and remaining contrast"
-        return "halftone", True, screen, listed, words
-    if best.order == (0, 0):
-        words = "close to half the sampling rate or of odd contrast: a fold cannot be ruled out"
-        return "halftone" if best.probability > 0.6 else "alias", False, screen, listed, words
-    words = (
-        f"folded: {best.ruling_lpi:.1f} lpi at {best.angle_deg:.1f} degrees by order {best.order} is the most "
-        f"probable source ({best.probability:.2f}); a second scan at another ppi settles it"
-    )
-    return "alias", False, screen, listed, words
 
 
 def _block_group(blocks: BlockGrid) -> _Group:
@@ -321,23 +305,6 @@ def _line(peak: Peak, order: tuple[int, int] | None, amplitude: float) -> Line:
     )
 
 
-def _line_levels(
-    channels: NDArray[np.float32], peaks: list[Peak], size: int
-) -> dict[int, tuple[float, float]]:
-    """L* amplitude and mean L* of each line where it is strong."""
-    if not peaks:
-        return {}
-    plane = lightness(channels)[..., None]
-    phasors, _, _ = tile_phasors(plane, np.array([p.f for p in peaks]), size=size)
-    tone = tile_means(plane, size=size)[..., 0]
-    out = {}
-    for peak, v in zip(peaks, phasors[..., 0], strict=True):
-        total = max(float(peak.weight.sum()), 1e-9)
-        amplitude = float((np.abs(v) * peak.weight).sum() / total)
-        out[id(peak)] = (amplitude, float((tone * peak.weight).sum() / total))
-    return out
-
-
 def _extent(
     a: NDArray[np.float32], b: NDArray[np.float32], size: int
 ) -> tuple[float, tuple[tuple[int, int, int, int], ...]]:
@@ -355,16 +322,3 @@ def _extent(
 
 def _period_mm(f: NDArray[np.float64], ppi: tuple[float, float] | None) -> float | None:
     return None if ppi is None else float(25.4 / np.hypot(f[0] * ppi[0], f[1] * ppi[1]))
-
-
-def _linear(codes: NDArray[np.float32]) -> NDArray[np.float32]:
-    encoded = codes / 255
-    return np.where(encoded <= 0.04045, encoded / 12.92, ((encoded + 0.055) / 1.055) ** 2.4).astype(np.float32)
-
-
-def _disc_coefficient(share: NDArray[np.floating]) -> NDArray[np.float64]:
-    """First Fourier coefficient of a Euclidean dot of a given area share (transform of a disc)."""
-    from scipy.special import j1
-
-    r = np.sqrt(np.minimum(share, 1 - share) / np.pi)
-    return np.asarray(r * j1(2 * np.pi * r))

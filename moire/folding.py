@@ -36,7 +36,9 @@ class Unfolded:
     probability: float
 
 
-def fold(frequency: NDArray[np.float64], ppi: tuple[float, float]) -> tuple[NDArray[np.float64], tuple[int, int]]:
+def fold(
+    frequency: NDArray[np.float64], ppi: tuple[float, float]
+) -> tuple[NDArray[np.float64], tuple[int, int]]:
     """Alias of a true frequency and its order.
 
     Parameters
@@ -63,7 +65,7 @@ def fold(frequency: NDArray[np.float64], ppi: tuple[float, float]) -> tuple[NDAr
 
 
 def unfold(
-    k_cpp: NDArray[np.float64], ppi: tuple[float, float], *, contrast: float | None = None
+    k_cpp: NDArray[np.float64], ppi: tuple[float, float], *, contrast: float | None = None, alone: bool = True
 ) -> tuple[Unfolded, ...]:
     """True screens that could have folded to an observed vector, most probable first.
 
@@ -76,6 +78,8 @@ def unfold(
     contrast : float or None
         Observed modulation (amplitude over mean, linear light, 0..1) over the one expected
         of a screen of that ink and tone without any loss; None if not measured.
+    alone : bool
+        Whether no other screen is there; otherwise other inks may explain a lower contrast.
 
     Returns
     -------
@@ -93,8 +97,7 @@ def unfold(
         score = _log_ruling(ruling) + _log_angle(angle) - 0.7 * (abs(order[0]) + abs(order[1]))
         if contrast is not None and contrast > 0:
             loss = np.log(contrast / _transfer_cpi(true, rate))
-            # Below the expected level other inks and mixed tones may explain it; above cannot be.
-            score -= 0.5 * (loss / (0.35 if loss > 0 else 0.9)) ** 2
+            score -= 0.5 * (loss / (0.4 if alone or loss > 0 else 0.9)) ** 2
         entry = Unfolded(
             fx_cpi=float(true[0]), fy_cpi=float(true[1]), ruling_lpi=ruling, angle_deg=angle,
             order=(order[0], order[1]), probability=0.0,
@@ -136,4 +139,6 @@ def _transfer_cpi(true: NDArray[np.float64], rate: NDArray[np.float64]) -> float
     f = true / rate
     ruling = float(np.hypot(*true))
     spread = np.exp(-2 * np.pi**2 * (0.020 / 25.4 * ruling) ** 2)
-    return max(float(abs(np.sinc(f[0]) * np.sinc(f[1])) * np.exp(-2 * np.pi**2 * 0.4**2 * (f @ f)) * spread), 0.003)
+    return max(
+        float(abs(np.sinc(f[0]) * np.sinc(f[1])) * np.exp(-2 * np.pi**2 * 0.4**2 * (f @ f)) * spread), 0.003
+    )

@@ -24,7 +24,7 @@ _FLOOR_SHARE_JPEG = 0.03
 Vector = NDArray[np.float64]
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Lattice:
     """A two-vector lattice as observed on the sampling grid.
 
@@ -108,6 +108,21 @@ def find_lattices(
     return tuple(sorted(accepted, key=lambda p: -p.strength))
 
 
+def missing_partners(
+    peaks: tuple[Peak, ...], *, size: int, aspect: tuple[float, float] = (1.0, 1.0)
+) -> tuple[tuple[int, int], ...]:
+    """Bins where the second line of a lattice is to be looked for beside a lone coherent one."""
+    out = []
+    for p in peaks:
+        if p.coherence < 0.95 or p.doubled:
+            continue
+        turned = wrap(quarter_turn(p.f, aspect))
+        if all(grid_distance(turned, q.f) > 0.5 / size for q in peaks):
+            k = np.rint(turned * size).astype(int)
+            out.append((int(k[0]), int(k[1])))
+    return tuple(out)
+
+
 def _pairs(peaks: tuple[Peak, ...], size: int, aspect: tuple[float, float]) -> list[Lattice]:
     found = []
     for a, b in combinations(range(len(peaks)), 2):
@@ -156,7 +171,9 @@ def _overlap(a: NDArray[np.float32], b: NDArray[np.float32]) -> float:
 
 def explained(pair: Lattice, generators: list[Lattice], *, size: int, jpeg: bool) -> bool:
     """Whether a lattice is a combination of others, by place and by strength."""
-    tau = _TAU_BINS / size
+    # A line whose phase wanders is two lines in one bin: its place is known less well.
+    wander = 1 - min(pair.first.coherence, pair.second.coherence)
+    tau = (_TAU_BINS + 0.8 * wander) / size
     strength = pair.strength / transfer(pair.k1)
     parents = [(g, g.strength / transfer(g.k1)) for g in generators]
     return any(
@@ -169,7 +186,9 @@ def explained(pair: Lattice, generators: list[Lattice], *, size: int, jpeg: bool
     )
 
 
-def _near(pair: Lattice, place: NDArray[np.float64], tolerance: NDArray[np.float64] | float) -> NDArray[np.bool_]:
+def _near(
+    pair: Lattice, place: NDArray[np.float64], tolerance: NDArray[np.float64] | float
+) -> NDArray[np.bool_]:
     gap = np.minimum(grid_distance(place, pair.k1), grid_distance(place, pair.k2))
     for peak, k in ((pair.first, pair.k1), (pair.second, pair.k2)):
         if peak.doubled:

@@ -30,7 +30,7 @@ Ink = Literal["cyan", "magenta", "yellow", "black", "unknown"]
 PpiSource = Literal["option", "file"]
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Scan:
     """One page of pixels with what is known about its capture.
 
@@ -260,7 +260,7 @@ class Measures:
     clipped_share: float
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Mending:
     """A derivative and the proof of what was done to make it."""
 

@@ -21,7 +21,7 @@ _TONE_FLOOR = 20.0
 _LOG_EXPONENTIAL_SD = 1.283
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Peak:
     """One coherent spectral line.
 
@@ -84,7 +84,7 @@ def find_candidates(spectrum: Spectrum, *, limit: int = 60) -> tuple[Candidate, 
     if spectrum.tiles < 2:
         return ()
     best: dict[tuple[int, int], Candidate] = {}
-    for plane, top in ((spectrum.mean, False), (spectrum.top, True)):
+    for plane, top in _planes(spectrum):
         for found in _plane_candidates(plane, spectrum, top=top):
             key = (found.kx, found.ky)
             if key not in best or found.z > best[key].z:
@@ -108,6 +108,24 @@ def _bin_distance(a: Candidate, b: Candidate, n: int) -> float:
     return min(gap(1), gap(-1))
 
 
+def measure_bins(spectrum: Spectrum, bins: tuple[tuple[int, int], ...]) -> tuple[Candidate, ...]:
+    """Candidates at given bins ``(kx, ky)``, whatever their level."""
+    if not bins or spectrum.tiles < 2:
+        return ()
+    kx, ky = np.array(bins).T
+    levels = [_levels(plane, spectrum, ky, kx, top=top) for plane, top in _planes(spectrum)]
+    z = np.max([level[0] for level in levels], axis=0)
+    excess = np.max([level[1] for level in levels], axis=0)
+    return tuple(
+        Candidate(kx=int(x), ky=int(y), z=float(zz), excess_nat=float(e))
+        for x, y, zz, e in zip(kx, ky, z, excess, strict=True)
+    )
+
+
+def _planes(spectrum: Spectrum) -> tuple[tuple[NDArray[np.float32], bool], ...]:
+    return (spectrum.mean, False), (spectrum.top, True)
+
+
 def _plane_candidates(plane: NDArray[np.float32], spectrum: Spectrum, *, top: bool) -> list[Candidate]:
     from scipy import ndimage
 
@@ -120,16 +138,7 @@ def _plane_candidates(plane: NDArray[np.float32], spectrum: Spectrum, *, top: bo
     spread = 1.4826 * np.median(np.abs(raised - np.median(raised)))
     maxima &= raised > 2.5 * spread
     ys, xs = np.nonzero(maxima)
-    # The noise of the statistic is taken at random places, away from the origin.
-    rng = np.random.default_rng(0)
-    far = np.argwhere(np.hypot(kx, ky) > n / 16)
-    sample = far[rng.choice(len(far), min(1500, len(far)), replace=False)]
-    reference = plane[sample[:, 0], sample[:, 1]] - _background(plane, sample[:, 0], sample[:, 1])
-    centre = float(np.median(reference))
-    mad = 1.4826 * float(np.median(np.abs(reference - centre)))
-    sd = mad if top else max(mad, _LOG_EXPONENTIAL_SD * np.sqrt(1.1 / spectrum.tiles))
-    excess = plane[ys, xs] - _background(plane, ys, xs)
-    z = (excess - centre) / max(sd, 1e-6)
+    z, excess = _levels(plane, spectrum, ys, xs, top=top)
     keep = (z > Z_THRESHOLD) & (excess > _EXCESS_NAT)
     return [
         Candidate(kx=int(kx[y, x]), ky=int(ky[y, x]), z=float(zz), excess_nat=float(e))
@@ -137,7 +146,27 @@ def _plane_candidates(plane: NDArray[np.float32], spectrum: Spectrum, *, top: bo
     ]
 
 
-def _background(plane: NDArray[np.float32], ys: NDArray[np.int64], xs: NDArray[np.int64]) -> NDArray[np.float32]:
+def _levels(
+    plane: NDArray[np.float32], spectrum: Spectrum, ys: NDArray[np.int64], xs: NDArray[np.int64], *, top: bool
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Robust z and excess over the background of given bins."""
+    n = spectrum.size
+    # The noise of the statistic is taken at random places, away from the origin.
+    rng = np.random.default_rng(0)
+    radius = np.hypot(np.fft.fftfreq(n, 1 / n)[:, None], np.fft.fftfreq(n, 1 / n)[None, :])
+    far = np.argwhere(radius > n / 16)
+    sample = far[rng.choice(len(far), min(1500, len(far)), replace=False)]
+    reference = plane[sample[:, 0], sample[:, 1]] - _background(plane, sample[:, 0], sample[:, 1])
+    centre = float(np.median(reference))
+    mad = 1.4826 * float(np.median(np.abs(reference - centre)))
+    sd = mad if top else max(mad, _LOG_EXPONENTIAL_SD * np.sqrt(1.1 / spectrum.tiles))
+    excess = plane[ys % n, xs % n] - _background(plane, ys, xs)
+    return (excess - centre) / max(sd, 1e-6), excess
+
+
+def _background(
+    plane: NDArray[np.float32], ys: NDArray[np.int64], xs: NDArray[np.int64]
+) -> NDArray[np.float32]:
     """Largest over 12 directions of the lower of two means, 3 to 6 bins out on either side.
 
     A streak is high on both sides in its own direction and cancels itself; a neighbouring
@@ -257,7 +286,9 @@ def _local_coherence(v: NDArray[np.complex128]) -> float:
     """Agreement of the phase steps between tiles one size (two hops) apart, 0..1."""
     pairs = [v[2:] * np.conj(v[:-2])] if v.shape[0] > 2 else []
     across = [v[:, 2:] * np.conj(v[:, :-2])] if v.shape[1] > 2 else []
-    total = [float(np.abs(p.sum() / max(np.abs(p).sum(), 1e-12))) for p in pairs + across if np.abs(p).sum() > 0]
+    total = [
+        float(np.abs(p.sum() / max(np.abs(p).sum(), 1e-12))) for p in pairs + across if np.abs(p).sum() > 0
+    ]
     return float(np.mean(total)) if total else 0.0
 
 

@@ -34,7 +34,7 @@ PAPER: tuple[float, float, float] = (0.86, 0.85, 0.80)
 _CELL = 256
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class InkLayer:
     """Ink amounts of one separation and the screen that prints it.
 
@@ -60,7 +60,7 @@ class InkLayer:
     phase: tuple[float, float] = (0.0, 0.0)
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Print:
     """A printed sheet; ``screened=False`` lays the same ink amounts without a screen."""
 
@@ -119,7 +119,9 @@ def _lay_ink(sheet: Print, layer: InkLayer, window: tuple[int, int, int, int]) -
     return (wanted > _threshold_table(layer.spot).ravel()[v * _CELL + u]).astype(np.float32)
 
 
-def _cell_index(along_columns: NDArray[np.float64], along_rows: NDArray[np.float64], shift: float) -> NDArray[np.int32]:
+def _cell_index(
+    along_columns: NDArray[np.float64], along_rows: NDArray[np.float64], shift: float
+) -> NDArray[np.int32]:
     cycles = np.mod(along_columns, 1.0)[None, :] + np.mod(along_rows + shift, 1.0)[:, None]
     return (cycles * _CELL).astype(np.int32) % _CELL
 

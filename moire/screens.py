@@ -41,9 +41,7 @@ def name_inks(lattices: tuple[Lattice, ...]) -> tuple[Ink, ...]:
     for row, column in zip(rows, columns, strict=True):
         if likeness[row, column] > likeness[row].max() - 0.15:
             names[row] = inks[column]
-    return tuple(
-        name if likeness[row].max() > 0.85 else "unknown" for row, name in enumerate(names)
-    )
+    return tuple(name if likeness[row].max() > 0.85 else "unknown" for row, name in enumerate(names))
 
 
 def _colour(lattice: Lattice) -> NDArray[np.float64]:
@@ -109,7 +107,9 @@ def is_halftone(lattice: Lattice, lattices: tuple[Lattice, ...], peaks: tuple[Pe
     mine = sum(p.amplitude**2 for p in peaks if any(_belongs(p, g, tolerance) for g in lattices))
     share = mine / max(sum(p.amplitude**2 for p in peaks), 1e-9)
     diagonal = any(
-        grid_distance(p.f, wrap(lattice.k1 + sign * lattice.k2)) < tolerance for p in peaks for sign in (1, -1)
+        grid_distance(p.f, wrap(lattice.k1 + sign * lattice.k2)) < tolerance
+        for p in peaks
+        for sign in (1, -1)
     )
     exact = lattice.squareness_bins < 0.3
     if on_axis(lattice.k1) and not exact:

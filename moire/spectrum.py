@@ -16,7 +16,7 @@ _BLANK_POWER = 0.005
 _FLOOR = 0.03
 
 
-@dataclass(frozen=True, slots=True, kw_only=True)
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Spectrum:
     """Log power over tiles on the full frequency plane, bin (0, 0) first, periodic.
 

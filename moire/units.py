@@ -28,7 +28,7 @@ def fold_angle(angle_deg: float, period_deg: float) -> float:
     folded = math.fmod(angle_deg, period_deg)
     if folded < 0:
         folded += period_deg
-    return 0.0 if folded >= period_deg else folded
+    return 0.0 if folded >= period_deg else folded + 0.0
 
 
 def angle_distance(a_deg: float, b_deg: float, period_deg: float) -> float:

@@ -1,0 +1,46 @@
+"""``moire examine``: find and explain every periodic pattern in one scan."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import click
+
+from moire.cli.options import VERDICTS, shared
+
+
+@click.command("examine")
+@click.argument("scan", type=click.Path())
+@shared("ppi", "viewing", "page")
+@click.option(
+    "--fail-on", type=click.Choice(VERDICTS), multiple=True, help="Exit with code 10 on this verdict."
+)
+@shared("report", "force", "json", "quiet")
+def command(scan: str, **flags: Any) -> int:
+    """Find and explain every periodic pattern in SCAN.
+
+    \b
+    Example:
+      moire examine postcard.tif --ppi 600
+      moire examine page.png --json --fail-on rescan > page.json
+    """
+    from moire.cli.console import console, print_json, show_examination
+    from moire.cli.main import EXIT_VERDICT
+    from moire.examine import examine
+    from moire.scanfile import read
+
+    out = console(as_json=flags["as_json"], quiet=flags["quiet"])
+    master = read(scan, ppi=flags["ppi"], page=flags["page"])
+    found = examine(master, viewing=flags["viewing"])
+    if flags["report"]:
+        from moire.cli.reporting import save_report
+
+        save_report(
+            flags["report"], master=master, before=found, mending=None, inputs=(scan,), force=flags["force"]
+        )
+    show_examination(out, found)
+    if flags["report"]:
+        out.print(f"Report: {flags['report']}")
+    if flags["as_json"]:
+        print_json(found)
+    return EXIT_VERDICT if found.verdict in flags["fail_on"] else 0

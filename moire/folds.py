@@ -1,0 +1,100 @@
+"""Whether a lattice is seen where it is printed, or folded there by the sampling grid."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from moire.folding import Unfolded, unfold
+from moire.lattice import Lattice
+from moire.model import Candidate, Ink, Kind, Screen
+from moire.scanner import srgb_decode
+from moire.screens import measure_screen
+from moire.spectrum import tile_means, tile_phasors
+
+_SETTLED = 0.9
+_EDGE_CPP = 0.005
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Fold:
+    """What one scan says about a lattice's true frequency."""
+
+    kind: Kind
+    settled: bool
+    screen: Screen
+    candidates: tuple[Candidate, ...]
+    words: str
+
+
+def judge_fold(
+    lattice: Lattice,
+    channels: NDArray[np.float32],
+    ppi: tuple[float, float],
+    *,
+    ink: Ink,
+    alone: bool,
+    size: int,
+) -> Fold | None:
+    """Weigh the true screens that could be seen as this lattice; None if none is a usual print."""
+    options = unfold(lattice.k1, ppi, contrast=_contrast(lattice, channels, size), alone=alone)
+    if not options:
+        return None
+    best = options[0]
+    screen = _screen(best, lattice, ppi, ink)
+    listed = tuple(
+        Candidate(ruling_lpi=o.ruling_lpi, angle_deg=o.angle_deg, order=o.order, probability=o.probability)
+        for o in options[:5]
+        if o.probability > 0.005
+    )
+    direct = sum(o.probability for o in options if o.order == (0, 0))
+    edge = float(np.abs(np.abs(np.stack([lattice.k1, lattice.k2])) - 0.5).min())
+    if best.order == (0, 0) and direct >= _SETTLED and edge > _EDGE_CPP:
+        words = f"not folded: probability {direct:.3f} by ruling, angle and remaining contrast"
+        return Fold(kind="halftone", settled=True, screen=screen, candidates=listed, words=words)
+    if best.order == (0, 0):
+        kind: Kind = "halftone" if direct > 0.6 else "alias"
+        words = f"probably not folded ({direct:.2f}), but one scan cannot rule a fold out"
+        return Fold(kind=kind, settled=False, screen=screen, candidates=listed, words=words)
+    words = (
+        f"folded: {best.ruling_lpi:.1f} lpi at {best.angle_deg:.1f} degrees by order {best.order} is the most "
+        f"probable source ({best.probability:.2f}); a second scan at another ppi settles it"
+    )
+    return Fold(kind="alias", settled=False, screen=screen, candidates=listed, words=words)
+
+
+def _screen(best: Unfolded, lattice: Lattice, ppi: tuple[float, float], ink: Ink) -> Screen:
+    rate = np.array(ppi)
+    k1 = np.array([best.fx_cpi, best.fy_cpi])
+    turned = np.array([k1[1], -k1[0]]) / rate
+    # The second vector's order is the one that brings it nearest to the first turned by 90 degrees.
+    options = [sign * lattice.k2 + np.rint(turned - sign * lattice.k2) for sign in (1, -1)]
+    k2 = min(options, key=lambda k: float(np.abs(k - turned).sum()))
+    sigma = [float(np.max(peak.sigma * rate)) for peak in (lattice.first, lattice.second)]
+    return measure_screen(k1, k2 * rate, (sigma[0], sigma[1]), ink=ink)
+
+
+def _contrast(lattice: Lattice, channels: NDArray[np.float32], size: int) -> float:
+    """Observed modulation over that of a screen of this tone without loss, strongest channel."""
+    channel = int(np.argmax(lattice.first.colour))
+    plane = srgb_decode(channels[..., channel] / 255).astype(np.float32)[..., None]
+    phasors, _, _ = tile_phasors(plane, np.stack([lattice.k1, lattice.k2]), size=size)
+    tone = tile_means(plane, size=size)[..., 0]
+    white = float(np.percentile(plane, 99))
+    swing = np.abs(phasors[..., 0]).max(axis=0)
+    weight = np.minimum(lattice.first.weight, lattice.second.weight)
+    strong = weight >= max(0.5 * float(weight.max()), 1e-6)
+    share = np.clip(1 - tone[strong] / max(white, 1e-6), 0.05, 0.95)
+    expected = 2 * _disc_coefficient(share) * white
+    return float(np.median(swing[strong] / np.maximum(expected, 1e-6)))
+
+
+def _disc_coefficient(share: NDArray[np.floating]) -> NDArray[np.float64]:
+    """First Fourier coefficient r J1(2 pi r) of a Euclidean dot of a given area share."""
+    from scipy.special import j1
+
+    r = np.sqrt(np.minimum(share, 1 - share) / math.pi)
+    return np.asarray(r * j1(2 * np.pi * r))

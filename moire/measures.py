@@ -1,0 +1,162 @@
+"""What a mending removed and what it kept, measured on the scan alone."""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from moire.spectrum import tile_means, tile_phasors
+
+_EDGES = 300
+
+
+def line_levels(
+    plane: NDArray[np.float32],
+    frequencies: NDArray[np.float64],
+    weights: NDArray[np.float32] | None,
+    *,
+    size: int,
+) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64], NDArray[np.float32]]:
+    """Amplitude of lines where they are strong, and of their surroundings in frequency.
+
+    Parameters
+    ----------
+    plane : ndarray, shape (rows, columns)
+        Lightness L*.
+    frequencies : ndarray, shape (n, 2)
+        Cycles per pixel.
+    weights : ndarray, shape (n, tile rows, tile columns), or None
+        Where each line counts; from the plane itself if None.
+    size : int
+        Tile side.
+
+    Returns
+    -------
+    amplitude, background, mean_lightness : ndarray, shape (n,)
+        L* units; background is the rms of eight neighbours 4 bins away.
+    weights : ndarray
+        The weights used.
+    """
+    image = plane[..., None]
+    v = np.abs(tile_phasors(image, frequencies, size=size)[0][..., 0])
+    if weights is None:
+        strong = np.quantile(v, 0.95, axis=(1, 2), keepdims=True)
+        weights = np.clip((v / np.maximum(strong, 1e-9) - 0.15) / 0.35, 0, 1).astype(np.float32)
+    total = np.maximum(weights.sum(axis=(1, 2)), 1e-9)
+    amplitude = (v * weights).sum(axis=(1, 2)) / total
+    ring = 4 / size * np.array([(np.cos(a), np.sin(a)) for a in np.pi * np.arange(8) / 4])
+    around = np.zeros(len(frequencies))
+    for offset in ring:
+        side = np.abs(tile_phasors(image, frequencies + offset, size=size)[0][..., 0])
+        around += (side**2 * weights).sum(axis=(1, 2)) / total
+    tone = tile_means(image, size=size)[..., 0]
+    mean = (tone[None] * weights).sum(axis=(1, 2)) / total
+    return amplitude, np.sqrt(around / 8), mean, weights
+
+
+def edge_detail(
+    before: NDArray[np.float32], after: NDArray[np.float32], *, period_px: float
+) -> tuple[float | None, float | None, float | None]:
+    """Gradient energy kept on edges, and the 10-90 % width of the strongest edges.
+
+    Both pictures are averaged along each edge over more than one period of the pattern,
+    which leaves the edge and takes the pattern away.
+
+    Parameters
+    ----------
+    before, after : ndarray, shape (rows, columns)
+        Lightness L*.
+    period_px : float
+        Period of the coarsest removed pattern.
+
+    Returns
+    -------
+    ratio, width_before_px, width_after_px : float or None
+        None where the picture has no strong edge.
+    """
+    profiles = _edge_profiles(before, after, period_px)
+    if profiles is None:
+        return None, None, None
+    one, two = profiles
+    energy = [float((np.diff(p, axis=1) ** 2).sum()) for p in (one, two)]
+    widths = [float(np.median([_rise_width(row) for row in p])) for p in (one, two)]
+    return energy[1] / max(energy[0], 1e-9), widths[0], widths[1]
+
+
+def _edge_profiles(
+    before: NDArray[np.float32], after: NDArray[np.float32], period: float
+) -> tuple[NDArray[np.float32], NDArray[np.float32]] | None:
+    import cv2
+
+    smooth = cv2.GaussianBlur(after, (0, 0), max(1.0, period / 2))
+    gx, gy = (
+        cv2.Sobel(smooth, cv2.CV_32F, 1, 0, scale=0.125),
+        cv2.Sobel(smooth, cv2.CV_32F, 0, 1, scale=0.125),
+    )
+    steep = np.hypot(gx, gy)
+    across, along = int(np.ceil(2 * period)) + 4, int(np.ceil(3 * period)) + 2
+    border = across + along
+    rows, columns = steep.shape
+    if min(rows, columns) <= 2 * border + 3:
+        return None
+    peak = (steep >= cv2.dilate(steep, np.ones((5, 5)))) & (steep > 1.0)
+    peak[:border] = peak[-border:] = False
+    peak[:, :border] = peak[:, -border:] = False
+    ys, xs = np.nonzero(peak)
+    if len(ys) < 8:
+        return None
+    strongest = np.argsort(-steep[ys, xs])[:_EDGES]
+    ys, xs = ys[strongest], xs[strongest]
+    nx, ny = gx[ys, xs] / steep[ys, xs], gy[ys, xs] / steep[ys, xs]
+    u = np.arange(-4 * across, 4 * across + 1) / 4
+    v = np.arange(-2 * along, 2 * along + 1) / 2
+    at_x = xs[:, None, None] + nx[:, None, None] * u[None, None, :] - ny[:, None, None] * v[None, :, None]
+    at_y = ys[:, None, None] + ny[:, None, None] * u[None, None, :] + nx[:, None, None] * v[None, :, None]
+    taper = np.cos(np.pi * v / (2 * along + 2)).astype(np.float32) ** 2
+    taper /= taper.sum()
+
+    def profile(plane: NDArray[np.float32]) -> NDArray[np.float32]:
+        flat_x = at_x.reshape(len(xs), -1).astype(np.float32)
+        flat_y = at_y.reshape(len(xs), -1).astype(np.float32)
+        patch = cv2.remap(plane, flat_x, flat_y, cv2.INTER_LINEAR).reshape(at_x.shape)
+        return np.asarray((patch * taper[None, :, None]).sum(axis=1))
+
+    return profile(before), profile(after)
+
+
+def _rise_width(row: NDArray[np.float32]) -> float:
+    """10-90 % width of a rising profile sampled at quarter pixels."""
+    centre = len(row) // 2
+    rise = np.maximum.accumulate(row)
+    low, high = float(rise[: centre // 2].mean()), float(rise[-(centre // 2) :].mean())
+    if high - low < 1e-3:
+        return 0.0
+    unit = (rise - low) / (high - low)
+    start, end = int(np.searchsorted(unit, 0.1)), int(np.searchsorted(unit, 0.9))
+    return max(end - start, 1) / 4
+
+
+def colour_shift(
+    before: NDArray[np.float32], after: NDArray[np.float32], *, sigma_px: float
+) -> tuple[float, float]:
+    """Mean and largest CIEDE2000 difference of low-passed sRGB pictures, 0..1, same shape.
+
+    Averages are taken in linear light, where ink and paper mix truly.
+    """
+    import cv2
+    from skimage.color import deltaE_ciede2000, xyz2lab
+
+    from moire.scanner import srgb_decode
+
+    to_xyz = np.array(
+        [[0.4124, 0.3576, 0.1805], [0.2126, 0.7152, 0.0722], [0.0193, 0.1192, 0.9505]], np.float32
+    )
+
+    def lab(picture: NDArray[np.float32]) -> NDArray[np.float64]:
+        rgb = picture if picture.shape[2] == 3 else np.repeat(picture, 3, axis=2)
+        linear = cv2.GaussianBlur(srgb_decode(rgb).astype(np.float32), (0, 0), sigma_px)
+        step = max(1, int(sigma_px))
+        return np.asarray(xyz2lab(linear[step // 2 :: step, step // 2 :: step] @ to_xyz.T))
+
+    shift = deltaE_ciede2000(lab(before), lab(after))
+    return float(shift.mean()), float(shift.max())

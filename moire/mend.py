@@ -1,0 +1,235 @@
+"""The one path from a scan and its examination to a derivative and its proof."""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Callable, Collection
+from dataclasses import replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from moire.descreen import ScreenLattice, apply, margin_px, prepare
+from moire.examine import examine, rgb_codes, tile_size
+from moire.measures import colour_shift, edge_detail, line_levels
+from moire.model import Examination, Finding, Kind, LineRemoved, Measures, Mending, Recipe, Scan
+from moire.notch import remove_lines
+from moire.recipe import MENDED_UNASKED, check_fits, prescribe
+from moire.resample import reduce_picture
+from moire.tiles import map_tiles
+from moire.vision import lightness
+
+_TILE_PX = 1024
+_PLACES = 4
+_PLACE_PX = 96
+
+
+def mend(
+    scan: Scan,
+    examination: Examination | None = None,
+    *,
+    only: Collection[Kind] = (),
+    keep: Collection[Kind] = (),
+    strength: float = 1.0,
+    quick: bool = False,
+    to_ppi: float | None = None,
+    recipe: Recipe | None = None,
+    progress: Callable[[float], None] = lambda _: None,
+) -> Mending:
+    """Remove what is artifact from a copy of a scan, and measure what that did.
+
+    Parameters
+    ----------
+    scan : Scan
+        The master; never changed.
+    examination : Examination or None
+        Its examination; made here if None.
+    only, keep, strength, quick, to_ppi
+        See `moire.recipe.prescribe`.
+    recipe : Recipe or None
+        A saved remedy to repeat instead; the choices above are then the recipe's own.
+    progress : callable
+        Told the share done, 0..1.
+
+    Returns
+    -------
+    Mending
+        The derivative, examinations before and after, recipe and measures.
+
+    Raises
+    ------
+    BadRequest, RecipeMismatch
+    """
+    before = examine(scan) if examination is None else examination
+    if recipe is None:
+        recipe = prescribe(before, only=only, keep=keep, strength=strength, quick=quick, to_ppi=to_ppi)
+    else:
+        check_fits(recipe, scan)
+    master = _encoded(scan)
+    mended = _remove(master, recipe, progress)
+    full_size = _as_scan(mended, scan, master)
+    after = examine(full_size, viewing=before.viewing.condition)
+    measures, places = _measure(scan, full_size, before, recipe)
+    derivative = full_size
+    if recipe.to_ppi is not None and scan.ppi is not None:
+        derivative = _reduced(mended, scan, recipe.to_ppi)
+    return Mending(
+        scan=derivative, before=before, after=after, recipe=recipe, measures=measures, worst_places=places
+    )
+
+
+def _encoded(scan: Scan) -> NDArray[np.float32]:
+    """Pixels 0..1, light rising, shape (rows, columns, channels)."""
+    values = scan.pixels.astype(np.float32) / np.float32(scan.full_scale)
+    values = values[..., None] if values.ndim == 2 else values
+    return 1 - values if scan.mode == "cmyk" else values
+
+
+def _remove(
+    master: NDArray[np.float32], recipe: Recipe, progress: Callable[[float], None]
+) -> NDArray[np.float32]:
+    lattices = tuple(
+        ScreenLattice(k1=np.array(r.vectors_cpp[0]), k2=np.array(r.vectors_cpp[1]))
+        for r in recipe.removals
+        if r.method == "descreen"
+    )
+    # Beats of two screens go with the screens; a notch would only cut the picture around them.
+    lines = [
+        v
+        for r in recipe.removals
+        if r.method == "notch" and not (lattices and r.kind == "rosette")
+        for v in r.vectors_cpp
+    ]
+    mended = remove_lines(master, lines)
+    if lattices:
+        # Plates of a CMYK file are one ink each; three channels are one colour picture.
+        groups = [slice(0, 3)] if master.shape[2] == 3 else [slice(c, c + 1) for c in range(master.shape[2])]
+        for group in groups:
+            part = mended[..., group]
+            ready = prepare(part, lattices)
+            mended[..., group] = map_tiles(
+                part,
+                lambda tile, origin, ready=ready: apply(tile, ready, origin=origin, quick=recipe.quick),  # type: ignore[misc]
+                size=_TILE_PX,
+                margin=margin_px(lattices),
+                progress=progress,
+            )
+    return master + np.float32(recipe.strength) * (mended - master)
+
+
+def _as_scan(mended: NDArray[np.float32], scan: Scan, master: NDArray[np.float32]) -> Scan:
+    values = 1 - mended if scan.mode == "cmyk" else mended
+    pixels = np.clip(np.rint(values * scan.full_scale), 0, scan.full_scale).astype(scan.pixels.dtype)
+    pixels = pixels.reshape(scan.pixels.shape)
+    # A pixel that moved by less than half a code value is the master's own.
+    still = (np.abs(mended - master) * scan.full_scale < 0.5).reshape(scan.pixels.shape)
+    pixels = np.where(still, scan.pixels, pixels)
+    pixels.setflags(write=False)
+    depth = 8 if scan.bit_depth == 1 else scan.bit_depth
+    digest = hashlib.sha256(np.ascontiguousarray(pixels)).hexdigest()
+    return replace(scan, pixels=pixels, bit_depth=depth, sha256=digest, jpeg=False)
+
+
+def _reduced(mended: NDArray[np.float32], scan: Scan, to_ppi: float) -> Scan:
+    assert scan.ppi is not None
+    width = max(1, round(scan.width_px * to_ppi / scan.ppi[0]))
+    height = max(1, round(scan.height_px * to_ppi / scan.ppi[1]))
+    small = reduce_picture(np.clip(mended, 0, 1), width, height)
+    shape = (height, width) if scan.pixels.ndim == 2 else (height, width, scan.pixels.shape[2])
+    blank = replace(scan, pixels=np.zeros(shape, scan.pixels.dtype))
+    out = _as_scan(small, blank, np.full_like(small, 2.0))
+    alpha = None
+    if scan.alpha is not None:
+        plane = reduce_picture(scan.alpha[..., None].astype(np.float32) / scan.full_scale, width, height)
+        alpha = np.rint(plane[..., 0] * scan.full_scale).astype(scan.alpha.dtype)
+    rate = (to_ppi, to_ppi)
+    return replace(out, ppi=rate, ppi_in_file=rate, alpha=alpha)
+
+
+def _measure(
+    scan: Scan, mended: Scan, before: Examination, recipe: Recipe
+) -> tuple[Measures, tuple[tuple[int, int], ...]]:
+    from moire.vision import visibility
+
+    removed = [f for f in before.findings if f.lines and f.kind in {r.kind for r in recipe.removals}]
+    one, two = rgb_codes(scan), rgb_codes(mended)
+    l_one, l_two = lightness(one), lightness(two)
+    lines: list[LineRemoved] = []
+    seen = [0.0, 0.0]
+    size = tile_size(scan)
+    if removed and size:
+        all_lines = [(f.kind, line) for f in removed for line in f.lines]
+        at = np.array([(line.fx_cpp, line.fy_cpp) for _, line in all_lines])
+        a0, floor, mean, weights = line_levels(l_one, at, None, size=size)
+        a1, _, _, _ = line_levels(l_two, at, weights, size=size)
+        for (kind, line), x, y, b, m in zip(all_lines, a0, a1, floor, mean, strict=True):
+            before_db, after_db = (20 * np.log10(max(v, 1e-4) / max(b, 1e-4)) for v in (x, y))
+            lines.append(
+                LineRemoved(
+                    fx_cpp=line.fx_cpp,
+                    fy_cpp=line.fy_cpp,
+                    kind=kind,
+                    before_db=float(before_db),
+                    after_db=float(after_db),
+                    removed_db=float(before_db - after_db),
+                )
+            )
+            f = (line.fx_cpp, line.fy_cpp)
+            for i, swing in enumerate((x, y)):
+                seen[i] = max(
+                    seen[i], visibility(f, float(swing), float(m), viewing=before.viewing, ppi=scan.ppi)
+                )
+    period = max((f.period_px for f in removed), default=2.0)
+    ratio, width_before, width_after = edge_detail(l_one, l_two, period_px=period)
+    mean_shift, max_shift = colour_shift(one / 255, two / 255, sigma_px=max(2.0, 2 * period))
+    changed = np.abs(scan.pixels.astype(np.int32) - mended.pixels.astype(np.int32))
+    changed = changed.max(axis=2) if changed.ndim == 3 else changed
+    outside = ~_inside(scan, removed)
+    limit = np.isin(mended.pixels, (0, scan.full_scale)) & ~np.isin(scan.pixels, (0, scan.full_scale))
+    measures = Measures(
+        lines=tuple(lines),
+        visibility_before=seen[0],
+        visibility_after=seen[1],
+        edge_energy_ratio=ratio,
+        edge_width_before_px=width_before,
+        edge_width_after_px=width_after,
+        colour_shift_mean=mean_shift,
+        colour_shift_max=max_shift,
+        untouched_share=float((changed[outside] < max(1, scan.full_scale // 255)).mean())
+        if outside.any()
+        else 1.0,
+        untouched_area=float(outside.mean()),
+        clipped_share=float(limit.mean()),
+    )
+    return measures, _worst_places(np.abs(l_one - l_two))
+
+
+def _inside(scan: Scan, findings: list[Finding]) -> NDArray[np.bool_]:
+    mask = np.zeros((scan.height_px, scan.width_px), bool)
+    for finding in findings:
+        if finding.kind not in MENDED_UNASKED:
+            continue
+        for x, y, w, h in finding.regions:
+            mask[y : y + h, x : x + w] = True
+    return mask
+
+
+def _worst_places(change: NDArray[np.float32]) -> tuple[tuple[int, int], ...]:
+    """Centres of the blocks that changed most, apart from each other."""
+    import cv2
+
+    rows, columns = change.shape
+    if not change.any():
+        return ()
+    energy = cv2.blur(change, (_PLACE_PX, _PLACE_PX))
+    half = _PLACE_PX // 2
+    out: list[tuple[int, int]] = []
+    for _ in range(_PLACES):
+        y, x = np.unravel_index(int(energy.argmax()), energy.shape)
+        if energy[y, x] <= 0:
+            break
+        cx = int(np.clip(x, min(half, columns // 2), max(columns - half, columns // 2)))
+        cy = int(np.clip(y, min(half, rows // 2), max(rows - half, rows // 2)))
+        out.append((cx, cy))
+        energy[max(0, y - 2 * half) : y + 2 * half, max(0, x - 2 * half) : x + 2 * half] = 0
+    return tuple(out)

@@ -1,0 +1,131 @@
+"""Recipes: what a remedy takes out, as a record that can be saved and repeated."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Collection
+
+import msgspec
+
+import moire
+from moire.errors import BadRequest, RecipeMismatch
+from moire.model import Examination, Finding, Kind, Recipe, Removal, Scan
+
+# Kinds that a filter takes out unasked. Content, an honest weave and paper's own lines stay.
+MENDED_UNASKED: frozenset[Kind] = frozenset({"halftone", "alias", "rosette", "banding", "display-grid"})
+_SCREENS: frozenset[Kind] = frozenset({"halftone", "alias"})
+
+
+def prescribe(
+    examination: Examination,
+    *,
+    only: Collection[Kind] = (),
+    keep: Collection[Kind] = (),
+    strength: float = 1.0,
+    quick: bool = False,
+    to_ppi: float | None = None,
+) -> Recipe:
+    """Recipe that removes what an examination found.
+
+    Parameters
+    ----------
+    examination : Examination
+    only : collection of str
+        Kinds to remove, and no other; empty for all artifacts.
+    keep : collection of str
+        Kinds to leave.
+    strength : float
+        Share of the correction applied, 0..1.
+    quick : bool
+        Lattice null only.
+    to_ppi : float or None
+        Sampling rate of the derivative.
+
+    Raises
+    ------
+    BadRequest
+        If the strength is out of range or the rate has no meaning.
+    """
+    if not 0 <= strength <= 1:
+        raise BadRequest(f"strength is {strength:g}: give a share between 0 and 1")
+    if to_ppi is not None and examination.ppi is None:
+        raise BadRequest("the scan's own ppi is unknown: give it with --ppi before asking for another")
+    if to_ppi is not None and not 10 <= to_ppi <= min(examination.ppi or (0.0,)):
+        raise BadRequest(f"--to-ppi {to_ppi:g} must lie between 10 and the scan's own rate")
+    wanted = frozenset(only) or MENDED_UNASKED
+    removals = [
+        removal
+        for finding in examination.findings
+        if finding.kind in wanted and finding.kind not in keep
+        for removal in _removals(finding)
+    ]
+    return Recipe(
+        software=f"moire {moire.__version__}",
+        ppi=examination.ppi,
+        strength=strength,
+        quick=quick,
+        to_ppi=to_ppi,
+        removals=tuple(removals),
+    )
+
+
+def _removals(finding: Finding) -> list[Removal]:
+    by_order = {line.order: (line.fx_cpp, line.fy_cpp) for line in finding.lines}
+    if finding.kind in _SCREENS:
+        ink = finding.screen.ink if finding.screen else "unknown"
+        vectors = (by_order[(1, 0)], by_order[(0, 1)])
+        return [Removal(kind=finding.kind, method="descreen", vectors_cpp=vectors, ink=ink)]
+    if not finding.lines:
+        return []
+    lines = tuple((line.fx_cpp, line.fy_cpp) for line in finding.lines)
+    return [Removal(kind=finding.kind, method="notch", vectors_cpp=lines)]
+
+
+def to_json(recipe: Recipe) -> bytes:
+    """Recipe as indented JSON."""
+    return msgspec.json.format(msgspec.json.encode(recipe), indent=1)
+
+
+def from_json(text: bytes, *, name: str = "recipe") -> Recipe:
+    """Recipe from JSON, strictly decoded.
+
+    Raises
+    ------
+    RecipeMismatch
+        If it is not a recipe of this version, or a field is wrong; the message names it.
+    """
+    try:
+        recipe = msgspec.json.decode(text, type=Recipe, strict=True)
+    except msgspec.DecodeError as error:
+        raise RecipeMismatch(f"{name}: not a recipe: {error}") from error
+    if (recipe.format, recipe.version) != ("moire.recipe", 1):
+        raise RecipeMismatch(
+            f"{name}: format {recipe.format} version {recipe.version}, wanted moire.recipe version 1"
+        )
+    for removal in recipe.removals:
+        wrong = removal.method == "descreen" and len(removal.vectors_cpp) != 2
+        numbers = [v for vector in removal.vectors_cpp for v in vector]
+        if wrong or not numbers or not all(math.isfinite(v) and abs(v) <= 1 for v in numbers):
+            raise RecipeMismatch(
+                f"{name}: a removal has vectors that are not frequencies in cycles per pixel"
+            )
+    if not 0 <= recipe.strength <= 1:
+        raise RecipeMismatch(f"{name}: strength {recipe.strength:g} is not between 0 and 1")
+    return recipe
+
+
+def check_fits(recipe: Recipe, scan: Scan) -> None:
+    """Refuse a recipe made for another sampling rate.
+
+    Raises
+    ------
+    RecipeMismatch
+        If both rates are known and differ by more than 0.5 %.
+    """
+    if recipe.ppi is None or scan.ppi is None:
+        return
+    if any(abs(a / b - 1) > 0.005 for a, b in zip(recipe.ppi, scan.ppi, strict=True)):
+        raise RecipeMismatch(
+            f"the recipe was made at {recipe.ppi[0]:g} x {recipe.ppi[1]:g} ppi, {scan.name} has "
+            f"{scan.ppi[0]:g} x {scan.ppi[1]:g}: examine this scan anew"
+        )
