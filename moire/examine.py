@@ -203,7 +203,7 @@ class _Survey:
         ppi = self.scan.ppi
         evidence = [
             f"two lines at right angles within {lattice.squareness_bins / self.size:.5f} cycles per pixel, "
-            f"in step over the page (coherence {lattice.first.coherence:.2f} and {lattice.second.coherence:.2f})"
+            f"in step over the page (coherence {lattice.first.coherence:.2f}, {lattice.second.coherence:.2f})"
         ]
         if len(lattice.first.colour) == 3:
             r, g, b = lattice.first.colour

@@ -60,8 +60,8 @@ def judge_fold(
         words = f"probably not folded ({direct:.2f}), but one scan cannot rule a fold out"
         return Fold(kind=kind, settled=False, screen=screen, candidates=listed, words=words)
     words = (
-        f"folded: {best.ruling_lpi:.1f} lpi at {best.angle_deg:.1f} degrees by order {best.order} is the most "
-        f"probable source ({best.probability:.2f}); a second scan at another ppi settles it"
+        f"folded: {best.ruling_lpi:.1f} lpi at {best.angle_deg:.1f} degrees by order {best.order} is the "
+        f"most probable source ({best.probability:.2f}); a second scan at another ppi settles it"
     )
     return Fold(kind="alias", settled=False, screen=screen, candidates=listed, words=words)
 

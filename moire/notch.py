@@ -48,39 +48,59 @@ def remove_lines(
 
 
 def _fit(plane: NDArray[np.float32], lines: list[NDArray[np.float64]], reach: float) -> NDArray[np.float32]:
+    """Sum of the fitted lines: first plainly, then twice with weights from what that leaves."""
     import cv2
 
-    rows, columns = plane.shape
-    period = max(2.0, 1 / max(min(float(np.hypot(*f)) for f in lines), 1e-3))
-    model = np.zeros_like(plane)
+    waves = [_wave(*plane.shape, f) for f in lines]
+    slow = max(1 / max(min(float(np.hypot(*f)) for f in lines), 1e-3), 4.0)
+    even = np.ones_like(plane)
+    amplitudes = _demodulate(plane - cv2.GaussianBlur(plane, (0, 0), slow), even, waves, reach)
     for _ in range(2):
-        clean = plane - model
-        base = cv2.bilateralFilter(clean, 0, 12 / 255, min(2.0, period / 2))
-        gx, gy = (
-            cv2.Sobel(base, cv2.CV_32F, 1, 0, scale=0.125),
-            cv2.Sobel(base, cv2.CV_32F, 0, 1, scale=0.125),
-        )
-        busy = cv2.GaussianBlur(gx**2 + gy**2, (0, 0), 2)
-        rest = cv2.GaussianBlur((clean - base) ** 2, (0, 0), 3)
-        weight = 1 / ((_NOISE_CODE / 255) ** 2 + 4 * busy + rest)
-        weight /= weight.max()
-        residual = plane - base
-        amplitudes = [np.zeros((rows, columns), np.complex64) for _ in lines]
-        waves = [_wave(rows, columns, f) for f in lines]
-        total = np.zeros_like(plane)
-        level = np.maximum(_smooth(weight, reach), 1e-6)
-        for _ in range(_ROUNDS if len(lines) > 1 else 1):
-            for i, wave in enumerate(waves):
-                total -= 2 * np.real(amplitudes[i] * wave)
-                product = weight * (residual - total) * np.conj(wave)
-                amplitudes[i] = (_smooth(product.real, reach) + 1j * _smooth(product.imag, reach)) / level
-                total += 2 * np.real(amplitudes[i] * wave)
-        model = np.zeros_like(plane)
-        for f, wave, amplitude in zip(lines, waves, amplitudes, strict=True):
-            model += 2 * np.real(
-                _above_background(residual - total, weight, level, f, amplitude, reach) * wave
-            )
-    return model
+        base = cv2.bilateralFilter(plane - _sum(amplitudes, waves), 0, 12 / 255, 2)
+        weight = _evenness(plane - _sum(amplitudes, waves), base)
+        amplitudes = _demodulate(plane - base, weight, waves, reach)
+    rest = plane - base - _sum(amplitudes, waves)
+    above = [
+        _above_background(rest, weight, f, amplitude, reach)
+        for f, amplitude in zip(lines, amplitudes, strict=True)
+    ]
+    return _sum(above, waves)
+
+
+def _evenness(clean: NDArray[np.float32], base: NDArray[np.float32]) -> NDArray[np.float32]:
+    """Weights that count flat places and leave out edges and texture."""
+    import cv2
+
+    gx, gy = cv2.Sobel(base, cv2.CV_32F, 1, 0, scale=0.125), cv2.Sobel(base, cv2.CV_32F, 0, 1, scale=0.125)
+    busy = cv2.GaussianBlur(gx**2 + gy**2, (0, 0), 2)
+    weight = 1 / ((_NOISE_CODE / 255) ** 2 + 4 * busy + cv2.GaussianBlur((clean - base) ** 2, (0, 0), 3))
+    return np.asarray(weight / weight.max(), np.float32)
+
+
+def _demodulate(
+    residual: NDArray[np.float32],
+    weight: NDArray[np.float32],
+    waves: list[NDArray[np.complex64]],
+    reach: float,
+) -> list[NDArray[np.complex64]]:
+    """Slowly varying complex amplitudes, each fitted to what the other lines leave."""
+    level = np.maximum(_smooth(weight, reach), 1e-6)
+    amplitudes = [np.zeros(residual.shape, np.complex64) for _ in waves]
+    left = residual.copy()
+    for _ in range(_ROUNDS if len(waves) > 1 else 1):
+        for i, wave in enumerate(waves):
+            left += 2 * np.real(amplitudes[i] * wave)
+            product = weight * left * np.conj(wave)
+            amplitudes[i] = (_smooth(product.real, reach) + 1j * _smooth(product.imag, reach)) / level
+            left -= 2 * np.real(amplitudes[i] * wave)
+    return amplitudes
+
+
+def _sum(amplitudes: list[NDArray[np.complex64]], waves: list[NDArray[np.complex64]]) -> NDArray[np.float32]:
+    total = np.zeros(waves[0].shape, np.float32)
+    for amplitude, wave in zip(amplitudes, waves, strict=True):
+        total += 2 * np.real(amplitude * wave)
+    return total
 
 
 def _wave(rows: int, columns: int, f: NDArray[np.float64]) -> NDArray[np.complex64]:
@@ -92,12 +112,12 @@ def _wave(rows: int, columns: int, f: NDArray[np.float64]) -> NDArray[np.complex
 def _above_background(
     residual: NDArray[np.float32],
     weight: NDArray[np.float32],
-    level: NDArray[np.float32],
     f: NDArray[np.float64],
     amplitude: NDArray[np.complex64],
     reach: float,
 ) -> NDArray[np.complex64]:
     """The part of a line's amplitude above what its neighbours in frequency hold."""
+    level = np.maximum(_smooth(weight, reach), 1e-6)
     gap = 1.5 / (2 * np.pi * reach)
     power = np.zeros(residual.shape, np.float32)
     for turn in (0.25, 0.75):

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -23,8 +24,8 @@ def split(width: int, height: int, *, size: int, margin: int) -> Iterator[Tile]:
     columns, rows = max(1, round(width / size)), max(1, round(height / size))
     x_edges = np.rint(np.linspace(0, width, columns + 1)).astype(int)
     y_edges = np.rint(np.linspace(0, height, rows + 1)).astype(int)
-    for y0, y1 in zip(y_edges[:-1], y_edges[1:], strict=True):
-        for x0, x1 in zip(x_edges[:-1], x_edges[1:], strict=True):
+    for y0, y1 in pairwise(y_edges):
+        for x0, x1 in pairwise(x_edges):
             left, top = max(0, x0 - margin), max(0, y0 - margin)
             right, bottom = min(width, x1 + margin), min(height, y1 + margin)
             yield Tile(

@@ -24,7 +24,7 @@ def judge(findings: tuple[Finding, ...]) -> tuple[Verdict, float, tuple[str, ...
         return "sound", visibility, ("No artifact is visible at this viewing condition. Keep the scan.",)
     folded = [f for f in seen if f.kind == "alias" and _in_picture_band(f)]
     if folded:
-        return "rescan", visibility, tuple(_rescan_advice(folded) + [_KEEPER])
+        return "rescan", visibility, (*_rescan_advice(folded), _KEEPER)
     kinds = {f.kind for f in seen}
     advice = []
     if "halftone" in kinds:

@@ -17,7 +17,13 @@ def as_scan(pixels: NDArray[np.uint8], ppi: float | tuple[float, float] | None, 
     rate = (ppi, ppi) if isinstance(ppi, int | float) else ppi
     mode = "rgb" if pixels.ndim == 3 else "grey"
     return Scan(
-        pixels=pixels, mode=mode, bit_depth=8, ppi=rate, ppi_source=rate and "option", name="print.png", **more
+        pixels=pixels,
+        mode=mode,
+        bit_depth=8,
+        ppi=rate,
+        ppi_source=rate and "option",
+        name="print.png",
+        **more,
     )  # type: ignore[arg-type]
 
 
@@ -29,7 +35,9 @@ def card_print(*orders: ScreenOrder, width_in: float = 1.5, seed: int = 3, **mor
     )
 
 
-def scanned(sheet: Print, ppi: float | tuple[float, float], **optics: object) -> tuple[Scan, NDArray[np.float32]]:
+def scanned(
+    sheet: Print, ppi: float | tuple[float, float], **optics: object
+) -> tuple[Scan, NDArray[np.float32]]:
     """A scan of a print and the sRGB picture that it would show without a screen, 0..1."""
     rate = (ppi, ppi) if isinstance(ppi, int | float) else ppi
     scanner = Scanner(ppi=rate, **optics)  # type: ignore[arg-type]

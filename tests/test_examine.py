@@ -20,7 +20,8 @@ def screens(found: Examination) -> list[Finding]:
 
 
 @pytest.mark.parametrize(
-    ("ruling", "angle", "ppi", "turn"), [(85, 45, 300, 0), (127, 22, 400, 1.3), (62, 8, 300, -0.6), (151, 71, 600, 0)]
+    ("ruling", "angle", "ppi", "turn"),
+    [(85, 45, 300, 0), (127, 22, 400, 1.3), (62, 8, 300, -0.6), (151, 71, 600, 0)],
 )
 def test_one_black_screen(ruling: float, angle: float, ppi: float, turn: float) -> None:
     sheet = card_print(ScreenOrder(ruling_lpi=ruling, angle_deg=angle, ink="black"))
@@ -136,7 +137,9 @@ def test_one_colour_is_sound(value: int) -> None:
 
 
 def test_sigmas_are_stated_and_small() -> None:
-    (one,) = screens(examine(scanned(card_print(ScreenOrder(ruling_lpi=110, angle_deg=40, ink="black")), 400)[0]))
+    (one,) = screens(
+        examine(scanned(card_print(ScreenOrder(ruling_lpi=110, angle_deg=40, ink="black")), 400)[0])
+    )
     assert one.screen is not None
     assert 0 < one.screen.ruling_lpi_sigma < 0.05
     assert 0 < one.screen.angle_deg_sigma < 0.03

@@ -38,7 +38,9 @@ def test_a_tint_covers_its_share(spot: str, share: float) -> None:
     # (transform of the disc, textbook; figures computed from it).
     [(0.10, 0.085093, 0.071707, 0.049033), (0.25, 0.163867, 0.098828, 0.016720)],
 )
-def test_small_round_dots_have_the_spectrum_of_discs(share: float, c10: float, c11: float, c20: float) -> None:
+def test_small_round_dots_have_the_spectrum_of_discs(
+    share: float, c10: float, c11: float, c20: float
+) -> None:
     r = np.sqrt(share / np.pi)
     assert r * j1(2 * np.pi * r) == pytest.approx(c10, abs=1e-6)
     spectrum = np.abs(np.fft.fft2(ink_of(tint(share)), norm="forward"))

@@ -38,7 +38,13 @@ def amplitude_at(image: NDArray[np.float32], f: tuple[float, float]) -> float:
 @pytest.mark.parametrize(
     ("lpi", "ppi", "mtf"),
     # Source: box aperture of one pixel, MTF = |sinc(f / R)| (transform of the box, textbook).
-    [(65, 300, 0.924549), (85, 300, 0.873082), (133, 300, 0.706645), (150, 600, 0.900316), (150, 200, 0.300105)],
+    [
+        (65, 300, 0.924549),
+        (85, 300, 0.873082),
+        (133, 300, 0.706645),
+        (150, 600, 0.900316),
+        (150, 200, 0.300105),
+    ],
 )
 def test_box_aperture_passes_what_the_sinc_says(lpi: float, ppi: float, mtf: float) -> None:
     seen = sample(Grating(lpi, 0), Scanner(ppi=(ppi, ppi), lens_px=0, noise=0))[..., 0]

@@ -7,7 +7,7 @@ from moire.spectrum import hann, tile_means, tile_phasors, tile_spectrum
 
 
 def test_hann_window_figures() -> None:
-    """Source: Harris, Proc. IEEE 66 (1978) 51, table 1, value from memory: gain 0.50, ENBW 1.50, loss 1.42 dB."""
+    """Source: Harris, Proc. IEEE 66 (1978) 51, table 1 (value from memory): 0.50, 1.50 bins, 1.42 dB."""
     w = hann(1024).astype(float)
     assert w.mean() == pytest.approx(0.5, abs=1e-6)
     assert 1024 * (w**2).sum() / w.sum() ** 2 == pytest.approx(1.5, abs=1e-4)

@@ -31,7 +31,7 @@ def test_rulings_convert_exactly(lpi: float, lpcm: float) -> None:
 @pytest.mark.parametrize(
     ("f1", "f2", "angle", "beat", "period_mm", "direction"),
     # Source: two-grating moire, f^2 = f1^2 + f2^2 - 2 f1 f2 cos a and phi = atan2(-f2 sin a, f1 - f2 cos a)
-    # (Amidror, The Theory of the Moire Phenomenon, section 2.3, formula from memory; figures computed from it).
+    # (Amidror, The Theory of the Moire Phenomenon, 2.3, formula from memory; figures computed from it).
     [
         (150, 150, 1, 2.617961, 9.702208, -89.5),
         (150, 150, 5, 13.085816, 1.941033, -87.5),

@@ -77,9 +77,14 @@ def command(scan: str, **flags: Any) -> int:
     sha256 = digest(target)
     if flags["report"]:
         save_report(
-            flags["report"], master=master, before=before, mending=done, inputs=(*inputs, target), force=force,
+            flags["report"],
+            master=master,
+            before=before,
+            mending=done,
+            inputs=(*inputs, target),
+            force=force,
             derivative=(Path(target).name, sha256),
-        )  # fmt: skip
+        )
     show_examination(out, before)
     show_mending(out, done, target)
     if flags["report"]:

@@ -1,0 +1,47 @@
+"""Lines go, pictures stay, nothing rings."""
+
+import numpy as np
+import pytest
+import skimage.data
+from numpy.typing import NDArray
+
+from moire.notch import remove_lines
+
+
+def photograph() -> NDArray[np.float32]:
+    return (skimage.data.coffee()[:384, :384] / 255).astype(np.float32)
+
+
+def psnr(a: NDArray[np.float32], b: NDArray[np.float32]) -> float:
+    return float(-10 * np.log10(np.mean((a - b) ** 2)))
+
+
+def waves(f: tuple[float, float], amplitude_codes: float) -> NDArray[np.float32]:
+    y, x = np.mgrid[0:384, 0:384]
+    wave = amplitude_codes / 255 * np.cos(2 * np.pi * (f[0] * x + f[1] * y) + 1)
+    return np.repeat(wave[..., None], 3, axis=2).astype(np.float32)
+
+
+@pytest.mark.parametrize("f", [(0.0, 0.0917), (0.1173, 0.0), (0.061, 0.083)])
+def test_a_line_on_a_photograph_is_removed(f: tuple[float, float]) -> None:
+    clean = photograph()
+    spoilt = clean + waves(f, 4)
+    mended = remove_lines(spoilt, [f])
+    assert psnr(spoilt, clean) < 40
+    assert psnr(mended, clean) > psnr(spoilt, clean) + 8
+
+
+def test_an_untouched_photograph_hardly_changes() -> None:
+    clean = photograph()
+    assert psnr(remove_lines(clean, [(0.0, 0.0917)]), clean) > 50
+
+
+def test_a_step_edge_does_not_ring() -> None:
+    page = np.full((256, 256, 1), 0.9, np.float32)
+    page[:, 128:] = 0.1
+    assert np.abs(remove_lines(page, [(0.09, 0.0)]) - page).max() < 2 / 255
+
+
+def test_no_lines_no_change() -> None:
+    page = photograph()
+    assert remove_lines(page, []) is page
