@@ -100,7 +100,7 @@ def _remove(
         if r.method == "notch" and not (lattices and r.kind == "rosette")
         for v in r.vectors_cpp
     ]
-    mended = remove_lines(master, lines)
+    mended = remove_lines(master, lines).copy()
     if lattices:
         # Plates of a CMYK file are one ink each; three channels are one colour picture.
         groups = [slice(0, 3)] if master.shape[2] == 3 else [slice(c, c + 1) for c in range(master.shape[2])]

@@ -169,7 +169,7 @@ def main() -> None:
     args = parser.parse_args()
     print("# Accuracy of examine\n")
     print(
-        f"Set `{args.set}`, {args.prints} prints a row, 1.5 x 1.5 in; made by `tests/bench/bench_examine.py`.\n"
+        f"Set `{args.set}`, {args.prints} prints a row, 1.5 in square; by `tests/bench/bench_examine.py`.\n"
     )
     print(
         "| prints, ppi, file | screens | found | rightly named | scans with an extra | "
