@@ -10,7 +10,7 @@ import msgspec
 
 from moire.figures import CROP_PX, crop, labels, overview, shown_rgb, spectrum_figures
 from moire.model import Examination, Finding, Mending, Scan
-from moire.outputs import PathLike, write_bytes
+from moire.scanfile import PathLike, write_bytes
 
 _VERDICTS = {
     "sound": ("Sound", "No artifact stands above the eye's threshold. The scan can be kept as it is."),

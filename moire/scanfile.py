@@ -1,93 +1,95 @@
-"""Scans as files: every usual format in, TIFF, PNG and JPEG out, nothing lost on the way."""
+"""Reading scans from files and writing derivatives beside them.
+
+A scan keeps its depth, its ICC profile, its alpha and its sampling rate on the way in and
+out. A file is written whole or not at all, and never over an input.
+"""
 
 from __future__ import annotations
 
-import contextlib
 import hashlib
-import logging
 import os
-import warnings
-from collections.abc import Callable, Iterator, Sequence
+import secrets
+import struct
+from collections.abc import Callable, Sequence
+from fractions import Fraction
 from pathlib import Path
-from typing import Any
+from typing import Any, BinaryIO
 
 import numpy as np
 from numpy.typing import NDArray
 
-from moire.decode import Decoded, decode_raster
-from moire.decode_tiff import decode_tiff, is_tiff
-from moire.encode import encode_jpeg, encode_png, encode_tiff
+from moire import pngfile, raster, tiffpage
 from moire.errors import OutputRefused, ScanUnreadable
 from moire.model import Scan
-from moire.outputs import PathLike, check_target, write_bytes
-from moire.resolution import Rate, measured
+from moire.resolution import settle
+
+PathLike = str | os.PathLike[str]
+
+_READABLE = "TIFF, PNG, JPEG, JPEG 2000, WebP or BMP"
 
 
-def read(path: PathLike, *, ppi: Rate | None = None, page: int = 1) -> Scan:
-    """Read one page of a scan.
+def read(path: PathLike, *, ppi: tuple[float, float] | None = None, page: int = 1) -> Scan:
+    """Read a scan.
 
     Parameters
     ----------
     path : path
-        TIFF, PNG, JPEG, JPEG 2000, WebP or BMP.
+        TIFF, PNG, JPEG, JPEG 2000, WebP or BMP; the content decides, not the name.
     ppi : (float, float) or None
-        Sampling rate given by the user; wins over the file's own.
+        Sampling rate along x and y of the upright page, 10 to 20000. Wins over the file's.
     page : int
-        From 1.
+        Page of a multi-page TIFF, from 1.
 
     Returns
     -------
     Scan
-        Pixels upright, read-only.
+        Upright, with uint8 or uint16 pixels that are read-only.
 
     Raises
     ------
     ScanUnreadable
-        If the file is missing, damaged, of another kind, or holds no such page.
+        If the file is missing, damaged, cut short, of another format, without that page,
+        of float, signed or 32-bit samples, or of more than 2**30 pixels.
+    BadRequest
+        If `ppi` is no sampling rate.
     """
-    name = os.fspath(path)
-    data = _bytes_of(name)
-    with _quiet(), _explained(name):
-        decoded = decode_tiff(data, name, page) if is_tiff(data) else decode_raster(data, name, page)
-    pixels, alpha, rate = _upright(decoded)
-    stored = rate
-    used: Rate | None = ppi or measured(stored)
-    pixels = np.ascontiguousarray(pixels)
-    pixels.setflags(write=False)
+    settle(ppi, None)
+    kind = _kind(path)
+    if kind != "TIFF" and page != 1:
+        raise ScanUnreadable(str(path), f"has 1 page(s), so no page {page}")
+    found = _guarded(path, lambda: _decode(Path(path), kind, page))
+    rate, source = settle(ppi, found.stored_ppi)
     return Scan(
-        pixels=pixels,
-        mode=decoded.mode,
-        bit_depth=decoded.bit_depth,
-        ppi=used,
-        ppi_source=None if used is None else "option" if ppi else "file",
-        ppi_in_file=stored,
-        alpha=alpha,
-        icc=decoded.icc,
-        name=Path(name).name,
-        sha256=hashlib.sha256(data).hexdigest(),
-        jpeg=decoded.jpeg,
+        pixels=found.pixels,
+        mode=found.mode,
+        bit_depth=found.bit_depth,
+        ppi=rate,
+        ppi_source=source,
+        ppi_in_file=found.stored_ppi,
+        alpha=found.alpha,
+        icc=found.icc,
+        name=Path(path).name,
+        sha256=digest(path),
+        jpeg=found.jpeg,
         page=page,
     )
 
 
 def pages(path: PathLike) -> int:
-    """Number of pages in a file.
+    """Number of pages in a file: of a TIFF as many as it has, of any other format 1.
 
     Raises
     ------
     ScanUnreadable
+        If the file cannot be read as a scan.
     """
-    import io
+    return _guarded(path, lambda: tiffpage.count(Path(path))) if _kind(path) == "TIFF" else 1
 
-    name = os.fspath(path)
-    data = _bytes_of(name)
-    with _quiet(), _explained(name):
-        if not is_tiff(data):
-            return 1
-        import tifffile
 
-        with tifffile.TiffFile(io.BytesIO(data)) as tif:
-            return len(tif.pages)
+def digest(path: PathLike) -> str:
+    """SHA-256 of a file's bytes, in hexadecimal."""
+    with open(path, "rb") as file:
+        return hashlib.file_digest(file, "sha256").hexdigest()
 
 
 def write(
@@ -98,92 +100,187 @@ def write(
     inputs: Sequence[PathLike] = (),
     jpeg_quality: int = 92,
 ) -> None:
-    """Write a scan as TIFF (deflate), PNG or JPEG, with its depth, ICC profile and ppi.
+    """Write a scan as TIFF (deflate), PNG or JPEG, whole or not at all.
+
+    The extension decides: ``.tif``, ``.tiff``, ``.png``, ``.jpg``, ``.jpeg``. TIFF holds every
+    scan; PNG no CMYK; JPEG neither 16 bits nor alpha. Pages of 1 bit are written with 8.
 
     Parameters
     ----------
     scan : Scan
+        Its ``ppi`` is stored; where that is None no rate is.
     path : path
-        The extension decides the format.
+        The target.
     force : bool
-        Overwrite an existing file; never one of `inputs`.
-    inputs : sequence of path
-        Files that must not be overwritten.
+        Replace an existing target.
+    inputs : sequence of paths
+        Files that are never overwritten, whatever `force` and however linked.
     jpeg_quality : int
-        1..100.
+        1 to 100, for JPEG only; colour is never subsampled.
 
     Raises
     ------
     OutputRefused
+        If the target may not or cannot be written; nothing is left behind.
     """
-    check_target(path, force=force, inputs=inputs)
-    suffix = Path(path).suffix.lower()
-    encoders: dict[str, Callable[[], bytes]] = {
-        ".tif": lambda: encode_tiff(scan),
-        ".tiff": lambda: encode_tiff(scan),
-        ".png": lambda: encode_png(scan, str(path)),
-        ".jpg": lambda: encode_jpeg(scan, str(path), jpeg_quality),
-        ".jpeg": lambda: encode_jpeg(scan, str(path), jpeg_quality),
-    }
-    if suffix not in encoders:
-        raise OutputRefused(str(path), f"extension {suffix!r} is not written: use .tif, .png or .jpg")
-    write_bytes(encoders[suffix](), path, force=force, inputs=inputs)
+    encode = _encoder(scan, path, jpeg_quality)
+    _put(path, encode, force=force, inputs=inputs)
 
 
-def _bytes_of(name: str) -> bytes:
+def write_bytes(data: bytes, path: PathLike, *, force: bool = False, inputs: Sequence[PathLike] = ()) -> None:
+    """Write a side file, such as a recipe, under the same rules as a scan.
+
+    Raises
+    ------
+    OutputRefused
+        If the target may not or cannot be written; nothing is left behind.
+    """
+    _put(path, lambda file: file.write(data), force=force, inputs=inputs)
+
+
+def check_target(path: PathLike, *, force: bool = False, inputs: Sequence[PathLike] = ()) -> None:
+    """Refuse a target before any work is done for it.
+
+    Raises
+    ------
+    OutputRefused
+        If it is one of the `inputs` under any name, exists without `force`, is a folder, or
+        lies in a folder that does not exist.
+    """
+    target, name = Path(path), str(path)
+    for source in inputs:
+        if target.exists() and os.path.exists(source) and os.path.samefile(target, source):
+            raise OutputRefused(name, "is an input, which is never overwritten: give another name")
+    if target.is_dir():
+        raise OutputRefused(name, "is a folder: give a file name")
+    if not target.parent.is_dir():
+        raise OutputRefused(name, f"the folder {target.parent} does not exist: make it first")
+    if not force and os.path.lexists(target):
+        raise OutputRefused(name, "exists: give another name or --force")
+
+
+def _kind(path: PathLike) -> str:
+    """Format of a file that is there and is not empty."""
+    source, name = Path(path), str(path)
+    if source.is_dir():
+        raise ScanUnreadable(name, "is a folder: give one file")
+    if not source.exists():
+        raise ScanUnreadable(name, "no such file: check the name")
+    if not source.is_file():
+        raise ScanUnreadable(name, "is not an ordinary file: save the scan to disk first")
     try:
-        data = Path(name).read_bytes()
+        with source.open("rb") as file:
+            head = file.read(16)
     except OSError as error:
-        raise ScanUnreadable(name, f"cannot be opened: {error.strerror}") from error
-    if not data:
-        raise ScanUnreadable(name, "is empty: copy it again from the scanner")
-    return data
+        raise ScanUnreadable(name, f"cannot be opened ({error.strerror}): check its permissions") from error
+    if not head:
+        raise ScanUnreadable(name, "is empty: copy or scan it again")
+    kind = raster.kind(head)
+    if kind is None:
+        raise ScanUnreadable(name, f"is not a picture that can be read: give {_READABLE}")
+    return kind
 
 
-@contextlib.contextmanager
-def _quiet() -> Iterator[None]:
-    """Silence what decoders say about odd files; what matters becomes an error."""
-    logger = logging.getLogger("tifffile")
-    before = logger.disabled
-    logger.disabled = True
+def _decode(path: Path, kind: str, page: int) -> raster.Raster:
+    if kind == "TIFF":
+        return tiffpage.decode(path, page)
+    data = path.read_bytes()
+    return pngfile.decode(data) if kind == "PNG" else raster.decode(data, kind)
+
+
+def _guarded(path: PathLike, work: Callable[[], Any]) -> Any:
+    """Run a decoder; whatever it raises becomes one line that names the file."""
     try:
-        with warnings.catch_warnings():
-            warnings.simplefilter("ignore")
-            yield
-    finally:
-        logger.disabled = before
-
-
-@contextlib.contextmanager
-def _explained(name: str) -> Iterator[None]:
-    """Any decoder's failure as one clear error that names the file."""
-    try:
-        yield
-    except ScanUnreadable:
-        raise
+        return work()
+    except raster.Unfit as error:
+        raise ScanUnreadable(str(path), str(error)) from error
     except MemoryError as error:
-        raise ScanUnreadable(name, "is too large for this machine's memory") from error
-    except Exception as error:  # a decoder may raise anything on a damaged file
-        reason = str(error).splitlines()[0] if str(error) else type(error).__name__
-        raise ScanUnreadable(
-            name, f"is damaged or of a kind not read here ({reason}): scan or copy it again"
-        ) from error
+        raise ScanUnreadable(str(path), "does not fit in memory: cut it into parts") from error
+    except Exception as error:  # decoders raise anything at all on damaged files
+        what = str(error).split("\n")[0] or type(error).__name__
+        raise ScanUnreadable(str(path), f"is damaged or cut short ({what}): copy or scan it again") from error
 
 
-def _upright(decoded: Decoded) -> tuple[NDArray[Any], NDArray[Any] | None, Rate | None]:
-    """Pixels, alpha and rate with the orientation tag applied (TIFF 6.0, Orientation 1..8)."""
-    turn: dict[int, Callable[[NDArray[Any]], NDArray[Any]]] = {
-        2: lambda a: a[:, ::-1],
-        3: lambda a: a[::-1, ::-1],
-        4: lambda a: a[::-1],
-        5: lambda a: a.swapaxes(0, 1),
-        6: lambda a: a.swapaxes(0, 1)[:, ::-1],
-        7: lambda a: a.swapaxes(0, 1)[::-1, ::-1],
-        8: lambda a: a.swapaxes(0, 1)[::-1],
-    }
-    apply = turn.get(decoded.orientation, lambda a: a)
-    alpha = None if decoded.alpha is None else np.ascontiguousarray(apply(decoded.alpha))
-    rate = decoded.rate
-    if rate is not None and decoded.orientation >= 5:
-        rate = (rate[1], rate[0])
-    return apply(decoded.pixels), alpha, rate
+def _put(
+    path: PathLike, encode: Callable[[BinaryIO], Any], *, force: bool, inputs: Sequence[PathLike]
+) -> None:
+    """Encode into a temporary file beside the target, then move it there in one step."""
+    check_target(path, force=force, inputs=inputs)
+    target = Path(path)
+    part = target.with_name(f".{secrets.token_hex(8)}.part")
+    try:
+        with part.open("x+b") as file:
+            encode(file)
+            file.flush()
+            os.fsync(file.fileno())
+        check_target(path, force=force, inputs=inputs)
+        os.replace(part, target)
+    except OutputRefused:
+        raise
+    except (OSError, ValueError, struct.error) as error:
+        reason = getattr(error, "strerror", None) or str(error)
+        raise OutputRefused(str(path), f"cannot be written ({reason}): nothing was left there") from error
+    finally:
+        part.unlink(missing_ok=True)
+
+
+def _encoder(scan: Scan, path: PathLike, jpeg_quality: int) -> Callable[[BinaryIO], Any]:
+    """Encoder for the target's extension, or a refusal of what that format cannot hold."""
+    name, suffix = str(path), Path(path).suffix.lower()
+    deep = scan.pixels.dtype == np.uint16
+    if suffix in (".tif", ".tiff"):
+        return lambda file: _encode_tiff(scan, file)
+    if suffix == ".png":
+        if scan.mode == "cmyk":
+            raise OutputRefused(name, "PNG holds no CMYK: give a name that ends in .tif")
+        return lambda file: (
+            pngfile.encode_16(file, _with_alpha(scan), ppi=scan.ppi, icc=scan.icc)
+            if deep
+            else _encode_pillow(scan, file, "PNG")
+        )
+    if suffix in (".jpg", ".jpeg"):
+        if deep or scan.alpha is not None:
+            what = "16 bits" if deep else "alpha"
+            raise OutputRefused(name, f"JPEG holds no {what}: give a name that ends in .tif or .png")
+        return lambda file: _encode_pillow(scan, file, "JPEG", quality=jpeg_quality, subsampling=0)
+    raise OutputRefused(name, "the name must end in .tif, .tiff, .png, .jpg or .jpeg")
+
+
+def _with_alpha(scan: Scan) -> NDArray[Any]:
+    return scan.pixels if scan.alpha is None else np.dstack([scan.pixels, scan.alpha])
+
+
+def _encode_tiff(scan: Scan, file: BinaryIO) -> None:
+    import tifffile
+
+    tifffile.imwrite(
+        file,
+        _with_alpha(scan),
+        photometric={"grey": "minisblack", "rgb": "rgb", "cmyk": "separated"}[scan.mode],
+        planarconfig="contig" if scan.channels > 1 or scan.alpha is not None else None,
+        extrasamples=None if scan.alpha is None else ["unassalpha"],
+        compression="zlib",
+        predictor=True,
+        resolution=scan.ppi,
+        resolutionunit="INCH" if scan.ppi else None,
+        iccprofile=scan.icc or None,
+        metadata=None,
+        software=False,
+    )
+
+
+def _encode_pillow(scan: Scan, file: BinaryIO, kind: str, **options: Any) -> None:
+    from PIL import Image
+
+    mode = {"grey": "L", "rgb": "RGB", "cmyk": "CMYK"}[scan.mode] + ("" if scan.alpha is None else "A")
+    image = Image.frombytes(mode, (scan.width_px, scan.height_px), _with_alpha(scan).tobytes())
+    if scan.ppi:
+        options["dpi"] = scan.ppi
+        if kind == "JPEG" and any(rate != round(rate) for rate in scan.ppi):
+            # JFIF holds whole numbers only; EXIF adds the decimals.
+            exif = Image.Exif()
+            for tag, rate in zip((282, 283), scan.ppi, strict=True):
+                exif[tag] = Fraction(rate).limit_denominator(100_000)
+            exif[296] = 2
+            options["exif"] = exif
+    image.save(file, kind, icc_profile=scan.icc or None, **options)

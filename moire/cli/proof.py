@@ -64,9 +64,8 @@ def command(output: str, screens: tuple[str, ...], **flags: Any) -> int:
     import msgspec
 
     from moire.cli.console import console, print_json
-    from moire.outputs import check_target, write_bytes
     from moire.proof import print_sheet, scan_print
-    from moire.scanfile import write
+    from moire.scanfile import check_target, write, write_bytes
     from moire.scanner import Scanner
 
     target = Path(output)
