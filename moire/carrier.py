@@ -10,7 +10,8 @@ from numpy.typing import NDArray
 from moire.nulls import ScreenLattice
 
 _DECOYS = 4
-_NOISE = 0.004
+_NOISE = 0.002
+_SUSPECT, _SURE = 1.8, 6.0
 
 
 def local_amplitude(
@@ -77,25 +78,25 @@ def coherent_amplitude(
 def presence(
     plane: NDArray[np.float32], lattice: ScreenLattice, others: Sequence[ScreenLattice]
 ) -> NDArray[np.float32]:
-    """How surely a screen is present, 0..1 at full size: 0 where its lines do not exceed decoys.
+    """Where a screen is present, 0..1 at full size: 0 where its lines do not exceed decoys.
 
-    The weaker of its two lines is held against the strongest of four decoy lines of the same
-    frequency at angles where no screen is.
+    The geometric mean of its two lines is held against the rms of four decoy lines of the same
+    frequency at angles where no screen is. Places that are sure carry their less sure
+    surroundings with them (hysteresis), so that dips of the dots' own beat do not open holes.
     """
     import cv2
+    from skimage.filters import apply_hysteresis_threshold
 
-    period = lattice.period_px
-    sigma = 2.5 * period
+    sigma = 2.5 * lattice.period_px
     lines = [local_amplitude(plane, k, sigma_px=sigma) for k in (lattice.k1, lattice.k2)]
     decoys = [local_amplitude(plane, f, sigma_px=sigma) for f in _decoys(lattice, others)]
-    floor = np.sqrt(np.max(decoys, axis=0) ** 2 + np.float32(_NOISE**2))
-    ratio = np.minimum(lines[0], lines[1]) / floor
-    low, high = (2.5, 5.0) if period < 3 else (4.0, 10.0)
-    gate = np.sqrt(np.clip((ratio - low) / (high - low), 0, 1))
-    reach = max(1, round(2 * period / grid_step(sigma)))
+    floor = np.sqrt(np.mean(np.square(decoys), axis=0) + np.float32(_NOISE**2))
+    ratio = np.sqrt(lines[0] * lines[1]) / floor
+    gate = apply_hysteresis_threshold(ratio, _SUSPECT, _SURE).astype(np.uint8)
+    reach = max(1, round(2 * lattice.period_px / grid_step(sigma)))
     gate = cv2.dilate(gate, cv2.getStructuringElement(cv2.MORPH_ELLIPSE, (2 * reach + 1, 2 * reach + 1)))
     rows, columns = plane.shape
-    return np.asarray(cv2.resize(gate, (columns, rows), interpolation=cv2.INTER_LINEAR), np.float32)
+    return np.asarray(cv2.resize(gate.astype(np.float32), (columns, rows), interpolation=cv2.INTER_LINEAR))
 
 
 def _decoys(lattice: ScreenLattice, others: Sequence[ScreenLattice]) -> list[NDArray[np.float64]]:

@@ -42,9 +42,8 @@ def command(scan: str, **flags: Any) -> int:
     from moire.cli.reporting import check_report_path, save_report
     from moire.examine import examine
     from moire.mend import mend
-    from moire.outputs import check_target, digest, write_bytes
     from moire.recipe import from_json, to_json
-    from moire.scanfile import read, write
+    from moire.scanfile import check_target, digest, read, write, write_bytes
 
     out = console(as_json=flags["as_json"], quiet=flags["quiet"])
     target, force, inputs = (
