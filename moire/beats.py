@@ -2,12 +2,45 @@
 
 from __future__ import annotations
 
-from itertools import combinations
+from collections.abc import Sequence
+from itertools import combinations, product
 
 import numpy as np
 from numpy.typing import NDArray
 
 from moire.lattice import Lattice, grid_distance, wrap
+
+_LOWEST_CPP = 0.07
+_APART_CPP = 0.02
+_BELOW_SCREEN = 0.75
+
+
+def rosette_frequencies(
+    screens: Sequence[tuple[NDArray[np.float64], NDArray[np.float64]]],
+) -> list[NDArray[np.float64]]:
+    """First-order beats between screens that are coarser than the screens themselves.
+
+    Parameters
+    ----------
+    screens : sequence of (k1, k2)
+        Observed vectors ``(fx, fy)`` in cycles per pixel.
+
+    Returns
+    -------
+    list of ndarray
+        One of each opposite pair; beats too slow to tell from tone, or closer together than a
+        filter can part, are left out.
+    """
+    found: list[NDArray[np.float64]] = []
+    for a, b in combinations(screens, 2):
+        finest = max(float(np.hypot(*k)) for k in (*a, *b))
+        for u, v, sign in product(a, b, (1, -1)):
+            f = wrap(u + sign * v)
+            slow = float(np.hypot(*f)) < _LOWEST_CPP
+            coarse = float(np.hypot(*f)) < _BELOW_SCREEN * finest
+            if coarse and not slow and all(grid_distance(f, g) > _APART_CPP for g in found):
+                found.append(f)
+    return found
 
 
 def rosette_parents(

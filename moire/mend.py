@@ -5,22 +5,30 @@ from __future__ import annotations
 import hashlib
 from collections.abc import Callable, Collection
 from dataclasses import replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from moire.descreen import ScreenLattice, apply, margin_px, prepare
+from moire.descreen import Preparation, apply, margin_px, prepare
 from moire.examine import examine, rgb_codes, tile_size
+from moire.lattice import grid_distance
 from moire.measures import colour_shift, edge_detail, line_levels
 from moire.model import Examination, Finding, Kind, LineRemoved, Measures, Mending, Recipe, Scan
 from moire.notch import remove_lines
+from moire.nulls import ScreenLattice
 from moire.recipe import MENDED_UNASKED, check_fits, prescribe
 from moire.resample import reduce_picture
 from moire.tiles import map_tiles
-from moire.vision import lightness
+from moire.verdict import judge
+from moire.vision import lightness, visibility
 
-_TILE_PX = 1024
+Pixels = NDArray[Any]
+_TILE_PX = 768
+_BEAT_REACH_PX = 25.0
+_NOTCH_MARGIN_PX = 120
 _PLACES = 4
+_SAME_CPP = 0.002
 _PLACE_PX = 96
 
 
@@ -68,7 +76,7 @@ def mend(
     master = _encoded(scan)
     mended = _remove(master, recipe, progress)
     full_size = _as_scan(mended, scan, master)
-    after = examine(full_size, viewing=before.viewing.condition)
+    after = _recognised(examine(full_size, viewing=before.viewing.condition), before)
     measures, places = _measure(scan, full_size, before, recipe)
     derivative = full_size
     if recipe.to_ppi is not None and scan.ppi is not None:
@@ -78,46 +86,82 @@ def mend(
     )
 
 
-def _encoded(scan: Scan) -> NDArray[np.float32]:
+def _recognised(after: Examination, before: Examination) -> Examination:
+    """Remains of a screen keep the name that the master gave it: alone they are too faint to name."""
+    known = [f for f in before.findings if f.kind in ("halftone", "alias")]
+    findings = []
+    for found in after.findings:
+        match = next(
+            (k for k in known if found.kind in ("halftone", "alias") and _same_lattice(found, k)), None
+        )
+        if match is not None:
+            found = replace(
+                found,
+                kind=match.kind,
+                screen=match.screen,
+                candidates=match.candidates,
+                settled=match.settled,
+                evidence=(*found.evidence[:1], "what is left of a screen of the master"),
+            )
+        findings.append(found)
+    verdict, strongest, advice = judge(tuple(findings))
+    if after.verdict == "refer" and not findings:
+        return after
+    return replace(after, findings=tuple(findings), verdict=verdict, visibility=strongest, advice=advice)
+
+
+def _same_lattice(a: Finding, b: Finding) -> bool:
+    first = [(line.fx_cpp, line.fy_cpp) for line in a.lines if line.order == (1, 0)]
+    second = [(line.fx_cpp, line.fy_cpp) for line in b.lines if line.order in ((1, 0), (0, 1))]
+    return any(grid_distance(np.array(p), np.array(q)) < _SAME_CPP for p in first for q in second)
+
+
+def _encoded(scan: Scan) -> Pixels:
     """Pixels 0..1, light rising, shape (rows, columns, channels)."""
     values = scan.pixels.astype(np.float32) / np.float32(scan.full_scale)
     values = values[..., None] if values.ndim == 2 else values
     return 1 - values if scan.mode == "cmyk" else values
 
 
-def _remove(
-    master: NDArray[np.float32], recipe: Recipe, progress: Callable[[float], None]
-) -> NDArray[np.float32]:
+def _remove(master: Pixels, recipe: Recipe, progress: Callable[[float], None]) -> Pixels:
     lattices = tuple(
         ScreenLattice(k1=np.array(r.vectors_cpp[0]), k2=np.array(r.vectors_cpp[1]))
         for r in recipe.removals
         if r.method == "descreen"
     )
-    # Beats of two screens go with the screens; a notch would only cut the picture around them.
-    lines = [
-        v
-        for r in recipe.removals
-        if r.method == "notch" and not (lattices and r.kind == "rosette")
-        for v in r.vectors_cpp
-    ]
-    mended = remove_lines(master, lines).copy()
-    if lattices:
-        # Plates of a CMYK file are one ink each; three channels are one colour picture.
-        groups = [slice(0, 3)] if master.shape[2] == 3 else [slice(c, c + 1) for c in range(master.shape[2])]
-        for group in groups:
-            part = mended[..., group]
-            ready = prepare(part, lattices)
-            mended[..., group] = map_tiles(
-                part,
-                lambda tile, origin, ready=ready: apply(tile, ready, origin=origin, quick=recipe.quick),  # type: ignore[misc]
-                size=_TILE_PX,
-                margin=margin_px(lattices),
-                progress=progress,
-            )
+    notches = [r for r in recipe.removals if r.method == "notch"]
+    lines = [v for r in notches if r.kind != "rosette" for v in r.vectors_cpp]
+    beats = [v for r in notches if r.kind == "rosette" for v in r.vectors_cpp]
+    mended = np.empty_like(master)
+    # Plates of a CMYK file are one ink each; three channels are one colour picture.
+    groups = [slice(0, 3)] if master.shape[2] == 3 else [slice(c, c + 1) for c in range(master.shape[2])]
+    for group in groups:
+        part = np.ascontiguousarray(master[..., group])
+        ready = prepare(part, lattices)
+
+        def work(tile: Pixels, origin: tuple[int, int], ready: Preparation = ready) -> Pixels:
+            level = remove_lines(tile, lines)
+            clear = apply(level, ready, origin=origin, quick=recipe.quick)
+            if not beats:
+                return clear
+            # Without screens to mend, the beats themselves are all there is; else they end with them.
+            inside = _where_changed(clear, level) if lattices else np.float32(1)
+            return clear + inside * (remove_lines(clear, beats, reach_px=_BEAT_REACH_PX) - clear)
+
+        margin = max(margin_px(lattices), _NOTCH_MARGIN_PX if lines or beats else 0)
+        mended[..., group] = map_tiles(part, work, size=_TILE_PX, margin=margin, progress=progress)
     return master + np.float32(recipe.strength) * (mended - master)
 
 
-def _as_scan(mended: NDArray[np.float32], scan: Scan, master: NDArray[np.float32]) -> Scan:
+def _where_changed(after: Pixels, before: Pixels) -> Pixels:
+    """Soft mask, 0..1, of where the descreening did something."""
+    import cv2
+
+    changed = (after != before).any(axis=2).astype(np.float32)
+    return np.asarray(cv2.blur(cv2.blur(changed, (9, 9)), (9, 9)) * changed)[..., None]
+
+
+def _as_scan(mended: Pixels, scan: Scan, master: Pixels) -> Scan:
     values = 1 - mended if scan.mode == "cmyk" else mended
     pixels = np.clip(np.rint(values * scan.full_scale), 0, scan.full_scale).astype(scan.pixels.dtype)
     pixels = pixels.reshape(scan.pixels.shape)
@@ -130,7 +174,7 @@ def _as_scan(mended: NDArray[np.float32], scan: Scan, master: NDArray[np.float32
     return replace(scan, pixels=pixels, bit_depth=depth, sha256=digest, jpeg=False)
 
 
-def _reduced(mended: NDArray[np.float32], scan: Scan, to_ppi: float) -> Scan:
+def _reduced(mended: Pixels, scan: Scan, to_ppi: float) -> Scan:
     assert scan.ppi is not None
     width = max(1, round(scan.width_px * to_ppi / scan.ppi[0]))
     height = max(1, round(scan.height_px * to_ppi / scan.ppi[1]))
@@ -149,8 +193,6 @@ def _reduced(mended: NDArray[np.float32], scan: Scan, to_ppi: float) -> Scan:
 def _measure(
     scan: Scan, mended: Scan, before: Examination, recipe: Recipe
 ) -> tuple[Measures, tuple[tuple[int, int], ...]]:
-    from moire.vision import visibility
-
     removed = [f for f in before.findings if f.lines and f.kind in {r.kind for r in recipe.removals}]
     one, two = rgb_codes(scan), rgb_codes(mended)
     l_one, l_two = lightness(one), lightness(two)
@@ -214,7 +256,7 @@ def _inside(scan: Scan, findings: list[Finding]) -> NDArray[np.bool_]:
     return mask
 
 
-def _worst_places(change: NDArray[np.float32]) -> tuple[tuple[int, int], ...]:
+def _worst_places(change: Pixels) -> tuple[tuple[int, int], ...]:
     """Centres of the blocks that changed most, apart from each other."""
     import cv2
 

@@ -6,8 +6,10 @@ import math
 from collections.abc import Collection
 
 import msgspec
+import numpy as np
 
 import moire
+from moire.beats import rosette_frequencies
 from moire.errors import BadRequest, RecipeMismatch
 from moire.model import Examination, Finding, Kind, Recipe, Removal, Scan
 
@@ -53,12 +55,17 @@ def prescribe(
     if to_ppi is not None and not 10 <= to_ppi <= min(examination.ppi or (0.0,)):
         raise BadRequest(f"--to-ppi {to_ppi:g} must lie between 10 and the scan's own rate")
     wanted = frozenset(only) or MENDED_UNASKED
-    removals = [
-        removal
-        for finding in examination.findings
-        if finding.kind in wanted and finding.kind not in keep
-        for removal in _removals(finding)
+    chosen = wanted - frozenset(keep)
+    removals = [r for f in examination.findings if f.kind in chosen - {"rosette"} for r in _removals(f)]
+    screens = [
+        (np.array(r.vectors_cpp[0]), np.array(r.vectors_cpp[1])) for r in removals if r.method == "descreen"
     ]
+    if "rosette" in chosen and len(screens) > 1:
+        # Every low beat of the screens, found or not: what is not there is not subtracted.
+        beats = tuple((float(f[0]), float(f[1])) for f in rosette_frequencies(screens))
+        removals += [Removal(kind="rosette", method="notch", vectors_cpp=beats)] if beats else []
+    elif "rosette" in chosen:
+        removals += [r for f in examination.findings if f.kind == "rosette" for r in _removals(f)]
     return Recipe(
         software=f"moire {moire.__version__}",
         ppi=examination.ppi,
