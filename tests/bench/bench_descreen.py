@@ -176,7 +176,8 @@ def run(case: Case) -> str:
         f"| {case.name} | {psnr(image, truth):.1f} | "
         + " | ".join(f"{psnr(r, truth):.2f}" for r in best.values())
         + f" | {psnr(quick, truth):.2f} | **{psnr(full, truth):.2f}** | {gain:+.2f} | "
-        f"{quality(best[top], truth)} | {quality(full, truth)} | {edge_energy(full, truth):.2f} | {cost:.0f} |"
+        f"{quality(best[top], truth)} | {quality(full, truth)} | "
+        f"{edge_energy(full, truth):.2f} | {cost:.0f} |"
     )
 
 
@@ -185,7 +186,7 @@ def main() -> None:
     parser.add_argument("--only", default="", help="cases whose name holds this word")
     args = parser.parse_args()
     print(
-        "| print | scan | Gaussian | Gaussian, linear | bilateral | guided | null | full | gain over best rival | "
+        "| print | scan | Gaussian | Gaussian, linear | bilateral | guided | null | full | over best rival | "
         "SSIM / CIEDE2000 best rival | SSIM / CIEDE2000 full | edge energy | FFT trips |"
     )
     print("|" + "---|" * 13)

@@ -14,6 +14,7 @@ import sys
 import time
 from concurrent.futures import ProcessPoolExecutor
 from dataclasses import replace
+from itertools import pairwise
 from pathlib import Path
 
 import numpy as np
@@ -178,7 +179,7 @@ def train(
     f, i, t, w = (torch.from_numpy(np.concatenate([d[k] for d in fit])) for k in range(4))
     centre, scale = i.mean(dim=0), i.std(dim=0) + 1e-3
     sizes = (i.shape[1], *hidden, f.shape[1])
-    layers = [torch.nn.Linear(a, b) for a, b in zip(sizes[:-1], sizes[1:], strict=True)]
+    layers = [torch.nn.Linear(a, b) for a, b in pairwise(sizes)]
     model = torch.nn.Sequential(*[m for layer in layers[:-1] for m in (layer, torch.nn.ReLU())], layers[-1])
     optimiser = torch.optim.Adam(model.parameters(), lr=4e-3)
     batch = 8192
@@ -187,7 +188,6 @@ def train(
     w = w / w.mean()
     for epoch in range(epochs):
         order = torch.randperm(len(t))
-        total = 0.0
         for start in range(0, len(t) - batch + 1, batch):
             at = order[start : start + batch]
             weights = torch.softmax(model((i[at] - centre) / scale), dim=1)
@@ -198,7 +198,6 @@ def train(
             loss.backward()
             optimiser.step()
             schedule.step()
-            total += float(loss)
         if epoch % 5 == 4 or epoch == epochs - 1:
             gains = []
             with torch.no_grad():
@@ -209,8 +208,11 @@ def train(
                         10
                         * np.log10(((df - dt[:, None]) ** 2).mean(axis=0).min() / ((mixed - dt) ** 2).mean())
                     )
-            print(f"epoch {epoch + 1}: loss {total / steps * epochs:.4f}, held out: {np.mean(gains):.2f} dB over the best"
-                  f" single feature (least {np.min(gains):.2f})", flush=True)  # fmt: skip
+            print(
+                f"epoch {epoch + 1}: held out, {np.mean(gains):.2f} dB over the best single feature "
+                f"(least {np.min(gains):.2f})",
+                flush=True,
+            )
     out = {"centre": centre.numpy(), "scale": scale.numpy()}
     for n, layer in enumerate(layers):
         out[f"matrix{n}"] = layer.weight.detach().numpy().T.astype(np.float32)
