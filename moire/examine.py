@@ -25,6 +25,7 @@ from moire.weaves import Threads, find_threads, measure_weave
 
 _TILES_AT_MOST = 1200
 _CALLED_Z = 3.0
+_OF_THE_CLOTH = 0.15
 
 
 def examine(scan: Scan, *, viewing: Literal["monitor", "print"] = "monitor") -> Examination:
@@ -167,8 +168,9 @@ class _Survey:
             groups.append(self._cloth_group(threads))
             rest = [p for p in rest if not any(p is m for m in threads.members)]
         merged: dict[tuple[Kind, tuple[int, ...]], _Group] = {}
+        woven = 0.0 if threads is None else max(p.amplitude for p in threads.members)
         for peak in rest:
-            found = self._leftover(peak, tuple(rest))
+            found = self._leftover(peak, tuple(rest), woven)
             key = (found.finding.kind, found.finding.parents)
             if key in merged and found.finding.kind != "banding":
                 merged[key].lines.extend(found.lines)
@@ -236,7 +238,7 @@ class _Survey:
         second = replace(lattice.second, f=lattice.k2)
         return _Group(finding=finding, lines=[(first, (1, 0)), (second, (0, 1))])
 
-    def _leftover(self, peak: Peak, rest: tuple[Peak, ...]) -> _Group:
+    def _leftover(self, peak: Peak, rest: tuple[Peak, ...], woven: float) -> _Group:
         coverage, regions = _extent(peak.weight, peak.weight, self.size)
         parents = rosette_parents(peak.f, self.lattices, 0.2 / self.size)
         settled = True
@@ -245,6 +247,8 @@ class _Survey:
             words = f"the sum of orders {parents[2]}"
         else:
             kind, words = sort_line(peak, rest, ppi=self.scan.ppi, blocks=self.blocks)
+            if kind == "unexplained" and peak.amplitude < _OF_THE_CLOTH * woven:
+                kind, words = "content", "a faint line beside the threads, most likely of the cloth"
             settled = kind != "unexplained"
         finding = Finding(
             kind=kind,

@@ -54,13 +54,36 @@ def line_levels(
     return amplitude, np.sqrt(around / 8), mean, weights
 
 
-def edge_detail(
+def edge_energy(before: NDArray[np.float32], after: NDArray[np.float32]) -> float | None:
+    """Gradient energy kept on the strongest edges, after over before.
+
+    Parameters
+    ----------
+    before, after : ndarray, shape (rows, columns)
+        Lightness L* without the pattern's own bands, so that only picture is compared.
+
+    Returns
+    -------
+    float or None
+        None where the picture has no strong edge.
+    """
+    import cv2
+
+    one, two = (
+        cv2.Sobel(p, cv2.CV_32F, 1, 0, scale=0.125) ** 2 + cv2.Sobel(p, cv2.CV_32F, 0, 1, scale=0.125) ** 2
+        for p in (before, after)
+    )
+    strong = one >= max(float(np.quantile(one, 0.98)), 1.0)
+    return float(two[strong].sum() / one[strong].sum()) if strong.sum() >= 50 else None
+
+
+def edge_widths(
     before: NDArray[np.float32], after: NDArray[np.float32], *, period_px: float
-) -> tuple[float | None, float | None, float | None]:
-    """Gradient energy kept on edges, and the 10-90 % width of the strongest edges.
+) -> tuple[float | None, float | None]:
+    """Median 10-90 % width of the strongest edges before and after, in pixels.
 
     Both pictures are averaged along each edge over more than one period of the pattern,
-    which leaves the edge and takes the pattern away.
+    which leaves the edge and takes most of the pattern away.
 
     Parameters
     ----------
@@ -71,16 +94,14 @@ def edge_detail(
 
     Returns
     -------
-    ratio, width_before_px, width_after_px : float or None
+    before_px, after_px : float or None
         None where the picture has no strong edge.
     """
     profiles = _edge_profiles(before, after, period_px)
     if profiles is None:
-        return None, None, None
-    one, two = profiles
-    energy = [float((np.diff(p, axis=1) ** 2).sum()) for p in (one, two)]
-    widths = [float(np.median([_rise_width(row) for row in p])) for p in (one, two)]
-    return energy[1] / max(energy[0], 1e-9), widths[0], widths[1]
+        return None, None
+    widths = [float(np.median([_rise_width(row) for row in p])) for p in profiles]
+    return widths[0], widths[1]
 
 
 def _edge_profiles(

@@ -13,10 +13,10 @@ from numpy.typing import NDArray
 from moire.descreen import Preparation, apply, margin_px, prepare
 from moire.examine import examine, rgb_codes, tile_size
 from moire.lattice import grid_distance
-from moire.measures import colour_shift, edge_detail, line_levels
+from moire.measures import colour_shift, edge_energy, edge_widths, line_levels
 from moire.model import Examination, Finding, Kind, LineRemoved, Measures, Mending, Recipe, Scan
 from moire.notch import remove_lines
-from moire.nulls import ScreenLattice
+from moire.nulls import ScreenLattice, null_transfer
 from moire.recipe import MENDED_UNASKED, check_fits, prescribe
 from moire.resample import reduce_picture
 from moire.tiles import map_tiles
@@ -91,9 +91,7 @@ def _recognised(after: Examination, before: Examination) -> Examination:
     known = [f for f in before.findings if f.kind in ("halftone", "alias")]
     findings = []
     for found in after.findings:
-        match = next(
-            (k for k in known if found.kind in ("halftone", "alias") and _same_lattice(found, k)), None
-        )
+        match = next((k for k in known if _same_lattice(found, k)), None)
         if match is not None:
             found = replace(
                 found,
@@ -111,6 +109,8 @@ def _recognised(after: Examination, before: Examination) -> Examination:
 
 
 def _same_lattice(a: Finding, b: Finding) -> bool:
+    if a.kind not in ("halftone", "alias"):
+        return False
     first = [(line.fx_cpp, line.fy_cpp) for line in a.lines if line.order == (1, 0)]
     second = [(line.fx_cpp, line.fy_cpp) for line in b.lines if line.order in ((1, 0), (0, 1))]
     return any(grid_distance(np.array(p), np.array(q)) < _SAME_CPP for p in first for q in second)
@@ -124,11 +124,7 @@ def _encoded(scan: Scan) -> Pixels:
 
 
 def _remove(master: Pixels, recipe: Recipe, progress: Callable[[float], None]) -> Pixels:
-    lattices = tuple(
-        ScreenLattice(k1=np.array(r.vectors_cpp[0]), k2=np.array(r.vectors_cpp[1]))
-        for r in recipe.removals
-        if r.method == "descreen"
-    )
+    lattices = _lattices(recipe)
     notches = [r for r in recipe.removals if r.method == "notch"]
     lines = [v for r in notches if r.kind != "rosette" for v in r.vectors_cpp]
     beats = [v for r in notches if r.kind == "rosette" for v in r.vectors_cpp]
@@ -150,6 +146,7 @@ def _remove(master: Pixels, recipe: Recipe, progress: Callable[[float], None]) -
 
         margin = max(margin_px(lattices), _NOTCH_MARGIN_PX if lines or beats else 0)
         mended[..., group] = map_tiles(part, work, size=_TILE_PX, margin=margin, progress=progress)
+    mended = np.clip(mended, 0, 1)
     return master + np.float32(recipe.strength) * (mended - master)
 
 
@@ -222,7 +219,8 @@ def _measure(
                     seen[i], visibility(f, float(swing), float(m), viewing=before.viewing, ppi=scan.ppi)
                 )
     period = max((f.period_px for f in removed), default=2.0)
-    ratio, width_before, width_after = edge_detail(l_one, l_two, period_px=period)
+    ratio = edge_energy(*(_without_screens(p, recipe) for p in (l_one, l_two)))
+    width_before, width_after = edge_widths(l_one, l_two, period_px=period)
     mean_shift, max_shift = colour_shift(one / 255, two / 255, sigma_px=max(2.0, 2 * period))
     changed = np.abs(scan.pixels.astype(np.int32) - mended.pixels.astype(np.int32))
     changed = changed.max(axis=2) if changed.ndim == 3 else changed
@@ -244,6 +242,25 @@ def _measure(
         clipped_share=float(limit.mean()),
     )
     return measures, _worst_places(np.abs(l_one - l_two))
+
+
+def _without_screens(plane: Pixels, recipe: Recipe) -> Pixels:
+    """A plane through the null of every screen removed: what is left of both states is picture."""
+    from scipy import fft
+
+    lattices = _lattices(recipe)
+    if not lattices:
+        return plane
+    spectrum = fft.rfft2(plane) * null_transfer(plane.shape, lattices, [1.0] * len(lattices))
+    return np.asarray(fft.irfft2(spectrum, s=plane.shape), np.float32)
+
+
+def _lattices(recipe: Recipe) -> tuple[ScreenLattice, ...]:
+    return tuple(
+        ScreenLattice(k1=np.array(r.vectors_cpp[0]), k2=np.array(r.vectors_cpp[1]))
+        for r in recipe.removals
+        if r.method == "descreen"
+    )
 
 
 def _inside(scan: Scan, findings: list[Finding]) -> NDArray[np.bool_]:

@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 
 import moire
 from moire.folding import fold
+from moire.loom import Cloth
 from moire.press import InkLayer, Print, Spot, separate
 from moire.scanner import Scanner, Sheet, digitise, sample
 from moire.units import fold_angle, lpi_to_lpcm, page_vector
@@ -111,6 +112,16 @@ def scan_print(sheet: Print, scanner: Scanner, *, seed: int, name: str, unscreen
     screens = tuple(_screen_truth(layer, scanner) for layer in sheet.layers)
     truth = replace(truth, screens=screens, dot_spread_um=sheet.spread_um, dot_gain=sheet.gain)
     return Proof(scan=screened, unscreened=plain, truth=truth)
+
+
+def scan_cloth(cloth: Cloth, scanner: Scanner, *, seed: int, name: str, unscreened_name: str) -> Proof:
+    """Scan a swatch, and a sheet of its mean colour without threads."""
+    woven, plain = _scan_both(cloth, replace(cloth, woven=False), scanner, seed)
+    truth = _truth(cloth, scanner, seed, name, unscreened_name, "cloth")
+    truth = replace(
+        truth, ends_per_cm=cloth.ends_per_cm, picks_per_cm=cloth.picks_per_cm, weave=cloth.pattern
+    )  # fmt: skip
+    return Proof(scan=woven, unscreened=plain, truth=truth)
 
 
 def _scan_both(

@@ -93,6 +93,9 @@ def _what(finding: Finding) -> str:
             f"({s.ruling_lpcm:.2f}/cm) at {_with_sigma(s.angle_deg, s.angle_deg_sigma)} deg"
         )
         return text if finding.settled else text + ", not settled by one scan"
+    if finding.weave is not None:
+        w = finding.weave
+        return f"{w.pattern} weave, {w.ends_per_cm:.2f} ends/cm by {w.picks_per_cm:.2f} picks/cm"
     if finding.parents:
         return f"beat of {' and '.join(str(p) for p in finding.parents)}"
     return finding.evidence[0] if finding.evidence else ""

@@ -10,6 +10,7 @@ import click
 
 from moire.cli.options import PpiType, shared
 
+_CLOTH = re.compile(r"^(?P<ends>[\d.]+)x(?P<picks>[\d.]+):(?P<weave>plain|twill|satin)$")
 _SCREEN = re.compile(r"^(?P<lpi>[\d.]+)@(?P<angle>-?[\d.]+):(?P<ink>[a-z]+)$")
 
 
@@ -23,6 +24,9 @@ _SCREEN = re.compile(r"^(?P<lpi>[\d.]+)@(?P<angle>-?[\d.]+):(?P<ink>[a-z]+)$")
     multiple=True,
     metavar="LPI@ANGLE:INK",
     help="One ink's screen; repeat for each ink.",
+)
+@click.option(
+    "--cloth", metavar="ENDSxPICKS:WEAVE", help="A swatch instead: threads per cm, plain|twill|satin."
 )
 @click.option("--spot", type=click.Choice(["round", "ellipse", "diamond", "square", "line"]), default="round",
               show_default=True, help="Dot shape.")  # fmt: skip
@@ -64,7 +68,7 @@ def command(output: str, screens: tuple[str, ...], **flags: Any) -> int:
     import msgspec
 
     from moire.cli.console import console, print_json
-    from moire.proof import print_sheet, scan_print
+    from moire.proof import print_sheet, scan_cloth, scan_print
     from moire.scanfile import check_target, write, write_bytes
     from moire.scanner import Scanner
 
@@ -74,17 +78,21 @@ def command(output: str, screens: tuple[str, ...], **flags: Any) -> int:
     inputs = [flags["picture"]] if flags["picture"] else []
     for path in (target, plain, truth):
         check_target(path, force=flags["force"], inputs=inputs)
-    orders = _orders(screens, flags["spot"])
-    picture = _picture(flags["picture"])
-    width, height = _size(flags["size"], picture.shape)
     scanner = Scanner(
         ppi=flags["ppi"], turn_deg=flags["turn"], noise=flags["noise"], lens_px=flags["lens"],
         jpeg_quality=flags["jpeg"],
     )  # fmt: skip
-    sheet = print_sheet(
-        picture, orders, width_in=width, height_in=height, gain=flags["gain"], seed=flags["seed"]
-    )  # fmt: skip
-    made = scan_print(sheet, scanner, seed=flags["seed"], name=target.name, unscreened_name=plain.name)
+    names = {"seed": flags["seed"], "name": target.name, "unscreened_name": plain.name}
+    if flags["cloth"]:
+        made = scan_cloth(_cloth(flags["cloth"], flags["size"], flags["seed"]), scanner, **names)
+    else:
+        orders = _orders(screens, flags["spot"])
+        picture = _picture(flags["picture"])
+        width, height = _size(flags["size"], picture.shape)
+        sheet = print_sheet(
+            picture, orders, width_in=width, height_in=height, gain=flags["gain"], seed=flags["seed"]
+        )
+        made = scan_print(sheet, scanner, **names)
     for pixels, path in ((made.unscreened, plain), (made.scan, target)):
         write(_as_scan(pixels, flags["ppi"], path.name), path, force=flags["force"], inputs=inputs)
     text = msgspec.json.format(msgspec.json.encode(made.truth), indent=1)
@@ -116,6 +124,23 @@ def _orders(screens: tuple[str, ...], spot: Any) -> Any:
     if len({o.ink for o in out}) < len(out):
         raise click.BadParameter("each ink can have one screen only", param_hint="--screen")
     return tuple(out)
+
+
+def _cloth(text: str, size: str | None, seed: int) -> Any:
+    from moire.loom import Cloth
+
+    match = _CLOTH.match(text)
+    setts = (float(match["ends"]), float(match["picks"])) if match else (0.0, 0.0)
+    if match is None or not all(1 <= s <= 100 for s in setts):
+        raise click.BadParameter(
+            f"{text!r}: write ENDSxPICKS:WEAVE, 1 to 100 threads per cm, plain, twill or satin",
+            param_hint="--cloth",
+        )
+    width, height = _size(size, (1, 1))
+    return Cloth(
+        width_in=width, height_in=height, ends_per_cm=setts[0], picks_per_cm=setts[1],
+        pattern=match["weave"], seed=seed,
+    )  # type: ignore[arg-type]  # fmt: skip
 
 
 def _picture(path: str | None) -> Any:
