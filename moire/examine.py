@@ -16,7 +16,8 @@ from moire.grids import BLOCK_SCORE, BlockGrid, find_block_grid, sort_line
 from moire.lattice import Lattice, find_lattices, missing_partners
 from moire.measures import line_levels
 from moire.model import Examination, Finding, Ink, Kind, Line, Scan, Viewing
-from moire.peaks import Peak, find_candidates, measure_bins, polish, refine
+from moire.peaks import Peak, find_candidates, measure_bins
+from moire.refinement import polish, refine
 from moire.screens import is_halftone, name_inks, order_of
 from moire.spectrum import tile_spectrum
 from moire.verdict import judge
@@ -197,8 +198,9 @@ class _Survey:
             evidence=(f"thread lines near both axes, bound as in a {threads.pattern} weave",),
         )
         named: list[tuple[Peak, tuple[int, int] | None]] = [(threads.warp, (1, 0)), (threads.weft, (0, 1))]
-        rest = [(p, None) for p in threads.members if p is not threads.warp and p is not threads.weft]
-        return _Group(finding=finding, lines=named + rest)
+        rest = (p for p in threads.members if p is not threads.warp and p is not threads.weft)
+        named.extend((p, None) for p in rest)
+        return _Group(finding=finding, lines=named)
 
     def _screen_group(self, lattice: Lattice, ink: Ink) -> _Group:
         coverage, regions = _extent(lattice.first.weight, lattice.second.weight, self.size)

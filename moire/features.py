@@ -34,7 +34,7 @@ def channel_features(
     """Feature pictures and steering inputs of every channel, on the tangent encoding."""
     period = float(np.mean([g.period_px for g in lattices]))
     channels = encoded.shape[2]
-    luma = np.float32(_LUMA) if channels == 3 else np.float32([1.0])
+    luma = np.asarray(_LUMA if channels == 3 else (1.0,), np.float32)
     l_null, l_4, l_10, l_all = (
         np.ascontiguousarray(p @ luma) for p in (nulls[1], nulls[4], nulls[10], encoded)
     )
@@ -105,7 +105,9 @@ def _tensor(plane: Plane, sigma: float) -> tuple[Plane, Plane, Plane]:
         cv2.Scharr(plane, cv2.CV_32F, 1, 0, scale=1 / 32),
         cv2.Scharr(plane, cv2.CV_32F, 0, 1, scale=1 / 32),
     )
-    xx, xy, yy = (cv2.GaussianBlur(p, (0, 0), sigma) for p in (gx * gx, gx * gy, gy * gy))
+    xx, xy, yy = (
+        np.asarray(cv2.GaussianBlur(p, (0, 0), sigma), np.float32) for p in (gx * gx, gx * gy, gy * gy)
+    )
     return xx, xy, yy
 
 

@@ -78,7 +78,7 @@ def overview(rgb: NDArray[np.uint8], *, limit: int = OVERVIEW_PX) -> Picture:
     if share >= 1:
         return _picture(rgb, reduced=False)
     size = (max(1, round(columns * share)), max(1, round(rows * share)))
-    small = reduce_picture(rgb.astype(np.float32) / 255, *size)
+    small = reduce_picture(rgb.astype(np.float32) / np.float32(255), *size)
     return _picture(np.rint(small * 255).astype(np.uint8), reduced=True)
 
 

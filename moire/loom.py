@@ -48,7 +48,7 @@ class Cloth:
     def reflectance(self, x0: int, y0: int, width: int, height: int) -> NDArray[np.float32]:
         """Linear RGB reflectance of a window of fine pixels, shape (height, width, 3)."""
         pattern = PATTERNS[self.pattern]
-        warp, weft = np.float32(self.warp), np.float32(self.weft)
+        warp, weft = np.asarray(self.warp, np.float32), np.asarray(self.weft, np.float32)
         if not self.woven:
             share = float(pattern.mean())
             mean = np.float32(_MEAN_SHADE) * (share * warp + (1 - share) * weft)
@@ -68,7 +68,7 @@ class Cloth:
         yarn = np.where(on_top[..., None], warp, weft)
         return np.asarray(shade[..., None] * yarn, np.float32)
 
-    def _wander(self, along_cm: NDArray[np.float64], direction: int) -> NDArray[np.float64]:
+    def _wander(self, along_cm: NDArray[np.floating], direction: int) -> NDArray[np.float64]:
         rng = np.random.default_rng((self.seed, direction))
         rates, phases = rng.uniform(0.1, 0.9, 4), rng.uniform(0, 2 * np.pi, 4)
         waves = np.sin(2 * np.pi * rates[:, None] * along_cm + phases[:, None])

@@ -167,7 +167,7 @@ def _as_scan(mended: Pixels, scan: Scan, master: Pixels) -> Scan:
     pixels = np.where(still, scan.pixels, pixels)
     pixels.setflags(write=False)
     depth = 8 if scan.bit_depth == 1 else scan.bit_depth
-    digest = hashlib.sha256(np.ascontiguousarray(pixels)).hexdigest()
+    digest = hashlib.sha256(pixels.tobytes()).hexdigest()
     return replace(scan, pixels=pixels, bit_depth=depth, sha256=digest, jpeg=False)
 
 
@@ -181,7 +181,9 @@ def _reduced(mended: Pixels, scan: Scan, to_ppi: float) -> Scan:
     out = _as_scan(small, blank, np.full_like(small, 2.0))
     alpha = None
     if scan.alpha is not None:
-        plane = reduce_picture(scan.alpha[..., None].astype(np.float32) / scan.full_scale, width, height)
+        plane = reduce_picture(
+            scan.alpha[..., None].astype(np.float32) / np.float32(scan.full_scale), width, height
+        )
         alpha = np.rint(plane[..., 0] * scan.full_scale).astype(scan.alpha.dtype)
     rate = (to_ppi, to_ppi)
     return replace(out, ppi=rate, ppi_in_file=rate, alpha=alpha)
@@ -221,7 +223,9 @@ def _measure(
     period = max((f.period_px for f in removed), default=2.0)
     ratio = edge_energy(*(_without_screens(p, recipe) for p in (l_one, l_two)))
     width_before, width_after = edge_widths(l_one, l_two, period_px=period)
-    mean_shift, max_shift = colour_shift(one / 255, two / 255, sigma_px=max(2.0, 2 * period))
+    mean_shift, max_shift = colour_shift(
+        one / np.float32(255), two / np.float32(255), sigma_px=max(2.0, 2 * period)
+    )
     changed = np.abs(scan.pixels.astype(np.int32) - mended.pixels.astype(np.int32))
     changed = changed.max(axis=2) if changed.ndim == 3 else changed
     outside = ~_inside(scan, removed)

@@ -51,12 +51,12 @@ def _fit(plane: NDArray[np.float32], lines: list[NDArray[np.float64]], reach: fl
     """Sum of the fitted lines: first plainly, then twice with weights from what that leaves."""
     import cv2
 
-    waves = [_wave(*plane.shape, f) for f in lines]
+    waves = [_wave(plane.shape, f) for f in lines]
     slow = max(1 / max(min(float(np.hypot(*f)) for f in lines), 1e-3), 4.0)
     even = np.ones_like(plane)
     amplitudes = _demodulate(plane - cv2.GaussianBlur(plane, (0, 0), slow), even, waves, reach)
     for _ in range(2):
-        base = cv2.bilateralFilter(plane - _sum(amplitudes, waves), 0, 12 / 255, 2)
+        base = np.asarray(cv2.bilateralFilter(plane - _sum(amplitudes, waves), 0, 12 / 255, 2), np.float32)
         weight = _evenness(plane - _sum(amplitudes, waves), base)
         amplitudes = _demodulate(plane - base, weight, waves, reach)
     rest = plane - base - _sum(amplitudes, waves)
@@ -85,13 +85,14 @@ def _demodulate(
 ) -> list[NDArray[np.complex64]]:
     """Slowly varying complex amplitudes, each fitted to what the other lines leave."""
     level = np.maximum(_smooth(weight, reach), 1e-6)
-    amplitudes = [np.zeros(residual.shape, np.complex64) for _ in waves]
+    amplitudes: list[NDArray[np.complex64]] = [np.zeros_like(wave) for wave in waves]
     left = residual.copy()
     for _ in range(_ROUNDS if len(waves) > 1 else 1):
         for i, wave in enumerate(waves):
             left += 2 * np.real(amplitudes[i] * wave)
             product = weight * left * np.conj(wave)
-            amplitudes[i] = (_smooth(product.real, reach) + 1j * _smooth(product.imag, reach)) / level
+            fitted = (_smooth(product.real, reach) + 1j * _smooth(product.imag, reach)) / level
+            amplitudes[i] = fitted.astype(np.complex64)
             left -= 2 * np.real(amplitudes[i] * wave)
     return amplitudes
 
@@ -103,9 +104,9 @@ def _sum(amplitudes: list[NDArray[np.complex64]], waves: list[NDArray[np.complex
     return total
 
 
-def _wave(rows: int, columns: int, f: NDArray[np.float64]) -> NDArray[np.complex64]:
-    along_x = np.exp(2j * np.pi * f[0] * np.arange(columns))
-    along_y = np.exp(2j * np.pi * f[1] * np.arange(rows))
+def _wave(shape: tuple[int, ...], f: NDArray[np.float64]) -> NDArray[np.complex64]:
+    along_x = np.exp(2j * np.pi * f[0] * np.arange(shape[1]))
+    along_y = np.exp(2j * np.pi * f[1] * np.arange(shape[0]))
     return np.asarray(along_y[:, None] * along_x[None, :], np.complex64)
 
 
@@ -122,7 +123,7 @@ def _above_background(
     power = np.zeros(residual.shape, np.float32)
     for turn in (0.25, 0.75):
         aside = f + gap * 2 * np.array([np.cos(2 * np.pi * turn), np.sin(2 * np.pi * turn)])
-        product = weight * residual * np.conj(_wave(*residual.shape, aside))
+        product = weight * residual * np.conj(_wave(residual.shape, aside))
         local = (_smooth(product.real, reach) ** 2 + _smooth(product.imag, reach) ** 2) / level**2
         power += local / 2
     size2 = np.maximum(np.abs(amplitude) ** 2, 1e-12)

@@ -80,13 +80,14 @@ class Print:
         sigma = self.spread_um / 25400.0 * self.dpi
         margin = int(np.ceil(4 * sigma)) + 1
         window = (x0 - margin, y0 - margin, width + 2 * margin, height + 2 * margin)
-        sheet = np.ones((height, width, 3), np.float32) * np.float32(self.paper)
+        sheet = np.ones((height, width, 3), np.float32) * np.asarray(self.paper, np.float32)
         for layer in self.layers:
             ink = _lay_ink(self, layer, window)
             if sigma > 0:
-                ink = cv2.GaussianBlur(ink, (0, 0), sigma, borderType=cv2.BORDER_REPLICATE)
+                blurred = cv2.GaussianBlur(ink, (0, 0), sigma, borderType=cv2.BORDER_REPLICATE)
+                ink = np.asarray(blurred, np.float32)
             ink = ink[margin : margin + height, margin : margin + width]
-            sheet *= 1 - ink[..., None] * (1 - np.float32(INKS[layer.ink]))
+            sheet *= 1 - ink[..., None] * (1 - np.asarray(INKS[layer.ink], np.float32))
         return sheet
 
 
@@ -98,12 +99,15 @@ def _lay_ink(sheet: Print, layer: InkLayer, window: tuple[int, int, int, int]) -
     sx, sy = columns / (sheet.width_in * sheet.dpi), rows / (sheet.height_in * sheet.dpi)
     # Device pixel centre (x + 1/2) lies at picture pixel (x + 1/2) s - 1/2.
     to_picture = np.array([[sx, 0, (x0 + 0.5) * sx - 0.5], [0, sy, (y0 + 0.5) * sy - 0.5]])
-    wanted: Array = cv2.warpAffine(
-        layer.coverage,
-        to_picture,
-        (width, height),
-        flags=cv2.INTER_LINEAR | cv2.WARP_INVERSE_MAP,
-        borderMode=cv2.BORDER_REPLICATE,
+    wanted = np.asarray(
+        cv2.warpAffine(
+            layer.coverage,
+            to_picture,
+            (width, height),
+            flags=cv2.INTER_LINEAR | cv2.WARP_INVERSE_MAP,
+            borderMode=cv2.BORDER_REPLICATE,
+        ),
+        np.float32,
     )
     x = (np.arange(x0, x0 + width) + 0.5) / sheet.dpi
     y = (np.arange(y0, y0 + height) + 0.5) / sheet.dpi
@@ -120,7 +124,7 @@ def _lay_ink(sheet: Print, layer: InkLayer, window: tuple[int, int, int, int]) -
 
 
 def _cell_index(
-    along_columns: NDArray[np.float64], along_rows: NDArray[np.float64], shift: float
+    along_columns: NDArray[np.floating], along_rows: NDArray[np.floating], shift: float
 ) -> NDArray[np.int32]:
     cycles = np.mod(along_columns, 1.0)[None, :] + np.mod(along_rows + shift, 1.0)[:, None]
     return (cycles * _CELL).astype(np.int32) % _CELL
@@ -174,7 +178,7 @@ def separate(picture: Array, inks: tuple[str, ...]) -> dict[str, Array]:
     coloured = [ink for ink in inks if ink in channel]
     amounts = {ink: absorbed[..., channel[ink]] / (1 - INKS[ink][channel[ink]]) for ink in coloured}
     if "black" in inks:
-        luminance = absorbed @ np.float32([0.2126, 0.7152, 0.0722])
+        luminance = absorbed @ np.asarray([0.2126, 0.7152, 0.0722], np.float32)
         shared = absorbed.min(axis=2) if coloured else luminance
         black = np.clip((shared - 0.35) / 0.65, 0, 1) * 0.9 if coloured else shared / 0.98
         amounts = {ink: (a - black) / np.maximum(1 - black, 0.05) for ink, a in amounts.items()}

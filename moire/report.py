@@ -131,17 +131,14 @@ def _removed_lines(mending: Mending | None) -> list[dict[str, Any]]:
     """Lines of the mending with the label of the finding that they belong to."""
     if mending is None:
         return []
-    owner: dict[tuple[float, float], tuple[str, Finding]] = {}
-    for label, finding in zip(labels(mending.before.findings), mending.before.findings, strict=True):
-        for line in finding.lines:
-            owner[(line.fx_cpp, line.fy_cpp)] = (label, finding)
+    owner: dict[tuple[float, float], tuple[str, Finding | None]] = {}
+    for mark, found in zip(labels(mending.before.findings), mending.before.findings, strict=True):
+        owner.update({(line.fx_cpp, line.fy_cpp): (mark, found) for line in found.lines})
     out = []
     for removed in mending.measures.lines:
-        label, finding = owner.get((removed.fx_cpp, removed.fy_cpp), ("", None))
-        order = None
-        if finding is not None:
-            order = next(
-                i.order for i in finding.lines if (i.fx_cpp, i.fy_cpp) == (removed.fx_cpp, removed.fy_cpp)
-            )
+        place = (removed.fx_cpp, removed.fy_cpp)
+        label, finding = owner.get(place, ("", None))
+        lines = () if finding is None else finding.lines
+        order = next((line.order for line in lines if (line.fx_cpp, line.fy_cpp) == place), None)
         out.append({"label": label, "order": order, "line": removed})
     return out

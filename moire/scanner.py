@@ -85,7 +85,7 @@ def digitise(linear: NDArray[np.float32], scanner: Scanner, rng: np.random.Gener
     if scanner.jpeg_quality is None:
         return pixels
     _, code = cv2.imencode(".jpg", pixels[..., ::-1], [cv2.IMWRITE_JPEG_QUALITY, scanner.jpeg_quality])
-    return np.ascontiguousarray(cv2.imdecode(code, cv2.IMREAD_COLOR)[..., ::-1])
+    return np.ascontiguousarray(np.asarray(cv2.imdecode(code, cv2.IMREAD_COLOR), np.uint8)[..., ::-1])
 
 
 def _sample_tile(
@@ -122,7 +122,7 @@ def _sample_tile(
     kernels = [_pixel_kernel(scanner, s) for s in sub]
     fine = cv2.sepFilter2D(fine, -1, kernels[0], kernels[1], borderType=cv2.BORDER_REPLICATE)
     centre = fine[sub[1] // 2 :: sub[1], sub[0] // 2 :: sub[0]]
-    return centre[margin : margin + h, margin : margin + w]
+    return np.asarray(centre[margin : margin + h, margin : margin + w], np.float32)
 
 
 def _pixel_kernel(scanner: Scanner, sub: int) -> NDArray[np.float64]:

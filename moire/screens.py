@@ -12,6 +12,7 @@ from moire.model import Ink, Screen
 from moire.peaks import Peak
 from moire.units import fold_angle, lpi_to_lpcm, page_angle
 
+_ALIKE = 0.85
 # What each ink absorbs of red, green and blue, relative to its main band; process inks on coated
 # paper (ISO 12647-2 solids, value from memory).
 SIGNATURES: dict[Ink, tuple[float, float, float]] = {
@@ -41,7 +42,10 @@ def name_inks(lattices: tuple[Lattice, ...]) -> tuple[Ink, ...]:
     for row, column in zip(rows, columns, strict=True):
         if likeness[row, column] > likeness[row].max() - 0.15:
             names[row] = inks[column]
-    return tuple(name if likeness[row].max() > 0.85 else "unknown" for row, name in enumerate(names))
+    unsure = likeness.max(axis=1) <= _ALIKE
+    for row in np.flatnonzero(unsure):
+        names[row] = "unknown"
+    return tuple(names)
 
 
 def _colour(lattice: Lattice) -> NDArray[np.float64]:

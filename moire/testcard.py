@@ -117,4 +117,4 @@ def _reduced(picture: object) -> NDArray[np.float32]:
     from PIL import Image
 
     assert isinstance(picture, Image.Image)
-    return np.asarray(picture.reduce(_OVERSAMPLING), np.float32) / 255
+    return np.asarray(picture.reduce(_OVERSAMPLING), np.float32) / np.float32(255)

@@ -4,7 +4,8 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 
-from moire.peaks import Candidate, find_candidates, polish, refine
+from moire.peaks import Candidate, find_candidates
+from moire.refinement import polish, refine
 from moire.spectrum import tile_spectrum
 
 SIZE = 128

@@ -137,10 +137,15 @@ def _cloth(text: str, size: str | None, seed: int) -> Any:
             param_hint="--cloth",
         )
     width, height = _size(size, (1, 1))
+    weave: Any = match["weave"]
     return Cloth(
-        width_in=width, height_in=height, ends_per_cm=setts[0], picks_per_cm=setts[1],
-        pattern=match["weave"], seed=seed,
-    )  # type: ignore[arg-type]  # fmt: skip
+        width_in=width,
+        height_in=height,
+        ends_per_cm=setts[0],
+        picks_per_cm=setts[1],
+        pattern=weave,
+        seed=seed,
+    )
 
 
 def _picture(path: str | None) -> Any:

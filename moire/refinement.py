@@ -1,0 +1,195 @@
+"""Frequencies refined from the phases of the tiles that carry a line.
+
+Half-overlapped tiles see a line's phase advance from tile to tile; the advance gives the
+frequency to a small fraction of a bin, the scatter its uncertainty.
+"""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from moire.peaks import Candidate, Peak
+from moire.spectrum import tile_means, tile_phasors
+
+_TONE_FLOOR = 20.0
+
+
+def refine(
+    channels: NDArray[np.float32], candidates: tuple[Candidate, ...], *, size: int
+) -> tuple[Peak, ...]:
+    """Peaks of the candidate bins, refined by the phases of half-overlapped tiles.
+
+    Parameters
+    ----------
+    channels : ndarray, shape (rows, columns, channels)
+        Code values on a 0..255 scale.
+    candidates : tuple of Candidate
+        Bins of a spectrum of tiles of `size`.
+    size : int
+        Tile side in pixels.
+    """
+    if not candidates:
+        return ()
+    bins = np.array([(c.kx / size, c.ky / size) for c in candidates])
+    phasors, x, y = tile_phasors(channels, bins, size=size)
+    tone = tile_means(channels, size=size)
+    return tuple(
+        _refine_one(candidate, f0, v, tone, x, y, size)
+        for candidate, f0, v in zip(candidates, bins, phasors, strict=True)
+    )
+
+
+def polish(channels: NDArray[np.float32], peaks: tuple[Peak, ...], *, size: int) -> tuple[Peak, ...]:
+    """Peaks with frequencies refined once more on tiles of another `size` (finer is better).
+
+    On true prints the tone under the screen limits the phase, and a smaller aperture sees
+    less of it change.
+    """
+    if not peaks:
+        return ()
+    at = np.array([p.f for p in peaks])
+    phasors, x, y = tile_phasors(channels, at, size=size)
+    out = []
+    for peak, f0, v in zip(peaks, at, phasors, strict=True):
+        mixed = v.mean(axis=2)
+        weighted, _ = _soft_clip(mixed)
+        step, sigma, _ = _climb(weighted**2 if peak.doubled else weighted, x, y)
+        scale = 2 if peak.doubled else 1
+        out.append(replace(peak, f=f0 + step / scale, sigma=sigma / scale))
+    return tuple(out)
+
+
+def _refine_one(
+    candidate: Candidate,
+    f0: NDArray[np.float64],
+    v: NDArray[np.complex64],
+    tone: NDArray[np.float32],
+    x: NDArray[np.float64],
+    y: NDArray[np.float64],
+    size: int,
+) -> Peak:
+    mixed = v.mean(axis=2)
+    weighted, weight = _soft_clip(mixed)
+    step, sigma, coherence = _climb(weighted, x, y)
+    doubled = False
+    if coherence < 0.9:
+        unit = np.where(np.abs(weighted) > 0, weighted / np.maximum(np.abs(weighted), 1e-9), 0)
+        twice, twice_sigma, twice_coherence = _climb(np.abs(weighted) * unit**2, x, y)
+        if twice_coherence > max(0.9, coherence + 0.1):
+            doubled, step, sigma, coherence = True, twice / 2, twice_sigma / 2, twice_coherence
+    demodulated = v * np.exp(-2j * np.pi * (step[0] * x[None, :] + step[1] * y[:, None]))[..., None]
+    reference = demodulated.mean(axis=2)
+    unit_reference = weight * np.conj(reference) / np.maximum(np.abs(reference), 1e-9)
+    # Ink absorbs a share of the light, so the swing is taken over the local tone.
+    relative = demodulated * unit_reference[..., None] / (tone + _TONE_FLOOR)
+    colour = np.real(relative.sum(axis=(0, 1)))
+    strong = np.abs(mixed)
+    amplitude = float((strong * weight).sum() / max(weight.sum(), 1e-9))
+    return Peak(
+        f=f0 + step,
+        sigma=sigma,
+        z=candidate.z,
+        excess_nat=candidate.excess_nat,
+        amplitude=amplitude,
+        coherence=coherence,
+        local_coherence=_local_coherence(weighted),
+        doubled=doubled,
+        tiles=float((weight > 0.4).sum()),
+        bin_cpp=1 / size,
+        off_bin=float(np.hypot(*step) * size),
+        colour=colour / max(float(np.abs(colour).mean()), 1e-9),
+        weight=weight.astype(np.float32),
+    )
+
+
+def _soft_clip(v: NDArray[np.complex64]) -> tuple[NDArray[np.complex128], NDArray[np.float64]]:
+    """Phasors and weights that follow the tiles where the line is, none of them dominant."""
+    size = np.abs(v)
+    count = max(1, size.size // 20)
+    strong = float(np.partition(size, size.size - count, axis=None)[-count:].mean())
+    if strong <= 0:
+        return np.zeros(v.shape, complex), np.zeros(v.shape)
+    weight = np.clip((size / strong - 0.15) / 0.35, 0, 1)
+    return v * weight / np.maximum(1, size / strong), weight
+
+
+def _local_coherence(v: NDArray[np.complex128]) -> float:
+    """Agreement of the phase steps between tiles one size (two hops) apart, 0..1."""
+    pairs = [v[2:] * np.conj(v[:-2])] if v.shape[0] > 2 else []
+    across = [v[:, 2:] * np.conj(v[:, :-2])] if v.shape[1] > 2 else []
+    total = [
+        float(np.abs(p.sum() / max(np.abs(p).sum(), 1e-12))) for p in pairs + across if np.abs(p).sum() > 0
+    ]
+    return float(np.mean(total)) if total else 0.0
+
+
+def _climb(
+    v: NDArray[np.complex128], x: NDArray[np.float64], y: NDArray[np.float64]
+) -> tuple[NDArray[np.float64], NDArray[np.float64], float]:
+    """Frequency step that aligns the phasors, its sigma, and the coherence reached.
+
+    Maximises ``|sum v exp(-2 pi i d.r)|^2`` over tile centres r: a zero-padded FFT of the
+    tile grid, then Newton steps on the phase.
+    """
+    total = float(np.abs(v).sum())
+    if total <= 0:
+        return np.zeros(2), np.full(2, np.inf), 0.0
+    hop_x = x[1] - x[0] if len(x) > 1 else 1.0
+    hop_y = y[1] - y[0] if len(y) > 1 else 1.0
+    pad = (4 * v.shape[0], 4 * v.shape[1])
+    power = np.abs(np.fft.fft2(v, pad))
+    row, column = np.unravel_index(int(np.argmax(power)), power.shape)
+    step = np.array([np.fft.fftfreq(pad[1], hop_x)[column], np.fft.fftfreq(pad[0], hop_y)[row]])
+    gx, gy = np.meshgrid(x - x.mean(), y - y.mean())
+    design = np.stack([np.ones(v.size), 2 * np.pi * gx.ravel(), 2 * np.pi * gy.ravel()], axis=1)
+    flat = v.ravel()
+    free = [0] + ([1] if v.shape[1] > 1 else []) + ([2] if v.shape[0] > 1 else [])
+    rotated = flat
+    for _ in range(8):
+        turned = flat * np.exp(-1j * (design[:, 1] * step[0] + design[:, 2] * step[1]))
+        mean = turned.sum()
+        rotated = turned * np.conj(mean) / max(abs(mean), 1e-12)
+        weight = np.abs(flat) * np.maximum(np.cos(np.angle(rotated)), 0)
+        normal = (design * weight[:, None]).T @ design
+        move = np.zeros(3)
+        move[free] = np.linalg.lstsq(
+            normal[np.ix_(free, free)], design[:, free].T @ rotated.imag, rcond=None
+        )[0]
+        limit = 0.5 / np.array([max(np.ptp(x), hop_x), max(np.ptp(y), hop_y)])
+        step = step + np.clip(move[1:], -limit, limit)
+        if np.all(np.abs(move[1:]) < 1e-4 * limit):
+            break
+    sigma = _sandwich(design, free, rotated, np.abs(flat), v.shape)
+    return step, sigma, float(np.abs(rotated.sum()) / total)
+
+
+def _sandwich(
+    design: NDArray[np.float64],
+    free: list[int],
+    rotated: NDArray[np.complex128],
+    weight: NDArray[np.float64],
+    shape: tuple[int, ...],
+) -> NDArray[np.float64]:
+    """Uncertainty of the step from residual phases, summed by blocks of tiles.
+
+    Blocks make the estimate honest about overlap and about tone that spans several tiles
+    (cluster-robust covariance: Liang and Zeger, Biometrika 73 (1986) 13).
+    """
+    block = 3 if min(shape) >= 9 else 2
+    columns = -(-shape[1] // block)
+    rows_at, columns_at = np.divmod(np.arange(weight.size), shape[1])
+    label = (rows_at // block) * columns + columns_at // block
+    used = design[:, free]
+    scores = used * rotated.imag[:, None]
+    sums = np.zeros((label.max() + 1, len(free)))
+    np.add.at(sums, label, scores)
+    blocks = int((np.bincount(label, weight) > 0).sum())
+    inverse = np.linalg.pinv((used * weight[:, None]).T @ used)
+    correction = blocks / max(blocks - len(free), 0.5)
+    covariance = inverse @ (sums.T @ sums) @ inverse * correction
+    sigma = np.full(3, np.inf)
+    sigma[free] = np.sqrt(np.maximum(np.diag(covariance), 0))
+    return sigma[1:]
