@@ -147,10 +147,8 @@ class _Tangent:
     def of(linear: NDArray[np.float32], period: float) -> _Tangent:
         import cv2
 
-        base = cv2.GaussianBlur(linear, (0, 0), period / 2, borderType=cv2.BORDER_REFLECT).reshape(
-            linear.shape
-        )
-        base = np.maximum(base, np.float32(0.003))
+        tone = cv2.GaussianBlur(linear, (0, 0), period / 2, borderType=cv2.BORDER_REFLECT)
+        base = np.asarray(np.maximum(tone.reshape(linear.shape), 0.003), np.float32)
         encoded = srgb_encode(base) + _slope(base) * (linear - base)
         return _Tangent(base=base, encoded=encoded.astype(np.float32))
 

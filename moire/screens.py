@@ -34,7 +34,8 @@ def name_inks(lattices: tuple[Lattice, ...]) -> tuple[Ink, ...]:
     if not lattices:
         return ()
     if len(lattices[0].first.colour) != 3:
-        return ("black",) if len(lattices) == 1 else ("unknown",) * len(lattices)
+        only: Ink = "black" if len(lattices) == 1 else "unknown"
+        return (only,) * len(lattices)
     inks = list(SIGNATURES)
     likeness = np.array([[_cosine(_colour(g), SIGNATURES[ink]) for ink in inks] for g in lattices])
     names: list[Ink] = [inks[int(i)] for i in likeness.argmax(axis=1)]
