@@ -18,7 +18,7 @@ from moire.measures import line_levels
 from moire.model import Examination, Finding, Ink, Kind, Line, Scan, Viewing
 from moire.peaks import Peak, find_candidates, measure_bins
 from moire.refinement import polish, refine
-from moire.screens import is_halftone, name_inks, order_of
+from moire.screens import is_halftone, name_inks, on_axis, order_of
 from moire.spectrum import tile_spectrum
 from moire.verdict import judge
 from moire.vision import lightness, viewing_condition, visibility
@@ -26,6 +26,7 @@ from moire.weaves import Threads, find_threads, measure_weave
 
 _TILES_AT_MOST = 1200
 _CALLED_Z = 3.0
+_TEXTURE_LINES, _TEXTURE_OBLIQUE = 4, 2
 _OF_THE_CLOTH = 0.15
 
 
@@ -112,7 +113,8 @@ class _Survey:
         area = channels.shape[0] * channels.shape[1]
         pitch = max(size // 2, math.isqrt(area // _TILES_AT_MOST))
         spectrum = tile_spectrum(mixed, size=size, pitch=pitch)
-        peaks = tuple(p for p in refine(channels, find_candidates(spectrum), size=size) if _credible(p))
+        seen = refine(channels, find_candidates(spectrum), size=size)
+        peaks = tuple(p for p in seen if _credible(p))
         # A partner too weak to stand out by itself counts where a coherent line calls for it.
         called = measure_bins(spectrum, missing_partners(peaks, size=size, aspect=_aspect(scan)))
         called = tuple(c for c in called if c.z > _CALLED_Z)
@@ -120,7 +122,7 @@ class _Survey:
         peaks = polish(channels, peaks, size=min(size, 64))
         jpeg = scan.jpeg or blocks is not None
         lattices = find_lattices(peaks, size=size, aspect=_aspect(scan), jpeg=jpeg)
-        lattices = tuple(g for g in lattices if is_halftone(g, lattices, peaks, size))
+        lattices = tuple(g for g in lattices if is_halftone(g, lattices, seen, size))
         return _Survey(
             scan=scan, channels=channels, size=size, peaks=peaks, lattices=lattices, blocks=blocks
         )  # fmt: skip
@@ -170,8 +172,9 @@ class _Survey:
             rest = [p for p in rest if not any(p is m for m in threads.members)]
         merged: dict[tuple[Kind, tuple[int, ...]], _Group] = {}
         woven = 0.0 if threads is None else max(p.amplitude for p in threads.members)
+        textured = not self.lattices and _is_texture(rest)
         for peak in rest:
-            found = self._leftover(peak, tuple(rest), woven)
+            found = self._leftover(peak, tuple(rest), woven=woven, textured=textured)
             key = (found.finding.kind, found.finding.parents)
             if key in merged and found.finding.kind != "banding":
                 merged[key].lines.extend(found.lines)
@@ -240,7 +243,7 @@ class _Survey:
         second = replace(lattice.second, f=lattice.k2)
         return _Group(finding=finding, lines=[(first, (1, 0)), (second, (0, 1))])
 
-    def _leftover(self, peak: Peak, rest: tuple[Peak, ...], woven: float) -> _Group:
+    def _leftover(self, peak: Peak, rest: tuple[Peak, ...], *, woven: float, textured: bool) -> _Group:
         coverage, regions = _extent(peak.weight, peak.weight, self.size)
         parents = rosette_parents(peak.f, self.lattices, 0.2 / self.size)
         settled = True
@@ -251,6 +254,11 @@ class _Survey:
             kind, words = sort_line(peak, rest, ppi=self.scan.ppi, blocks=self.blocks)
             if kind == "unexplained" and peak.amplitude < _OF_THE_CLOTH * woven:
                 kind, words = "content", "a faint line beside the threads, most likely of the cloth"
+            if kind in ("unexplained", "banding") and textured:
+                kind, words = (
+                    "content",
+                    "one of many regular lines in several directions: a texture such as cloth",
+                )
             settled = kind != "unexplained"
         finding = Finding(
             kind=kind,
@@ -275,8 +283,15 @@ class _Group:
 
 
 def _credible(peak: Peak) -> bool:
-    in_step = max(peak.coherence, peak.local_coherence) > 0.85
+    # A line far above its background is there, even where its phase wanders with the paper.
+    in_step = max(peak.coherence, peak.local_coherence) > (0.75 if peak.z > 20 else 0.85)
     return in_step and peak.tiles >= 6 and peak.off_bin < (1.1 if peak.coherence > 0.97 else 0.85)
+
+
+def _is_texture(peaks: list[Peak]) -> bool:
+    """Many lines, several of them oblique: no scanner or codec makes these, cloth does."""
+    oblique = sum(not on_axis(p.f) for p in peaks)
+    return len(peaks) >= _TEXTURE_LINES and oblique >= _TEXTURE_OBLIQUE
 
 
 def _aspect(scan: Scan) -> tuple[float, float]:

@@ -13,6 +13,7 @@ from moire.peaks import Peak
 from moire.units import fold_angle, lpi_to_lpcm, page_angle
 
 _ALIKE = 0.85
+_TEXT_PERIOD_PX = 8.0
 # What each ink absorbs of red, green and blue, relative to its main band; process inks on coated
 # paper (ISO 12647-2 solids, value from memory).
 SIGNATURES: dict[Ink, tuple[float, float, float]] = {
@@ -100,15 +101,20 @@ def measure_screen(
 def is_halftone(lattice: Lattice, lattices: tuple[Lattice, ...], peaks: tuple[Peak, ...], size: int) -> bool:
     """Vote on whether a square lattice is print or cloth.
 
-    Print: its fundamentals dominate every line that no screen explains, and at least one of:
-    the screens explain most of the energy, the (1,1) order is present, or the square is exact.
-    Cloth has its strongest lines elsewhere.
+    Print: its fundamentals dominate every line over the same tiles that no screen explains, in
+    step or not, and at least one of: the screens explain most of the energy, the (1,1) order is
+    present, or the square is exact. Cloth has its strongest lines elsewhere. Long periods on an
+    axis are text lines or rules and do not count.
     """
     tolerance = 0.35 / size
-    others = [p for p in peaks if not any(_belongs(p, g, tolerance) for g in lattices)]
-    others = [p for p in others if not on_axis(p.f) or p.amplitude < 0.5 * lattice.strength]
-    strongest = max((p.amplitude * p.coherence for p in others), default=0.0)
-    dominance = lattice.strength / max(strongest, 1e-9)
+    others = [
+        p.amplitude * max(p.coherence, 0.5)
+        for p in peaks
+        if not any(_belongs(p, g, tolerance) for g in lattices)
+        and not (on_axis(p.f) and np.hypot(*p.f) < 1 / _TEXT_PERIOD_PX)
+        and _shares_tiles(p, lattice)
+    ]
+    dominance = lattice.strength / max(max(others, default=0.0), 1e-9)
     mine = sum(p.amplitude**2 for p in peaks if any(_belongs(p, g, tolerance) for g in lattices))
     share = mine / max(sum(p.amplitude**2 for p in peaks), 1e-9)
     diagonal = any(
@@ -120,6 +126,11 @@ def is_halftone(lattice: Lattice, lattices: tuple[Lattice, ...], peaks: tuple[Pe
     if on_axis(lattice.k1) and not exact:
         return False
     return dominance > 0.6 and (share > 0.35 or diagonal or exact)
+
+
+def _shares_tiles(peak: Peak, lattice: Lattice) -> bool:
+    both = float(np.minimum(peak.weight, lattice.first.weight).sum())
+    return both > 0.3 * float(lattice.first.weight.sum())
 
 
 def on_axis(f: NDArray[np.float64], within_deg: float = 1.0) -> bool:

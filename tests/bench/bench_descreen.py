@@ -5,8 +5,9 @@
 Prints are made by the product's press from pictures, rulings and angles that the training of the
 mixing network never saw. Each row: PSNR of the scan, of the best Gaussian in sRGB and in linear
 light, of the best bilateral and guided filter (all with parameters that maximise PSNR against the
-truth), of the lattice null alone and of the full method; then SSIM and mean CIEDE2000 of the best
-rival by PSNR and of the full method, text-edge gradient energy, and cost in FFT round trips.
+truth), of `mend --quick` and of `mend` with the screens that `examine` found; then SSIM and mean
+CIEDE2000 of the best rival by PSNR and of `mend`, gradient energy on the truth's strongest edges, and
+the cost of `mend`, its measures included, in FFT round trips.
 """
 
 from __future__ import annotations
@@ -29,13 +30,13 @@ from skimage.metrics import structural_similarity
 sys.path.insert(0, str(Path(__file__).resolve().parents[1]))
 from prints import scanned
 
-from moire.descreen import ScreenLattice, descreen
+from moire.examine import examine
 from moire.features import guided_filter
-from moire.lattice import wrap
+from moire.mend import mend
+from moire.model import Mending
 from moire.proof import ScreenOrder, print_sheet
 from moire.scanner import srgb_decode, srgb_encode
 from moire.testcard import draw_card, draw_leaf
-from moire.units import page_vector
 
 Picture = NDArray[np.float32]
 FOUR = ("cyan", "magenta", "yellow", "black")
@@ -157,18 +158,15 @@ def run(case: Case) -> str:
     sheet = print_sheet(subject(case.picture), screens, width_in=1.5, height_in=1.5, gain=case.gain, seed=11)
     scan, truth = scanned(sheet, case.ppi, turn_deg=case.turn)
     image = (scan.pixels / 255).astype(np.float32)
-    lattices = []
-    for s in screens:
-        k1 = np.array(page_vector(s.ruling_lpi / case.ppi, s.angle_deg + case.turn))
-        lattices.append(ScreenLattice(k1=wrap(k1), k2=wrap(np.array([k1[1], -k1[0]]))))
     best = rivals(image, truth)
     start = time.process_time()
     for _ in range(3):
         fft.irfft2(fft.rfft2(image, axes=(0, 1)), s=image.shape[:2], axes=(0, 1))
     trip = (time.process_time() - start) / 3
-    quick = descreen(image, lattices, quick=True)
+    found = examine(scan)
+    quick = _codes(mend(scan, found, quick=True))
     start = time.process_time()
-    full = descreen(image, lattices)
+    full = _codes(mend(scan, found))
     cost = (time.process_time() - start) / trip
     top = max(best, key=lambda k: psnr(best[k], truth))
     gain = psnr(full, truth) - psnr(best[top], truth)
@@ -181,13 +179,17 @@ def run(case: Case) -> str:
     )
 
 
+def _codes(done: Mending) -> Picture:
+    return (done.scan.pixels / 255).astype(np.float32)
+
+
 def main() -> None:
     parser = argparse.ArgumentParser()
     parser.add_argument("--only", default="", help="cases whose name holds this word")
     args = parser.parse_args()
     print(
-        "| print | scan | Gaussian | Gaussian, linear | bilateral | guided | null | full | over best rival | "
-        "SSIM / CIEDE2000 best rival | SSIM / CIEDE2000 full | edge energy | FFT trips |"
+        "| print | scan | Gaussian | Gaussian, linear | bilateral | guided | quick | mend | gain | "
+        "SSIM / CIEDE2000 best rival | SSIM / CIEDE2000 mend | edge energy | FFT trips |"
     )
     print("|" + "---|" * 13)
     for case in CASES:
