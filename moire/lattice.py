@@ -177,9 +177,10 @@ def _overlap(a: NDArray[np.float32], b: NDArray[np.float32]) -> float:
 
 def explained(pair: Lattice, generators: list[Lattice], *, size: int, jpeg: bool) -> bool:
     """Whether a lattice is a combination of others, by place and by strength."""
-    # A line whose phase wanders is two lines in one bin: its place is known less well.
+    # A line whose phase wanders is two lines in one bin, and a pair that is not square has one
+    # such line: its place is known less well.
     wander = 1 - min(pair.first.coherence, pair.second.coherence)
-    tau = (_TAU_BINS + 0.8 * wander) / size
+    tau = (_TAU_BINS + 0.8 * wander + 0.5 * pair.squareness_bins) / size
     strength = pair.strength / transfer(pair.k1)
     parents = [(g, g.strength / transfer(g.k1)) for g in generators]
     return any(

@@ -15,6 +15,7 @@ def line_levels(
     frequencies: NDArray[np.float64],
     weights: NDArray[np.float32] | None,
     *,
+    inside: NDArray[np.bool_] | None = None,
     size: int,
 ) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64], NDArray[np.float32]]:
     """Amplitude of lines where they are strong, and of their surroundings in frequency.
@@ -27,6 +28,8 @@ def line_levels(
         Cycles per pixel.
     weights : ndarray, shape (n, tile rows, tile columns), or None
         Where each line counts; from the plane itself if None.
+    inside : ndarray of bool, shape (n, tile rows, tile columns), or None
+        Tiles among which a line's strong ones are sought.
     size : int
         Tile side.
 
@@ -40,8 +43,10 @@ def line_levels(
     image = plane[..., None]
     v = np.abs(tile_phasors(image, frequencies, size=size)[0][..., 0])
     if weights is None:
-        strong = np.quantile(v, 0.95, axis=(1, 2), keepdims=True)
+        sought = v if inside is None else np.where(inside, v, np.nan)
+        strong = np.nanquantile(sought, 0.95, axis=(1, 2), keepdims=True)
         weights = np.clip((v / np.maximum(strong, 1e-9) - 0.15) / 0.35, 0, 1).astype(np.float32)
+        weights = weights if inside is None else weights * inside
     total = np.maximum(weights.sum(axis=(1, 2)), 1e-9)
     amplitude = (v * weights).sum(axis=(1, 2)) / total
     ring = 4 / size * np.array([(np.cos(a), np.sin(a)) for a in np.pi * np.arange(8) / 4])

@@ -201,7 +201,8 @@ def _measure(
     if removed and size:
         all_lines = [(f.kind, line) for f in removed for line in f.lines]
         at = np.array([(line.fx_cpp, line.fy_cpp) for _, line in all_lines])
-        a0, floor, mean, weights = line_levels(l_one, at, None, size=size)
+        inside = np.stack([_tiles_in(scan, f, size) for f in removed for _ in f.lines])
+        a0, floor, mean, weights = line_levels(l_one, at, None, inside=inside, size=size)
         a1, _, _, _ = line_levels(l_two, at, weights, size=size)
         for (kind, line), x, y, b, m in zip(all_lines, a0, a1, floor, mean, strict=True):
             before_db, after_db = (20 * np.log10(max(v, 1e-4) / max(b, 1e-4)) for v in (x, y))
@@ -265,6 +266,15 @@ def _lattices(recipe: Recipe) -> tuple[ScreenLattice, ...]:
         for r in recipe.removals
         if r.method == "descreen"
     )
+
+
+def _tiles_in(scan: Scan, finding: Finding, size: int) -> NDArray[np.bool_]:
+    """Half-overlapped tiles whose centres lie in a finding's regions."""
+    mask = _inside(scan, [finding])
+    hop = size // 2
+    at_y, at_x = (np.arange(1, n // hop) * hop for n in (scan.height_px, scan.width_px))
+    tiles = mask[at_y[:, None], at_x[None, :]]
+    return tiles if tiles.any() else np.ones_like(tiles)
 
 
 def _inside(scan: Scan, findings: list[Finding]) -> NDArray[np.bool_]:
