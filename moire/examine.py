@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 import moire
 from moire.beats import rosette_parents
+from moire.chroma import screen_colours
 from moire.folds import judge_fold
 from moire.grids import BLOCK_SCORE, BlockGrid, find_block_grid, sort_line
 from moire.lattice import Lattice, find_lattices, missing_partners
@@ -18,6 +19,7 @@ from moire.measures import line_levels
 from moire.model import Examination, Finding, Ink, Kind, Line, Scan, Viewing
 from moire.peaks import Peak, find_candidates, measure_bins
 from moire.refinement import polish, refine
+from moire.samples import rate_aspect, rgb_codes, tile_size
 from moire.screens import is_halftone, name_inks, on_axis, order_of
 from moire.spectrum import tile_spectrum
 from moire.verdict import judge
@@ -75,25 +77,6 @@ def examine(scan: Scan, *, viewing: Literal["monitor", "print"] = "monitor") -> 
     )
 
 
-def rgb_codes(scan: Scan) -> NDArray[np.float32]:
-    """Pixels as code values on a 0..255 scale, shape (rows, columns, 1 or 3)."""
-    values = scan.pixels.astype(np.float32) * np.float32(255 / scan.full_scale)
-    if scan.mode == "cmyk":
-        # Without its profile a CMYK file is shown as ink amounts that multiply.
-        values = (255 - values[..., :3]) * (1 - values[..., 3:4] / 255)
-    return np.ascontiguousarray(values[..., None] if values.ndim == 2 else values)
-
-
-def tile_size(scan: Scan) -> int:
-    """Tile side for a scan: 128, coarser for high rates, 64 for small pictures, 0 if none fits."""
-    short = min(scan.width_px, scan.height_px)
-    if short < 128:
-        return 0
-    if short < 300:
-        return 64
-    return 256 if scan.ppi and min(scan.ppi) > 700 and short >= 1024 else 128
-
-
 @dataclass(frozen=True, slots=True, kw_only=True)
 class _Survey:
     """What was measured in a scan before anything is named."""
@@ -116,13 +99,17 @@ class _Survey:
         seen = refine(channels, find_candidates(spectrum), size=size)
         peaks = tuple(p for p in seen if _credible(p))
         # A partner too weak to stand out by itself counts where a coherent line calls for it.
-        called = measure_bins(spectrum, missing_partners(peaks, size=size, aspect=_aspect(scan)))
+        called = measure_bins(spectrum, missing_partners(peaks, size=size, aspect=rate_aspect(scan)))
         called = tuple(c for c in called if c.z > _CALLED_Z)
         peaks += tuple(p for p in refine(channels, called, size=size) if _credible(p) and p.coherence > 0.9)
         peaks = polish(channels, peaks, size=min(size, 64))
         jpeg = scan.jpeg or blocks is not None
-        lattices = find_lattices(peaks, size=size, aspect=_aspect(scan), jpeg=jpeg)
-        lattices = tuple(g for g in lattices if is_halftone(g, lattices, seen, size))
+        lattices = find_lattices(peaks, size=size, aspect=rate_aspect(scan), jpeg=jpeg)
+        # Print or cloth is asked once, of the strongest: weak inks of a print cannot dominate it.
+        if lattices and not is_halftone(lattices[0], lattices, seen, size):
+            lattices = ()
+        if jpeg and channels.shape[2] == 3:
+            lattices = _with_folded_chroma(lattices, channels, size)
         return _Survey(
             scan=scan, channels=channels, size=size, peaks=peaks, lattices=lattices, blocks=blocks
         )  # fmt: skip
@@ -282,6 +269,21 @@ class _Group:
     lines: list[tuple[Peak, tuple[int, int] | None]]
 
 
+def _with_folded_chroma(
+    lattices: tuple[Lattice, ...], channels: NDArray[np.float32], size: int
+) -> tuple[Lattice, ...]:
+    """Lattices with the colours that JPEG's chroma sampling moved elsewhere."""
+    if not lattices:
+        return ()
+    vectors = np.array([k for g in lattices for k in (g.k1, g.k2)])
+    weights = np.stack([p.weight for g in lattices for p in (g.first, g.second)])
+    colours = screen_colours(channels, vectors, weights, size=size).reshape(len(lattices), 2, 3)
+    return tuple(
+        replace(g, first=replace(g.first, colour=c[0]), second=replace(g.second, colour=c[1]))
+        for g, c in zip(lattices, colours, strict=True)
+    )
+
+
 def _credible(peak: Peak) -> bool:
     # A line far above its background is there, even where its phase wanders with the paper.
     in_step = max(peak.coherence, peak.local_coherence) > (0.75 if peak.z > 20 else 0.85)
@@ -292,13 +294,6 @@ def _is_texture(peaks: list[Peak]) -> bool:
     """Many lines, several of them oblique: no scanner or codec makes these, cloth does."""
     oblique = sum(not on_axis(p.f) for p in peaks)
     return len(peaks) >= _TEXTURE_LINES and oblique >= _TEXTURE_OBLIQUE
-
-
-def _aspect(scan: Scan) -> tuple[float, float]:
-    if scan.ppi is None:
-        return (1.0, 1.0)
-    mean = math.sqrt(scan.ppi[0] * scan.ppi[1])
-    return (scan.ppi[0] / mean, scan.ppi[1] / mean)
 
 
 def _block_group(blocks: BlockGrid) -> _Group:

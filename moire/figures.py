@@ -11,9 +11,9 @@ from typing import Literal
 import numpy as np
 from numpy.typing import NDArray
 
-from moire.examine import rgb_codes
 from moire.model import Finding, Kind, Scan
 from moire.resample import reduce_picture
+from moire.samples import rgb_codes
 from moire.spectrum import tile_spectrum
 from moire.vision import lightness
 

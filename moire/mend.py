@@ -11,7 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from moire.descreen import Preparation, apply, margin_px, prepare
-from moire.examine import examine, rgb_codes, tile_size
+from moire.examine import examine
 from moire.lattice import grid_distance
 from moire.measures import colour_shift, edge_energy, edge_widths, line_levels
 from moire.model import Examination, Finding, Kind, LineRemoved, Measures, Mending, Recipe, Scan
@@ -19,6 +19,7 @@ from moire.notch import remove_lines
 from moire.nulls import ScreenLattice, null_transfer
 from moire.recipe import MENDED_UNASKED, check_fits, prescribe
 from moire.resample import reduce_picture
+from moire.samples import rgb_codes, tile_size
 from moire.tiles import map_tiles
 from moire.verdict import judge
 from moire.vision import lightness, visibility

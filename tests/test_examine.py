@@ -144,3 +144,12 @@ def test_sigmas_are_stated_and_small() -> None:
     assert 0 < one.screen.ruling_lpi_sigma < 0.05
     assert 0 < one.screen.angle_deg_sigma < 0.03
     assert all(math.isfinite(line.sigma_cpp) for line in one.lines)
+
+
+def test_inks_are_named_through_jpeg_with_halved_chroma() -> None:
+    """At 4:2:0 a screen above a quarter of the rate keeps its luma in place and folds its chroma."""
+    scan, _ = scanned(card_print(*FOUR_INKS), 500, jpeg_quality=85)
+    named = {f.screen.ink: f.screen for f in screens(examine(scan)) if f.screen}
+    assert sorted(named) == ["black", "cyan", "magenta", "yellow"]
+    for order in FOUR_INKS:
+        assert named[order.ink].ruling_lpi == pytest.approx(order.ruling_lpi, rel=2e-4)

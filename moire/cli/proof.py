@@ -151,7 +151,7 @@ def _cloth(text: str, size: str | None, seed: int) -> Any:
 def _picture(path: str | None) -> Any:
     import numpy as np
 
-    from moire.examine import rgb_codes
+    from moire.samples import rgb_codes
     from moire.scanfile import read
     from moire.scanner import srgb_decode
     from moire.testcard import draw_card
