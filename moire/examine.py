@@ -173,7 +173,7 @@ class _Survey:
         return groups
 
     def _cloth_group(self, threads: Threads) -> _Group:
-        coverage, regions = _extent(threads.warp.weight, threads.weft.weight, self.size)
+        coverage, regions = _extent(threads.warp.weight, threads.weft.weight, self.size, self.scan)
         ppi = self.scan.ppi
         finding = Finding(
             kind="weave",
@@ -193,7 +193,7 @@ class _Survey:
         return _Group(finding=finding, lines=named)
 
     def _screen_group(self, lattice: Lattice, ink: Ink) -> _Group:
-        coverage, regions = _extent(lattice.first.weight, lattice.second.weight, self.size)
+        coverage, regions = _extent(lattice.first.weight, lattice.second.weight, self.size, self.scan)
         ppi = self.scan.ppi
         evidence = [
             f"two lines at right angles within {lattice.squareness_bins / self.size:.5f} cycles per pixel, "
@@ -231,7 +231,7 @@ class _Survey:
         return _Group(finding=finding, lines=[(first, (1, 0)), (second, (0, 1))])
 
     def _leftover(self, peak: Peak, rest: tuple[Peak, ...], *, woven: float, textured: bool) -> _Group:
-        coverage, regions = _extent(peak.weight, peak.weight, self.size)
+        coverage, regions = _extent(peak.weight, peak.weight, self.size, self.scan)
         parents = rosette_parents(peak.f, self.lattices, 0.2 / self.size)
         settled = True
         if parents is not None:
@@ -322,18 +322,22 @@ def _line(peak: Peak, order: tuple[int, int] | None, amplitude: float) -> Line:
 
 
 def _extent(
-    a: NDArray[np.float32], b: NDArray[np.float32], size: int
+    a: NDArray[np.float32], b: NDArray[np.float32], size: int, scan: Scan
 ) -> tuple[float, tuple[tuple[int, int, int, int], ...]]:
     """Share of tiles that carry a pattern and boxes around them, largest first."""
     import cv2
 
     present = (np.maximum(a, b) > 0.2).astype(np.uint8)
     hop = size // 2
+    rows, columns = present.shape
     _, _, stats, _ = cv2.connectedComponentsWithStats(present, connectivity=8)
-    boxes = sorted(stats[1:], key=lambda s: -int(s[4]))[:12]
-    return float(present.mean()), tuple(
-        (int(x) * hop, int(y) * hop, (int(w) + 1) * hop, (int(h) + 1) * hop) for x, y, w, h, _ in boxes
-    )
+    boxes = []
+    for x, y, w, h, _ in sorted(stats[1:].tolist(), key=lambda s: -s[4])[:12]:
+        # The last tiles stop short of the page's edge by less than a hop; the pattern does not.
+        right = scan.width_px if x + w == columns else (x + w + 1) * hop
+        bottom = scan.height_px if y + h == rows else (y + h + 1) * hop
+        boxes.append((x * hop, y * hop, right - x * hop, bottom - y * hop))
+    return float(present.mean()), tuple(boxes)
 
 
 def _period_mm(f: NDArray[np.float64], ppi: tuple[float, float] | None) -> float | None:
