@@ -13,7 +13,6 @@ from collections.abc import Sequence
 import numpy as np
 from numpy.typing import NDArray
 
-_ROUNDS = 3
 _NOISE_CODE = 1.5
 
 
@@ -87,13 +86,11 @@ def _demodulate(
     level = np.maximum(_smooth(weight, reach), 1e-6)
     amplitudes: list[NDArray[np.complex64]] = [np.zeros_like(wave) for wave in waves]
     left = residual.copy()
-    for _ in range(_ROUNDS if len(waves) > 1 else 1):
-        for i, wave in enumerate(waves):
-            left += 2 * np.real(amplitudes[i] * wave)
-            product = weight * left * np.conj(wave)
-            fitted = (_smooth(product.real, reach) + 1j * _smooth(product.imag, reach)) / level
-            amplitudes[i] = fitted.astype(np.complex64)
-            left -= 2 * np.real(amplitudes[i] * wave)
+    for i, wave in enumerate(waves):
+        product = weight * left * np.conj(wave)
+        fitted = (_smooth(product.real, reach) + 1j * _smooth(product.imag, reach)) / level
+        amplitudes[i] = fitted.astype(np.complex64)
+        left -= 2 * np.real(amplitudes[i] * wave)
     return amplitudes
 
 
