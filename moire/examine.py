@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 import moire
 from moire.beats import rosette_parents
 from moire.chroma import screen_colours
-from moire.folds import judge_fold
+from moire.folds import Fold, judge_folds
 from moire.grids import BLOCK_SCORE, BlockGrid, find_block_grid, sort_line
 from moire.lattice import Lattice, find_lattices, missing_partners
 from moire.measures import line_levels
@@ -140,7 +140,10 @@ class _Survey:
 
     def _group(self) -> list[_Group]:
         inks = name_inks(self.lattices)
-        groups = [self._screen_group(g, ink) for g, ink in zip(self.lattices, inks, strict=True)]
+        folds: tuple[Fold | None, ...] = (None,) * len(self.lattices)
+        if self.scan.ppi is not None:
+            folds = judge_folds(self.lattices, inks, self.channels, self.scan.ppi, size=self.size)
+        groups = [self._screen_group(*each) for each in zip(self.lattices, inks, folds, strict=True)]
         taken = {id(p) for g in self.lattices for p in (g.first, g.second)}
         rest = []
         for peak in self.peaks:
@@ -192,7 +195,7 @@ class _Survey:
         named.extend((p, None) for p in rest)
         return _Group(finding=finding, lines=named)
 
-    def _screen_group(self, lattice: Lattice, ink: Ink) -> _Group:
+    def _screen_group(self, lattice: Lattice, ink: Ink, fold: Fold | None) -> _Group:
         coverage, regions = _extent(lattice.first.weight, lattice.second.weight, self.size, self.scan)
         ppi = self.scan.ppi
         evidence = [
@@ -204,13 +207,9 @@ class _Survey:
             evidence.append(f"absorbs red {r:.2f}, green {g:.2f}, blue {b:.2f}: {ink}")
         else:
             evidence.append("grey scan: the ink's colour was not recorded")
-        fold = None
         if ppi is None:
             evidence.append("sampling rate unknown: ruling not given, folding not judged")
         else:
-            fold = judge_fold(
-                lattice, self.channels, ppi, ink=ink, alone=len(self.lattices) == 1, size=self.size
-            )
             evidence.append("no usual ruling fits" if fold is None else fold.words)
         finding = Finding(
             kind="halftone" if fold is None else fold.kind,

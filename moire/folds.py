@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
-from moire.folding import Unfolded, unfold
+from moire.folding import Unfolded, agree, unfold
 from moire.lattice import Lattice
 from moire.model import Candidate, Ink, Kind, Screen
 from moire.scanner import srgb_decode
@@ -17,6 +18,7 @@ from moire.spectrum import tile_means, tile_phasors
 
 _SETTLED = 0.9
 _EDGE_CPP = 0.005
+_MIDDLE_TONES = (0.08, 0.92)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -30,19 +32,26 @@ class Fold:
     words: str
 
 
-def judge_fold(
-    lattice: Lattice,
+def judge_folds(
+    lattices: Sequence[Lattice],
+    inks: Sequence[Ink],
     channels: NDArray[np.float32],
     ppi: tuple[float, float],
     *,
-    ink: Ink,
-    alone: bool,
     size: int,
-) -> Fold | None:
-    """Weigh the true screens that could be seen as this lattice; None if none is a usual print."""
-    options = unfold(lattice.k1, ppi, contrast=_contrast(lattice, channels, size), alone=alone)
-    if not options:
-        return None
+) -> tuple[Fold | None, ...]:
+    """Weigh the true screens that could be seen as each lattice of one print.
+
+    None for a lattice that no usual print could be.
+    """
+    alone = len(lattices) == 1
+    options = agree([unfold(g.k1, ppi, contrast=_contrast(g, channels, size), alone=alone) for g in lattices])
+    return tuple(
+        _judge(o, g, ppi, ink) if o else None for o, g, ink in zip(options, lattices, inks, strict=True)
+    )
+
+
+def _judge(options: tuple[Unfolded, ...], lattice: Lattice, ppi: tuple[float, float], ink: Ink) -> Fold:
     best = options[0]
     screen = _screen(best, lattice, ppi, ink)
     listed = tuple(
@@ -77,19 +86,25 @@ def _screen(best: Unfolded, lattice: Lattice, ppi: tuple[float, float], ink: Ink
     return measure_screen(k1, k2 * rate, (sigma[0], sigma[1]), ink=ink)
 
 
-def _contrast(lattice: Lattice, channels: NDArray[np.float32], size: int) -> float:
-    """Observed modulation over that of a screen of this tone without loss, strongest channel."""
+def _contrast(lattice: Lattice, channels: NDArray[np.float32], size: int) -> float | None:
+    """Observed modulation over that of a screen of this tone without loss, strongest channel.
+
+    None where the tone is so light or dark that the expected modulation is itself uncertain.
+    """
     channel = int(np.argmax(lattice.first.colour))
     plane = srgb_decode(channels[..., channel] / 255).astype(np.float32)[..., None]
     phasors, _, _ = tile_phasors(plane, np.stack([lattice.k1, lattice.k2]), size=size)
     tone = tile_means(plane, size=size)[..., 0]
-    white = float(np.percentile(plane, 99))
+    white = max(float(np.percentile(plane, 99)), 1e-6)
     swing = np.abs(phasors[..., 0]).max(axis=0)
     weight = np.minimum(lattice.first.weight, lattice.second.weight)
     strong = weight >= max(0.5 * float(weight.max()), 1e-6)
-    share = np.clip(1 - tone[strong] / max(white, 1e-6), 0.05, 0.95)
-    expected = 2 * _disc_coefficient(share) * white
-    return float(np.median(swing[strong] / np.maximum(expected, 1e-6)))
+    share = 1 - tone[strong] / white
+    middle = (share > _MIDDLE_TONES[0]) & (share < _MIDDLE_TONES[1])
+    if middle.sum() < 3:
+        return None
+    expected = 2 * _disc_coefficient(share[middle]) * white
+    return float(np.median(swing[strong][middle] / np.maximum(expected, 1e-6)))
 
 
 def _disc_coefficient(share: NDArray[np.floating]) -> NDArray[np.float64]:

@@ -5,7 +5,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from moire.folding import fold, unfold
+from moire.folding import agree, fold, unfold
 from moire.units import page_vector
 
 
@@ -86,3 +86,19 @@ def test_remaining_contrast_tells_direct_from_folded() -> None:
     weak = unfold(k, (200, 200), contrast=0.2)
     assert strong[0].ruling_lpi == pytest.approx(67)
     assert weak[0].ruling_lpi == pytest.approx(133)
+
+
+def test_inks_of_one_print_agree_on_a_ruling() -> None:
+    """Three inks 30 degrees apart at 175 lpi and 200 ppi: only the true orders share a ruling."""
+    seen = [fold(np.array(page_vector(175, a)), (200, 200))[0] / 200 for a in (15, 45, 75)]
+    apart = [unfold(k, (200, 200)) for k in seen]
+    together = agree(apart)
+    assert [options[0].ruling_lpi for options in together] == pytest.approx([175] * 3, rel=1e-6)
+    for before, after in zip(apart, together, strict=True):
+        assert sum(o.probability for o in after) == pytest.approx(1)
+        assert len(after) == len(before)
+
+
+def test_one_screen_has_nobody_to_agree_with() -> None:
+    alone = [unfold(np.array(page_vector(0.3, 20)), (300, 300))]
+    assert agree(alone) == tuple(alone)
