@@ -181,7 +181,7 @@ def colour_shift(
     def lab(picture: NDArray[np.float32]) -> NDArray[np.float64]:
         rgb = picture if picture.shape[2] == 3 else np.repeat(picture, 3, axis=2)
         linear = cv2.GaussianBlur(srgb_decode(rgb).astype(np.float32), (0, 0), sigma_px)
-        step = max(1, int(sigma_px))
+        step = max(1, min(int(sigma_px), min(picture.shape[:2])))
         return np.asarray(xyz2lab(linear[step // 2 :: step, step // 2 :: step] @ to_xyz.T))
 
     shift = deltaE_ciede2000(lab(before), lab(after))

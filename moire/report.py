@@ -8,8 +8,8 @@ from typing import Any
 
 import msgspec
 
-from moire.figures import CROP_PX, crop, labels, overview, shown_rgb, spectrum_figures
-from moire.model import Examination, Finding, Mending, Scan
+from moire.figures import crop, crop_box, labels, overview, shown_rgb, spectrum_figures
+from moire.model import Examination, Finding, Line, Mending, Scan
 from moire.scanfile import PathLike, write_bytes
 
 _VERDICTS = {
@@ -53,7 +53,7 @@ def render_report(
     environment = Environment(
         loader=PackageLoader("moire", "templates"), autoescape=True, trim_blocks=True, lstrip_blocks=True
     )
-    environment.filters["sigma"] = with_sigma
+    environment.filters.update(sigma=with_sigma, number=number, period=_period)
     named = tuple(zip(labels(before.findings), before.findings, strict=True))
     states = [master] if mending is None else [master, mending.scan]
     pictures = [shown_rgb(scan) for scan in states]
@@ -63,7 +63,6 @@ def render_report(
         "mending": mending,
         "overviews": [overview(rgb) for rgb in pictures],
         "places": _places(pictures, mending, master),
-        "crop_px": CROP_PX,
         "spectra": spectrum_figures(states, before.findings),
         "screens": [(label, f) for label, f in named if f.screen is not None],
         "others": [(label, f) for label, f in named if f.screen is None],
@@ -78,6 +77,8 @@ def render_report(
         "made_at": made_at,
         "rate": _rate(before.ppi),
         "rate_in_file": _rate(before.ppi_in_file),
+        "rate_after": "" if mending is None else _rate(mending.scan.ppi),
+        "advice": _advice(before, mending),
         "css": _template_text("report.css"),
         "script": _template_text("report.js"),
     }
@@ -94,12 +95,44 @@ def write_report(html: str, path: PathLike, *, force: bool = False) -> None:
     write_bytes(html.encode(), path, force=force)
 
 
+def number(value: float, digits: int) -> str:
+    """A number with a true minus sign, and no sign on zero."""
+    text = f"{value:.{digits}f}"
+    return text.lstrip("-") if float(text) == 0 else text.replace("-", "\N{MINUS SIGN}")
+
+
 def with_sigma(value: float, sigma: float) -> str:
     """A value and its uncertainty with the digits that it warrants: two of sigma."""
     if not math.isfinite(sigma) or sigma <= 0:
-        return f"{value:.2f}"
-    digits = min(4, max(0, 1 - math.floor(math.log10(sigma))))
-    return f"{value:.{digits}f} ± {sigma:.{digits}f}"
+        return number(value, 2)
+    digits = _warranted(sigma, 4)
+    return f"{number(value, digits)} ± {max(sigma, 10.0**-digits):.{digits}f}"
+
+
+def _warranted(sigma: float, most: int) -> int:
+    """Decimals that an uncertainty warrants: two digits of it, at most `most`."""
+    if not math.isfinite(sigma) or sigma <= 0:
+        return most
+    return min(most, max(0, 1 - math.floor(math.log10(sigma))))
+
+
+def _period(finding: Finding, unit: str) -> str:
+    """Period in ``px`` or ``mm``; 1/f has the uncertainty sigma_f / f**2."""
+    value = finding.period_px if unit == "px" else finding.period_mm
+    if value is None:
+        return "–"
+    sigma = finding.lines[0].sigma_cpp * finding.period_px * value if finding.lines else 0.0
+    return number(value, _warranted(sigma, 2 if unit == "px" else 3))
+
+
+def _advice(before: Examination, mending: Mending | None) -> tuple[str, ...]:
+    """What to do now: the scan's advice, or after a mending what is left of it."""
+    if mending is None or not mending.recipe.removals:
+        return before.advice
+    lines = before.advice if before.verdict in ("rescan", "refer") else ()
+    if mending.after.verdict == "sound":
+        return (*lines, "Show and print the derivative; keep the master as it is.")
+    return tuple(dict.fromkeys((*lines, *mending.after.advice)))
 
 
 def _template_text(name: str) -> str:
@@ -113,32 +146,58 @@ def _rate(ppi: tuple[float, float] | None) -> str:
 
 
 def _places(pictures: list[Any], mending: Mending | None, master: Scan) -> list[dict[str, Any]]:
-    """1:1 crops at the places that changed most, in the master and at the same spot after."""
-    if mending is None or not mending.worst_places:
+    """1:1 crops at the places that changed most: the same piece of the page before and after."""
+    if mending is None:
         return []
     scale = mending.scan.width_px / master.width_px, mending.scan.height_px / master.height_px
-    return [
-        {
-            "at": place,
-            "before": crop(pictures[0], place),
-            "after": crop(pictures[1], (round(place[0] * scale[0]), round(place[1] * scale[1]))),
-        }
-        for place in mending.worst_places
-    ]
+    out = []
+    for place in mending.worst_places:
+        x, y, width, height = crop_box(master.width_px, master.height_px, place)
+        after = (
+            round(x * scale[0]),
+            round(y * scale[1]),
+            max(1, round(width * scale[0])),
+            max(1, round(height * scale[1])),
+        )
+        out.append(
+            {
+                "at": place,
+                "before": crop(pictures[0], (x, y, width, height)),
+                "after": crop(pictures[1], after),
+            }
+        )
+    return out
 
 
 def _removed_lines(mending: Mending | None) -> list[dict[str, Any]]:
-    """Lines of the mending with the label of the finding that they belong to."""
+    """Lines of the mending with the label, order and digits of the line that was found there."""
     if mending is None:
         return []
-    owner: dict[tuple[float, float], tuple[str, Finding | None]] = {}
+    owner: dict[tuple[float, float], tuple[str, Line]] = {}
     for mark, found in zip(labels(mending.before.findings), mending.before.findings, strict=True):
-        owner.update({(line.fx_cpp, line.fy_cpp): (mark, found) for line in found.lines})
+        owner.update({(line.fx_cpp, line.fy_cpp): (mark, line) for line in found.lines})
     out = []
     for removed in mending.measures.lines:
-        place = (removed.fx_cpp, removed.fy_cpp)
-        label, finding = owner.get(place, ("", None))
-        lines = () if finding is None else finding.lines
-        order = next((line.order for line in lines if (line.fx_cpp, line.fy_cpp) == place), None)
-        out.append({"label": label, "order": order, "line": removed})
+        label, line = owner.get((removed.fx_cpp, removed.fy_cpp), ("", None))
+        sigma = 0.0 if line is None else line.sigma_cpp
+        rate = mending.before.ppi
+        out.append(
+            {
+                "label": label,
+                "order": None if line is None else line.order,
+                "line": removed,
+                "cpp": _pair((removed.fx_cpp, removed.fy_cpp), (sigma, sigma), 5),
+                "cpi": ""
+                if rate is None
+                else _pair(
+                    (removed.fx_cpp * rate[0], removed.fy_cpp * rate[1]),
+                    (sigma * rate[0], sigma * rate[1]),
+                    2,
+                ),
+            }
+        )
     return out
+
+
+def _pair(values: tuple[float, float], sigmas: tuple[float, float], most: int) -> str:
+    return ", ".join(number(v, _warranted(s, most)) for v, s in zip(values, sigmas, strict=True))

@@ -164,3 +164,11 @@ def test_banding_is_mended() -> None:
     inner = (slice(8, -8), slice(8, -8))
     before = psnr(banded[inner] / 255, photo[inner] / 255)
     assert psnr(done.scan.pixels[inner] / 255, photo[inner] / 255) > before + 6
+
+
+@pytest.mark.parametrize("shape", [(1, 1), (1, 300, 3), (200, 3), (130, 131, 3)])
+def test_scans_of_any_size_come_back(shape: tuple[int, ...]) -> None:
+    scan = as_scan(np.random.default_rng(0).integers(0, 256, shape, dtype=np.uint8), 300)
+    done = mend(scan)
+    assert (done.scan.pixels == scan.pixels).all()
+    assert np.isfinite(done.measures.colour_shift_mean)

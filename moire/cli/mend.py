@@ -19,9 +19,15 @@ if TYPE_CHECKING:
     "-o", "--output", required=True, type=click.Path(dir_okay=False), help="The derivative to write."
 )
 @click.option(
-    "--only", type=click.Choice(KINDS), multiple=True, help="Remove this kind and no other; repeatable."
+    "--only",
+    type=click.Choice(KINDS),
+    metavar="KIND",
+    multiple=True,
+    help="Remove this kind alone; repeatable.",
 )
-@click.option("--keep", type=click.Choice(KINDS), multiple=True, help="Leave this kind; repeatable.")
+@click.option(
+    "--keep", type=click.Choice(KINDS), metavar="KIND", multiple=True, help="Leave this kind; repeatable."
+)
 @click.option(
     "--strength", type=click.FloatRange(0, 1), default=1.0, show_default=True, help="Share removed."
 )
@@ -37,6 +43,10 @@ def command(scan: str, **flags: Any) -> int:
     Example:
       moire mend postcard.tif -o postcard-mended.tif --report postcard.html
       moire mend page.png -o page-150.png --to-ppi 150 --save-recipe leaf.json
+
+    KIND is one of halftone, alias, rosette, weave, banding, block-grid,
+    laid-lines, stochastic, display-grid, content, unexplained. Unasked, screens,
+    their beats, banding and display grids are removed; cloth and content stay.
     """
     from moire.cli.console import console, print_json, show_examination, show_mending
     from moire.cli.reporting import check_report_path, save_report
