@@ -23,6 +23,8 @@ _SPECTRUM_PX = 256
 # A label's height and advance per letter, and a sign's half side, in percent of a spectrum's side.
 _LABEL = (4.6, 3.3)
 _SIGN = 3.0
+# Where a label may stand seen from its sign, best first.
+_WAYS = ((1, 0), (-1, 0), (0, -1), (0, 1), *((x, y) for y in (-0.6, 0.6, -1, 1) for x in (1, -1)))
 
 Box = tuple[int, int, int, int]
 Shape = Literal["circle", "diamond", "square", "triangle", "cross"]
@@ -201,7 +203,7 @@ def _spots(mark: Mark, half: tuple[float, float]) -> list[tuple[tuple[float, flo
     """Centres that a label may take inside the picture, best first, and whether each is far off."""
     out = []
     for away in (0, 3, 6, 10, 14, 19, 25):
-        for dx, dy in ((1, 0), (-1, 0), (0, -1), (0, 1), (1, -1), (-1, -1), (1, 1), (-1, 1)):
+        for dx, dy in _WAYS:
             x = mark.x + dx * (_SIGN + half[0] + away)
             y = mark.y + dy * (_SIGN + half[1] + away)
             if half[0] <= x <= 100 - half[0] and half[1] <= y <= 100 - half[1]:

@@ -94,9 +94,16 @@ def find_lattices(
     pairs = _pairs(peaks, size, aspect)
     if not pairs:
         return ()
-    floor = (_FLOOR_SHARE_JPEG if jpeg else _FLOOR_SHARE) * max(p.strength for p in pairs)
-    pairs = [p for p in pairs if p.strength >= floor]
-    pairs.sort(key=lambda p: -p.strength / transfer(p.k1))
+    # As printed, before the scanner's blur: a faint low line is not a screen beside a blurred one.
+    printed = {id(p): p.strength / transfer(p.k1) for p in pairs}
+    share = _FLOOR_SHARE_JPEG if jpeg else _FLOOR_SHARE
+    pairs = [
+        p
+        for p in pairs
+        if printed[id(p)] >= share * max(printed.values())
+        and p.strength >= share * max(q.strength for q in pairs)
+    ]
+    pairs.sort(key=lambda p: -printed[id(p)])
     accepted: list[Lattice] = []
     for pair in pairs:
         if not explained(pair, accepted, size=size, jpeg=jpeg):

@@ -11,6 +11,7 @@ import msgspec
 from moire.figures import crop, crop_box, labels, overview, shown_rgb, spectrum_figures
 from moire.model import Examination, Finding, Line, Mending, Scan
 from moire.scanfile import PathLike, write_bytes
+from moire.units import to_cpi
 
 _VERDICTS = {
     "sound": ("Sound", "No artifact stands above the eye's threshold. The scan can be kept as it is."),
@@ -189,11 +190,7 @@ def _removed_lines(mending: Mending | None) -> list[dict[str, Any]]:
                 "cpp": _pair((removed.fx_cpp, removed.fy_cpp), (sigma, sigma), 5),
                 "cpi": ""
                 if rate is None
-                else _pair(
-                    (removed.fx_cpp * rate[0], removed.fy_cpp * rate[1]),
-                    (sigma * rate[0], sigma * rate[1]),
-                    2,
-                ),
+                else _pair(to_cpi(removed.fx_cpp, removed.fy_cpp, rate), to_cpi(sigma, sigma, rate), 2),
             }
         )
     return out

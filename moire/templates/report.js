@@ -2,7 +2,10 @@
   "use strict";
   document.documentElement.classList.add("scripted");
   var wipe = document.querySelector(".wipe"), slider = document.querySelector("#wipe-range");
-  function cut(share) { wipe.style.setProperty("--cut", share + "%"); }
+  function cut(share) {
+    wipe.style.setProperty("--cut", share + "%");
+    slider.setAttribute("aria-valuetext", share + " % before, " + (100 - share) + " % after");
+  }
   if (wipe && slider) {
     slider.addEventListener("input", function () { cut(slider.value); });
     function drag(event) {
