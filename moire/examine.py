@@ -88,6 +88,10 @@ class _Survey:
     lattices: tuple[Lattice, ...]
     blocks: BlockGrid | None
 
+    @property
+    def jpeg(self) -> bool:
+        return self.scan.jpeg or self.blocks is not None
+
     @staticmethod
     def of(scan: Scan, channels: NDArray[np.float32], size: int) -> _Survey:
         mixed = channels.mean(axis=2)
@@ -142,7 +146,9 @@ class _Survey:
         inks = name_inks(self.lattices)
         folds: tuple[Fold | None, ...] = (None,) * len(self.lattices)
         if self.scan.ppi is not None:
-            folds = judge_folds(self.lattices, inks, self.channels, self.scan.ppi, size=self.size)
+            folds = judge_folds(
+                self.lattices, inks, self.channels, self.scan.ppi, size=self.size, jpeg=self.jpeg
+            )
         groups = [self._screen_group(*each) for each in zip(self.lattices, inks, folds, strict=True)]
         taken = {id(p) for g in self.lattices for p in (g.first, g.second)}
         rest = []

@@ -39,12 +39,14 @@ def judge_folds(
     ppi: tuple[float, float],
     *,
     size: int,
+    jpeg: bool,
 ) -> tuple[Fold | None, ...]:
     """Weigh the true screens that could be seen as each lattice of one print.
 
     None for a lattice that no usual print could be.
     """
-    alone = len(lattices) == 1
+    # Halved chroma takes contrast from a coloured ink, as other inks do.
+    alone = len(lattices) == 1 and not (jpeg and channels.shape[2] == 3)
     options = agree([unfold(g.k1, ppi, contrast=_contrast(g, channels, size), alone=alone) for g in lattices])
     return tuple(
         _judge(o, g, ppi, ink) if o else None for o, g, ink in zip(options, lattices, inks, strict=True)
