@@ -1,0 +1,203 @@
+"""Findings: what each measured line is, and the evidence for it in words."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from moire.beats import rosette_parents
+from moire.folds import Fold, judge_folds
+from moire.grids import BlockGrid, sort_line
+from moire.lattice import Lattice
+from moire.model import Finding, Ink, Kind, Scan
+from moire.peaks import Peak
+from moire.screens import name_inks, on_axis, order_of
+from moire.survey import Survey
+from moire.weaves import Threads, find_threads, measure_weave
+
+_TEXTURE_LINES, _TEXTURE_OBLIQUE = 4, 2
+_OF_THE_CLOTH = 0.15
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Group:
+    """A finding and the measured lines that belong to it, with their orders."""
+
+    finding: Finding
+    lines: list[tuple[Peak, tuple[int, int] | None]]
+
+
+def group_lines(survey: Survey) -> list[Group]:
+    """Findings without visibility, screens first, then what remains."""
+    inks = name_inks(survey.lattices)
+    folds: tuple[Fold | None, ...] = (None,) * len(survey.lattices)
+    if survey.scan.ppi is not None:
+        folds = judge_folds(
+            survey.lattices, inks, survey.channels, survey.scan.ppi, size=survey.size, jpeg=survey.jpeg
+        )
+    groups = [_screen_group(survey, *each) for each in zip(survey.lattices, inks, folds, strict=True)]
+    taken = {id(p) for g in survey.lattices for p in (g.first, g.second)}
+    rest = []
+    for peak in survey.peaks:
+        if id(peak) in taken:
+            continue
+        for group, lattice in zip(groups, survey.lattices, strict=True):
+            order = order_of(peak.f, lattice, 0.15 / survey.size, limit=6)
+            if order is not None:
+                group.lines.append((peak, order))
+                break
+        else:
+            rest.append(peak)
+    threads = None if survey.lattices else find_threads(tuple(rest), size=survey.size)
+    if threads is not None:
+        groups.append(_cloth_group(survey, threads))
+        rest = [p for p in rest if not any(p is m for m in threads.members)]
+    merged: dict[tuple[Kind, tuple[int, ...]], Group] = {}
+    woven = 0.0 if threads is None else max(p.amplitude for p in threads.members)
+    textured = not survey.lattices and _is_texture(rest)
+    for peak in rest:
+        found = _leftover(survey, peak, tuple(rest), woven=woven, textured=textured)
+        key = (found.finding.kind, found.finding.parents)
+        if key in merged and found.finding.kind != "banding":
+            merged[key].lines.extend(found.lines)
+        else:
+            merged[key] = found
+            groups.append(found)
+    if survey.blocks is not None and all(g.finding.kind != "block-grid" for g in groups):
+        groups.append(_block_group(survey.blocks))
+    return groups
+
+
+def _cloth_group(survey: Survey, threads: Threads) -> Group:
+    coverage, regions = _extent(threads.warp.weight, threads.weft.weight, survey.size, survey.scan)
+    ppi = survey.scan.ppi
+    finding = Finding(
+        kind="weave",
+        confidence=round(float(min(threads.warp.local_coherence, threads.weft.local_coherence)), 3),
+        visibility=0.0,
+        coverage=coverage,
+        regions=regions,
+        lines=(),
+        period_px=float(1 / np.hypot(*threads.warp.f)),
+        period_mm=_period_mm(threads.warp.f, ppi),
+        weave=None if ppi is None else measure_weave(threads, ppi),
+        evidence=(f"thread lines near both axes, bound as in a {threads.pattern} weave",),
+    )
+    named: list[tuple[Peak, tuple[int, int] | None]] = [(threads.warp, (1, 0)), (threads.weft, (0, 1))]
+    rest = (p for p in threads.members if p is not threads.warp and p is not threads.weft)
+    named.extend((p, None) for p in rest)
+    return Group(finding=finding, lines=named)
+
+
+def _screen_group(survey: Survey, lattice: Lattice, ink: Ink, fold: Fold | None) -> Group:
+    coverage, regions = _extent(lattice.first.weight, lattice.second.weight, survey.size, survey.scan)
+    ppi = survey.scan.ppi
+    evidence = [
+        f"two lines at right angles within {lattice.squareness_bins / survey.size:.5f} cycles per pixel, "
+        f"in step over the page (coherence {lattice.first.coherence:.2f}, {lattice.second.coherence:.2f})"
+    ]
+    if len(lattice.first.colour) == 3:
+        r, g, b = lattice.first.colour
+        evidence.append(f"absorbs red {r:.2f}, green {g:.2f}, blue {b:.2f}: {ink}")
+    else:
+        evidence.append("grey scan: the ink's colour was not recorded")
+    if ppi is None:
+        evidence.append("sampling rate unknown: ruling not given, folding not judged")
+    else:
+        evidence.append("no usual ruling fits" if fold is None else fold.words)
+    finding = Finding(
+        kind="halftone" if fold is None else fold.kind,
+        confidence=round(float(1 - math.exp(-(min(lattice.first.z, lattice.second.z) - 4) / 2)), 3),
+        visibility=0.0,
+        coverage=coverage,
+        regions=regions,
+        lines=(),
+        period_px=float(1 / np.hypot(*lattice.k1)),
+        period_mm=_period_mm(lattice.k1, ppi),
+        screen=None if fold is None else fold.screen,
+        candidates=() if fold is None else fold.candidates,
+        settled=fold is not None and fold.settled,
+        evidence=tuple(evidence),
+    )
+    first = replace(lattice.first, f=lattice.k1)
+    second = replace(lattice.second, f=lattice.k2)
+    return Group(finding=finding, lines=[(first, (1, 0)), (second, (0, 1))])
+
+
+def _leftover(survey: Survey, peak: Peak, rest: tuple[Peak, ...], *, woven: float, textured: bool) -> Group:
+    coverage, regions = _extent(peak.weight, peak.weight, survey.size, survey.scan)
+    parents = rosette_parents(peak.f, survey.lattices, 0.2 / survey.size)
+    settled = True
+    if parents is not None:
+        kind: Kind = "rosette"
+        words = f"the sum of orders {parents[2]}"
+    else:
+        kind, words = sort_line(peak, rest, ppi=survey.scan.ppi, blocks=survey.blocks)
+        if kind == "unexplained" and peak.amplitude < _OF_THE_CLOTH * woven:
+            kind, words = "content", "a faint line beside the threads, most likely of the cloth"
+        if kind in ("unexplained", "banding") and textured:
+            kind, words = (
+                "content",
+                "one of many regular lines in several directions: a texture such as cloth",
+            )
+        settled = kind != "unexplained"
+    finding = Finding(
+        kind=kind,
+        confidence=round(float(peak.coherence * (1 - math.exp(-(peak.z - 4) / 2))), 3),
+        visibility=0.0,
+        coverage=coverage,
+        regions=regions,
+        lines=(),
+        period_px=float(1 / np.hypot(*peak.f)),
+        period_mm=_period_mm(peak.f, survey.scan.ppi),
+        settled=settled,
+        parents=() if parents is None else parents[:2],
+        evidence=(words,),
+    )
+    return Group(finding=finding, lines=[(peak, None)])
+
+
+def _is_texture(peaks: list[Peak]) -> bool:
+    """Many lines, several of them oblique: no scanner or codec makes these, cloth does."""
+    oblique = sum(not on_axis(p.f) for p in peaks)
+    return len(peaks) >= _TEXTURE_LINES and oblique >= _TEXTURE_OBLIQUE
+
+
+def _block_group(blocks: BlockGrid) -> Group:
+    finding = Finding(
+        kind="block-grid",
+        confidence=round(1 - math.exp(-blocks.score / 4), 3),
+        visibility=0.0,
+        coverage=1.0,
+        regions=(),
+        lines=(),
+        period_px=float(blocks.period_px),
+        evidence=(f"steps at every {blocks.period_px} px stand out by {blocks.score:.0f} standard errors",),
+    )
+    return Group(finding=finding, lines=[])
+
+
+def _extent(
+    a: NDArray[np.float32], b: NDArray[np.float32], size: int, scan: Scan
+) -> tuple[float, tuple[tuple[int, int, int, int], ...]]:
+    """Share of tiles that carry a pattern and boxes around them, largest first."""
+    import cv2
+
+    present = (np.maximum(a, b) > 0.2).astype(np.uint8)
+    hop = size // 2
+    rows, columns = present.shape
+    _, _, stats, _ = cv2.connectedComponentsWithStats(present, connectivity=8)
+    boxes = []
+    for x, y, w, h, _ in sorted(stats[1:].tolist(), key=lambda s: -s[4])[:12]:
+        # The last tiles stop short of the page's edge by less than a hop; the pattern does not.
+        right = scan.width_px if x + w == columns else (x + w + 1) * hop
+        bottom = scan.height_px if y + h == rows else (y + h + 1) * hop
+        boxes.append((x * hop, y * hop, right - x * hop, bottom - y * hop))
+    return float(present.mean()), tuple(boxes)
+
+
+def _period_mm(f: NDArray[np.float64], ppi: tuple[float, float] | None) -> float | None:
+    return None if ppi is None else float(25.4 / np.hypot(f[0] * ppi[0], f[1] * ppi[1]))

@@ -1,0 +1,101 @@
+"""What is measured in a scan before anything is named: its lines, lattices and blocks."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from moire.chroma import screen_colours
+from moire.grids import BLOCK_SCORE, BlockGrid, find_block_grid
+from moire.lattice import Lattice, find_lattices, missing_partners
+from moire.model import Scan
+from moire.peaks import Peak, find_candidates, measure_bins
+from moire.refinement import polish, refine
+from moire.samples import rate_aspect
+from moire.screens import is_halftone
+from moire.spectrum import tile_spectrum
+
+_TILES_AT_MOST = 1200
+_CALLED_Z = 3.0
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Survey:
+    """Everything measured in one scan.
+
+    Attributes
+    ----------
+    scan : Scan
+    channels : ndarray, shape (rows, columns, 1 or 3)
+        Code values on a 0..255 scale.
+    size : int
+        Tile side that weights and bins refer to.
+    peaks : tuple of Peak
+        Lines that keep their phase.
+    lattices : tuple of Lattice
+        Those of printed screens.
+    blocks : BlockGrid or None
+    """
+
+    scan: Scan
+    channels: NDArray[np.float32]
+    size: int
+    peaks: tuple[Peak, ...]
+    lattices: tuple[Lattice, ...]
+    blocks: BlockGrid | None
+
+    @property
+    def jpeg(self) -> bool:
+        """Whether the pixels went through a block codec."""
+        return self.scan.jpeg or self.blocks is not None
+
+
+def take_survey(scan: Scan, channels: NDArray[np.float32], size: int) -> Survey:
+    """Measure a scan: lines, then the lattices that they form."""
+    mixed = channels.mean(axis=2)
+    grid = find_block_grid(mixed)
+    blocks = grid if grid.score > BLOCK_SCORE else None
+    area = channels.shape[0] * channels.shape[1]
+    pitch = max(size // 2, math.isqrt(area // _TILES_AT_MOST))
+    spectrum = tile_spectrum(mixed, size=size, pitch=pitch)
+    seen = refine(channels, find_candidates(spectrum), size=size)
+    peaks = tuple(p for p in seen if _credible(p))
+    # A partner too weak to stand out by itself counts where a coherent line calls for it.
+    called = measure_bins(spectrum, missing_partners(peaks, size=size, aspect=rate_aspect(scan)))
+    called = tuple(c for c in called if c.z > _CALLED_Z)
+    peaks += tuple(p for p in refine(channels, called, size=size) if _credible(p) and p.coherence > 0.9)
+    peaks = polish(channels, peaks, size=min(size, 64))
+    jpeg = scan.jpeg or blocks is not None
+    lattices = find_lattices(peaks, size=size, aspect=rate_aspect(scan), jpeg=jpeg)
+    # Print or cloth is asked once, of the strongest: weak inks of a print cannot dominate it.
+    if lattices and not is_halftone(lattices[0], lattices, seen, size):
+        lattices = ()
+    if jpeg and channels.shape[2] == 3:
+        lattices = _with_folded_chroma(lattices, channels, size)
+    return Survey(
+        scan=scan, channels=channels, size=size, peaks=peaks, lattices=lattices, blocks=blocks
+    )  # fmt: skip
+
+
+def _with_folded_chroma(
+    lattices: tuple[Lattice, ...], channels: NDArray[np.float32], size: int
+) -> tuple[Lattice, ...]:
+    """Lattices with the colours that JPEG's chroma sampling moved elsewhere."""
+    if not lattices:
+        return ()
+    vectors = np.array([k for g in lattices for k in (g.k1, g.k2)])
+    weights = np.stack([p.weight for g in lattices for p in (g.first, g.second)])
+    colours = screen_colours(channels, vectors, weights, size=size).reshape(len(lattices), 2, 3)
+    return tuple(
+        replace(g, first=replace(g.first, colour=c[0]), second=replace(g.second, colour=c[1]))
+        for g, c in zip(lattices, colours, strict=True)
+    )
+
+
+def _credible(peak: Peak) -> bool:
+    # A line far above its background is there, even where its phase wanders with the paper.
+    in_step = max(peak.coherence, peak.local_coherence) > (0.75 if peak.z > 20 else 0.85)
+    return in_step and peak.tiles >= 6 and peak.off_bin < (1.1 if peak.coherence > 0.97 else 0.85)
