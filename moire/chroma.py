@@ -8,6 +8,9 @@ ink again.
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+from functools import lru_cache
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -15,19 +18,56 @@ from moire.spectrum import tile_means, tile_phasors
 
 _LEAST_GAIN = 0.15
 _TONE_FLOOR = 20.0
-# Full-range YCbCr of ITU-T T.871 and back.
+# A codec shrinks faint chroma by an unknown share, down to nothing; spread of ln(share) and noise
+# of chroma over luma as seen on prints used for tuning.
+_SHARE, _SHARE_SPREAD, _CHROMA_NOISE = 0.7, 0.7, 0.035
+# Full-range YCbCr of ITU-T T.871.
 _TO_YCC = np.array([[0.299, 0.587, 0.114], [-0.168736, -0.331264, 0.5], [0.5, -0.418688, -0.081312]])
-_TO_RGB = np.array([[1.0, 0.0, 1.402], [1.0, -0.344136, -0.714136], [1.0, 1.772, 0.0]])
 
 
-def screen_colours(
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class ChromaReading:
+    """What is left of a line's chroma after a codec halved its resolution.
+
+    Attributes
+    ----------
+    chroma : ndarray, shape (2,)
+        In-phase Cb and Cr swing over the luma swing.
+    tone : ndarray, shape (3,)
+        Mean RGB code values where the line is.
+    """
+
+    chroma: NDArray[np.float64]
+    tone: NDArray[np.float64]
+
+    def misfit(self, signature: tuple[float, float, float]) -> float:
+        """Squared standard errors by which an ink misses, at the likeliest loss of chroma.
+
+        Parameters
+        ----------
+        signature : (float, float, float)
+            What the ink takes of red, green and blue, as shares of the local tone.
+        """
+        swing = _TO_YCC @ (np.array(signature) * (self.tone + _TONE_FLOOR))
+        share = _shares()
+        gap = self.chroma - share[:, None] * swing[1:] / swing[0]
+        cost = (gap**2).sum(axis=1) / _CHROMA_NOISE**2 + (np.log(share / _SHARE) / _SHARE_SPREAD) ** 2
+        return float(cost.min())
+
+
+@lru_cache(maxsize=1)
+def _shares() -> NDArray[np.float64]:
+    return np.geomspace(0.03, 1.3, 60)
+
+
+def read_chroma(
     channels: NDArray[np.float32],
     frequencies: NDArray[np.float64],
     weights: NDArray[np.float32],
     *,
     size: int,
-) -> NDArray[np.float64]:
-    """Signed modulation of red, green and blue by each line, chroma read where JPEG folded it.
+) -> tuple[ChromaReading, ...]:
+    """Chroma of each line, read where halved chroma resolution folds it.
 
     Parameters
     ----------
@@ -39,35 +79,21 @@ def screen_colours(
         Where each line counts.
     size : int
         Tile side of the weights.
-
-    Returns
-    -------
-    ndarray, shape (n, 3)
-        Relative to the local tone, scaled to a mean size of 1.
     """
     ycc = (channels @ _TO_YCC.T.astype(np.float32)).astype(np.float32)
     beyond = np.abs(frequencies) > 0.25
     shift = -0.5 * np.sign(frequencies) * beyond
     luma = tile_phasors(ycc[..., :1], frequencies, size=size)[0][..., 0]
-    direct = tile_phasors(ycc[..., 1:], frequencies, size=size)[0]
-    folded = tile_phasors(ycc[..., 1:], frequencies + shift, size=size)[0]
+    chroma = tile_phasors(ycc[..., 1:], frequencies + shift, size=size)[0]
     # The chroma grid lies half a pixel off: a quarter turn of phase for each folded axis.
     turn = np.prod(np.where(beyond, -1j * np.sign(frequencies), 1), axis=1)
     gain = np.maximum(np.abs(np.cos(np.pi * frequencies)).prod(axis=1), _LEAST_GAIN)
     tone = tile_means(channels, size=size)
-    out = np.empty((len(frequencies), 3))
-    for i, weight in enumerate(weights):
-        reference = weight * np.conj(luma[i]) / np.maximum(np.abs(luma[i]), 1e-9)
-        strength = float((np.abs(luma[i]) * weight).sum())
-        seen = np.array([_cross(direct[i], reference), _cross(folded[i] * turn[i], reference) / gain[i]])
-        chroma = seen[int(np.argmax(np.linalg.norm(seen, axis=1)))]
-        swing = _TO_RGB @ np.array([strength, *chroma])
+    out = []
+    for y, c, back, weight in zip(luma, chroma, turn / gain, weights, strict=True):
+        reference = weight * np.conj(y) / np.maximum(np.abs(y), 1e-9)
+        strength = max(float((np.abs(y) * weight).sum()), 1e-9)
+        seen = np.real((c * back * reference[..., None]).sum(axis=(0, 1))) / strength
         mean = (tone * weight[..., None]).sum(axis=(0, 1)) / max(float(weight.sum()), 1e-9)
-        relative = swing / (mean + _TONE_FLOOR)
-        out[i] = relative / max(float(np.abs(relative).mean()), 1e-9)
-    return out
-
-
-def _cross(phasors: NDArray[np.complex64], reference: NDArray[np.complex64]) -> NDArray[np.float64]:
-    """In-phase part of two chroma planes against the luma reference."""
-    return np.real((phasors * reference[..., None]).sum(axis=(0, 1)))
+        out.append(ChromaReading(chroma=seen, tone=mean))
+    return tuple(out)

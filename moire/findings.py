@@ -32,7 +32,7 @@ class Group:
 
 def group_lines(survey: Survey) -> list[Group]:
     """Findings without visibility, screens first, then what remains."""
-    inks = name_inks(survey.lattices)
+    inks = name_inks(survey.lattices, survey.chroma)
     folds: tuple[Fold | None, ...] = (None,) * len(survey.lattices)
     if survey.scan.ppi is not None:
         folds = judge_folds(
@@ -99,7 +99,9 @@ def _screen_group(survey: Survey, lattice: Lattice, ink: Ink, fold: Fold | None)
         f"two lines at right angles within {lattice.squareness_bins / survey.size:.5f} cycles per pixel, "
         f"in step over the page (coherence {lattice.first.coherence:.2f}, {lattice.second.coherence:.2f})"
     ]
-    if len(lattice.first.colour) == 3:
+    if survey.chroma:
+        evidence.append(f"colour read where JPEG's halved chroma folds it: {ink}")
+    elif len(lattice.first.colour) == 3:
         r, g, b = lattice.first.colour
         evidence.append(f"absorbs red {r:.2f}, green {g:.2f}, blue {b:.2f}: {ink}")
     else:

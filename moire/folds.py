@@ -13,7 +13,7 @@ from moire.folding import Unfolded, agree, unfold
 from moire.lattice import Lattice
 from moire.model import Candidate, Ink, Kind, Screen
 from moire.scanner import srgb_decode
-from moire.screens import measure_screen
+from moire.screens import SIGNATURES, measure_screen
 from moire.spectrum import tile_means, tile_phasors
 
 _SETTLED = 0.9
@@ -45,9 +45,13 @@ def judge_folds(
 
     None for a lattice that no usual print could be.
     """
-    # Halved chroma takes contrast from a coloured ink, as other inks do.
-    alone = len(lattices) == 1 and not (jpeg and channels.shape[2] == 3)
-    options = agree([unfold(g.k1, ppi, contrast=_contrast(g, channels, size), alone=alone) for g in lattices])
+    alone = len(lattices) == 1
+    # A codec that halved the chroma leaves a coloured ink only its luma to be judged by.
+    by_luma = jpeg and channels.shape[2] == 3
+    contrasts = [_contrast(g, i, channels, size, by_luma) for g, i in zip(lattices, inks, strict=True)]
+    options = agree(
+        [unfold(g.k1, ppi, contrast=c, alone=alone) for g, c in zip(lattices, contrasts, strict=True)]
+    )
     return tuple(
         _judge(o, g, ppi, ink) if o else None for o, g, ink in zip(options, lattices, inks, strict=True)
     )
@@ -88,24 +92,35 @@ def _screen(best: Unfolded, lattice: Lattice, ppi: tuple[float, float], ink: Ink
     return measure_screen(k1, k2 * rate, (sigma[0], sigma[1]), ink=ink)
 
 
-def _contrast(lattice: Lattice, channels: NDArray[np.float32], size: int) -> float | None:
-    """Observed modulation over that of a screen of this tone without loss, strongest channel.
+def _contrast(
+    lattice: Lattice, ink: Ink, channels: NDArray[np.float32], size: int, by_luma: bool
+) -> float | None:
+    """Observed modulation over that of a screen of this tone without loss.
 
-    None where the tone is so light or dark that the expected modulation is itself uncertain.
+    In the channel that the ink takes most of, or in luma with the ink's share of it. None where
+    the tone is so light or dark that the expected modulation is itself uncertain.
     """
-    channel = int(np.argmax(lattice.first.colour))
-    plane = srgb_decode(channels[..., channel] / 255).astype(np.float32)[..., None]
+    if by_luma:
+        if ink == "unknown":
+            return None
+        luma = np.array([0.2126, 0.7152, 0.0722], np.float32)
+        taken = float(luma @ np.array(SIGNATURES[ink], np.float32))
+        plane = srgb_decode(channels / 255).astype(np.float32) @ luma
+    else:
+        channel, taken = int(np.argmax(lattice.first.colour)), 1.0
+        plane = srgb_decode(channels[..., channel] / 255).astype(np.float32)
+    plane = plane[..., None]
     phasors, _, _ = tile_phasors(plane, np.stack([lattice.k1, lattice.k2]), size=size)
     tone = tile_means(plane, size=size)[..., 0]
     white = max(float(np.percentile(plane, 99)), 1e-6)
     swing = np.abs(phasors[..., 0]).max(axis=0)
     weight = np.minimum(lattice.first.weight, lattice.second.weight)
     strong = weight >= max(0.5 * float(weight.max()), 1e-6)
-    share = 1 - tone[strong] / white
+    share = (1 - tone[strong] / white) / taken
     middle = (share > _MIDDLE_TONES[0]) & (share < _MIDDLE_TONES[1])
     if middle.sum() < 3:
         return None
-    expected = 2 * _disc_coefficient(share[middle]) * white
+    expected = 2 * _disc_coefficient(share[middle]) * white * taken
     return float(np.median(swing[strong][middle] / np.maximum(expected, 1e-6)))
 
 

@@ -3,16 +3,22 @@
 from __future__ import annotations
 
 import math
+from itertools import permutations
 
 import numpy as np
 from numpy.typing import NDArray
 
+from moire.chroma import ChromaReading
 from moire.lattice import Lattice, grid_distance, wrap
 from moire.model import Ink, Screen
 from moire.peaks import Peak
 from moire.units import fold_angle, lpi_to_lpcm, page_angle
 
 _ALIKE = 0.85
+_COLOUR_NOISE = 0.1
+_NAMED_ODDS = 0.4
+# One reading spoilt by another pattern must not force the names of the rest.
+_MISFIT_LIMIT = 30.0
 _TEXT_PERIOD_PX = 8.0
 # What each ink absorbs of red, green and blue, relative to its main band; process inks on coated
 # paper (ISO 12647-2 solids, value from memory).
@@ -24,30 +30,55 @@ SIGNATURES: dict[Ink, tuple[float, float, float]] = {
 }
 
 
-def name_inks(lattices: tuple[Lattice, ...]) -> tuple[Ink, ...]:
+def name_inks(
+    lattices: tuple[Lattice, ...], chroma: tuple[tuple[ChromaReading, ChromaReading], ...] = ()
+) -> tuple[Ink, ...]:
     """Ink of each lattice by its colour alone; the angle cannot tell cyan from magenta.
 
-    Each ink is given once to the four strongest; a further lattice takes the nearest ink.
-    A grey scan shows one ink as black and cannot name several.
-    """
-    from scipy.optimize import linear_sum_assignment
+    The four strongest are named together, each ink once; a further lattice takes the nearest
+    ink. A grey scan shows one ink as black and cannot name several.
 
+    Parameters
+    ----------
+    lattices : tuple of Lattice
+        Strongest first.
+    chroma : tuple of (ChromaReading, ChromaReading)
+        Colours after a codec halved the chroma; empty where colour was kept.
+    """
     if not lattices:
         return ()
     if len(lattices[0].first.colour) != 3:
         only: Ink = "black" if len(lattices) == 1 else "unknown"
         return (only,) * len(lattices)
     inks = list(SIGNATURES)
+    if chroma:
+        misfit = [[np.mean([c.misfit(SIGNATURES[ink]) for c in pair]) for ink in inks] for pair in chroma]
+        odds = _joint_odds(np.array(misfit))
+        return tuple(inks[int(row.argmax())] if row.max() > _NAMED_ODDS else "unknown" for row in odds)
     likeness = np.array([[_cosine(_colour(g), SIGNATURES[ink]) for ink in inks] for g in lattices])
-    names: list[Ink] = [inks[int(i)] for i in likeness.argmax(axis=1)]
-    rows, columns = linear_sum_assignment(-likeness[:4])
-    for row, column in zip(rows, columns, strict=True):
-        if likeness[row, column] > likeness[row].max() - 0.15:
-            names[row] = inks[column]
-    unsure = likeness.max(axis=1) <= _ALIKE
-    for row in np.flatnonzero(unsure):
-        names[row] = "unknown"
-    return tuple(names)
+    odds = _joint_odds((1 - likeness**2) / _COLOUR_NOISE**2)
+    return tuple(
+        inks[int(row.argmax())] if alike.max() > _ALIKE and row.max() > _NAMED_ODDS else "unknown"
+        for row, alike in zip(odds, likeness, strict=True)
+    )
+
+
+def _joint_odds(misfit: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Odds of each ink for each lattice, the four first sharing the inks out among them.
+
+    Parameters
+    ----------
+    misfit : ndarray, shape (lattices, inks)
+        Squared standard errors.
+    """
+    least = np.minimum(misfit - misfit.min(axis=1, keepdims=True), _MISFIT_LIMIT)
+    odds = np.exp(-least / 2)
+    together = range(min(len(odds), odds.shape[1]))
+    shared = np.zeros((len(together), odds.shape[1]))
+    for inks in permutations(range(odds.shape[1]), len(together)):
+        shared[together, inks] += odds[together, inks].prod()
+    odds[: len(together)] = shared
+    return np.asarray(odds / odds.sum(axis=1, keepdims=True))
 
 
 def _colour(lattice: Lattice) -> NDArray[np.float64]:

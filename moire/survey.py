@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
-from moire.chroma import screen_colours
+from moire.chroma import ChromaReading, read_chroma
 from moire.grids import BLOCK_SCORE, BlockGrid, find_block_grid
 from moire.lattice import Lattice, find_lattices, missing_partners
 from moire.model import Scan
@@ -37,6 +37,8 @@ class Survey:
         Lines that keep their phase.
     lattices : tuple of Lattice
         Those of printed screens.
+    chroma : tuple of (ChromaReading, ChromaReading)
+        Of each lattice's two lines, where a block codec halved the chroma; else empty.
     blocks : BlockGrid or None
     """
 
@@ -45,6 +47,7 @@ class Survey:
     size: int
     peaks: tuple[Peak, ...]
     lattices: tuple[Lattice, ...]
+    chroma: tuple[tuple[ChromaReading, ChromaReading], ...]
     blocks: BlockGrid | None
 
     @property
@@ -73,26 +76,24 @@ def take_survey(scan: Scan, channels: NDArray[np.float32], size: int) -> Survey:
     # Print or cloth is asked once, of the strongest: weak inks of a print cannot dominate it.
     if lattices and not is_halftone(lattices[0], lattices, seen, size):
         lattices = ()
+    chroma: tuple[tuple[ChromaReading, ChromaReading], ...] = ()
     if jpeg and channels.shape[2] == 3:
-        lattices = _with_folded_chroma(lattices, channels, size)
+        chroma = _read_inks(lattices, channels, size)
     return Survey(
-        scan=scan, channels=channels, size=size, peaks=peaks, lattices=lattices, blocks=blocks
+        scan=scan, channels=channels, size=size, peaks=peaks, lattices=lattices, chroma=chroma, blocks=blocks
     )  # fmt: skip
 
 
-def _with_folded_chroma(
+def _read_inks(
     lattices: tuple[Lattice, ...], channels: NDArray[np.float32], size: int
-) -> tuple[Lattice, ...]:
-    """Lattices with the colours that JPEG's chroma sampling moved elsewhere."""
+) -> tuple[tuple[ChromaReading, ChromaReading], ...]:
+    """Chroma of both lines of each lattice, read where JPEG's chroma sampling moved it."""
     if not lattices:
         return ()
     vectors = np.array([k for g in lattices for k in (g.k1, g.k2)])
     weights = np.stack([p.weight for g in lattices for p in (g.first, g.second)])
-    colours = screen_colours(channels, vectors, weights, size=size).reshape(len(lattices), 2, 3)
-    return tuple(
-        replace(g, first=replace(g.first, colour=c[0]), second=replace(g.second, colour=c[1]))
-        for g, c in zip(lattices, colours, strict=True)
-    )
+    readings = read_chroma(channels, vectors, weights, size=size)
+    return tuple(zip(readings[::2], readings[1::2], strict=True))
 
 
 def _credible(peak: Peak) -> bool:
