@@ -21,8 +21,9 @@ _TONE_FLOOR = 20.0
 # A codec shrinks faint chroma by an unknown share, down to nothing; spread of ln(share) and noise
 # of chroma over luma as seen on prints used for tuning.
 _SHARE, _SHARE_SPREAD, _CHROMA_NOISE = 0.7, 0.7, 0.035
-# Full-range YCbCr of ITU-T T.871.
+# Full-range YCbCr of ITU-T T.871 and back.
 _TO_YCC = np.array([[0.299, 0.587, 0.114], [-0.168736, -0.331264, 0.5], [0.5, -0.418688, -0.081312]])
+_TO_RGB = np.array([[1.0, 0.0, 1.402], [1.0, -0.344136, -0.714136], [1.0, 1.772, 0.0]])
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -39,6 +40,12 @@ class ChromaReading:
 
     chroma: NDArray[np.float64]
     tone: NDArray[np.float64]
+
+    @property
+    def colour(self) -> NDArray[np.float64]:
+        """Signed modulation of red, green and blue relative to the tone, mean size 1."""
+        relative = _TO_RGB @ np.array([1.0, *self.chroma]) / (self.tone + _TONE_FLOOR)
+        return np.asarray(relative / max(float(np.abs(relative).mean()), 1e-9))
 
     def misfit(self, signature: tuple[float, float, float]) -> float:
         """Squared standard errors by which an ink misses, at the likeliest loss of chroma.

@@ -22,6 +22,13 @@ _PAIR_SHARE = 0.0065
 _TAU_BINS = 0.06
 _FLOOR_SHARE = 0.02
 _FLOOR_SHARE_JPEG = 0.03
+# A second screen of one ink over the same tiles: no print has one.
+_SAME_INK_SHARE, _SAME_INK_SHARE_JPEG = 0.12, 0.06
+_SAME_INK = 0.97
+# Below these, in code values, quantisation draws lattices of its own.
+_LEAST_SWING, _LEAST_SWING_JPEG = 0.1, 0.25
+# Cosine of colours; what a codec leaves of chroma differs less.
+_SAME_COLOUR, _SAME_COLOUR_JPEG = 0.90, 0.97
 Vector = NDArray[np.float64]
 
 
@@ -47,6 +54,11 @@ class Lattice:
     second: Peak
     strength: float
     squareness_bins: float
+
+    @property
+    def colour(self) -> Vector:
+        """Modulation of each channel, both lines together."""
+        return self.first.colour * self.first.amplitude + self.second.colour * self.second.amplitude
 
 
 def wrap(f: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -97,16 +109,14 @@ def find_lattices(
     # As printed, before the scanner's blur: a faint low line is not a screen beside a blurred one.
     printed = {id(p): p.strength / transfer(p.k1) for p in pairs}
     share = _FLOOR_SHARE_JPEG if jpeg else _FLOOR_SHARE
-    pairs = [
-        p
-        for p in pairs
-        if printed[id(p)] >= share * max(printed.values())
-        and p.strength >= share * max(q.strength for q in pairs)
-    ]
+    strongest = max(p.strength for p in pairs)
+    floor = max(share * strongest, _LEAST_SWING_JPEG if jpeg else _LEAST_SWING)
+    pairs = [p for p in pairs if printed[id(p)] >= share * max(printed.values()) and p.strength >= floor]
     pairs.sort(key=lambda p: -printed[id(p)])
     accepted: list[Lattice] = []
     for pair in pairs:
-        if not explained(pair, accepted, size=size, jpeg=jpeg):
+        faint = _is_faint_beside(pair, accepted, printed, jpeg)
+        if not faint and not explained(pair, accepted, size=size, jpeg=jpeg):
             accepted.append(pair)
     # Backwards, weakest first: a generator may be a combination of those found after it.
     for pair in sorted(accepted, key=lambda p: p.strength):
@@ -114,6 +124,30 @@ def find_lattices(
         if explained(pair, others, size=size, jpeg=jpeg):
             accepted = others
     return tuple(sorted(accepted, key=lambda p: -p.strength))
+
+
+def _is_faint_beside(pair: Lattice, accepted: list[Lattice], printed: dict[int, float], jpeg: bool) -> bool:
+    """Whether a far stronger screen of the same ink lies over the same tiles."""
+    share = _SAME_INK_SHARE_JPEG if jpeg else _SAME_INK_SHARE
+    return any(
+        printed[id(pair)] < share * printed[id(g)]
+        and _alike(pair.colour, g.colour) > _SAME_INK
+        and _overlap(pair.first.weight, g.first.weight) > 0.5
+        for g in accepted
+    )
+
+
+def half_orders(
+    lattices: tuple[Lattice, ...], peaks: tuple[Peak, ...], *, size: int
+) -> tuple[tuple[int, int], ...]:
+    """Bins of the screens whose (1, 1) orders the given lattices would be, where no peak is yet."""
+    out = []
+    for g in lattices:
+        for k in ((g.k1 + g.k2) / 2, (g.k1 - g.k2) / 2):
+            for place in (k, wrap(k + 0.5)):
+                if all(grid_distance(place, p.f) > 0.5 / size for p in peaks):
+                    out.append((int(np.rint(place[0] * size)), int(np.rint(place[1] * size))))
+    return tuple(out)
 
 
 def missing_partners(
@@ -141,7 +175,7 @@ def _pairs(peaks: tuple[Peak, ...], size: int, aspect: tuple[float, float]) -> l
         error, k1, k2 = best
         bins = error * size
         ratio = max(p.amplitude, q.amplitude) / max(min(p.amplitude, q.amplitude), 1e-9)
-        cosine = float(p.colour @ q.colour / (np.linalg.norm(p.colour) * np.linalg.norm(q.colour) + 1e-12))
+        cosine = _alike(p.colour, q.colour)
         allowed = max(_PAIR_BINS, _PAIR_SHARE * size * float(np.hypot(*k1)))
         plain = bins <= allowed and ratio <= 3 and cosine > 0.90
         elliptic = bins <= allowed / 3.5 and ratio <= 9 and cosine > 0.97
@@ -177,6 +211,11 @@ def _partner_error(f: Vector, g: Vector, aspect: tuple[float, float]) -> tuple[f
     return best
 
 
+def _alike(a: Vector, b: Vector) -> float:
+    """Cosine of two colours."""
+    return float(a @ b / (np.linalg.norm(a) * np.linalg.norm(b) + 1e-12))
+
+
 def _overlap(a: NDArray[np.float32], b: NDArray[np.float32]) -> float:
     both, smaller = float(np.minimum(a, b).sum()), float(min(a.sum(), b.sum()))
     return both / smaller if smaller > 0 else 0.0
@@ -190,11 +229,16 @@ def explained(pair: Lattice, generators: list[Lattice], *, size: int, jpeg: bool
     tau = (_TAU_BINS + 0.8 * wander + 0.5 * pair.squareness_bins) / size
     strength = pair.strength / transfer(pair.k1)
     parents = [(g, g.strength / transfer(g.k1)) for g in generators]
+    # An order of a screen has the ink's colour; of a doubled phase the colour has no sign. What a
+    # codec leaves of colour only rules out the many rational orders.
+    coloured = len(pair.colour) == 3 and not (pair.first.doubled or pair.second.doubled)
+    alike = (_SAME_COLOUR_JPEG if jpeg else _SAME_COLOUR) if coloured else -1.0
+    kin = [(g, s) for g, s in parents if _alike(pair.colour, g.colour) > alike]
     return any(
         (
-            any(_is_order(pair, strength, g, s, tau) for g, s in parents),
-            any(_is_suborder(pair, strength, g, s, tau) for g, s in parents),
-            _is_sum(pair, strength, parents, tau),
+            any(_is_order(pair, strength, g, s, tau) for g, s in (parents if jpeg else kin)),
+            any(_is_suborder(pair, strength, g, s, tau) for g, s in kin),
+            _is_sum(pair, strength, parents, tau, -1.0 if jpeg else alike),
             jpeg and _is_block_image(pair, strength, parents, tau),
         )
     )
@@ -237,21 +281,33 @@ def _is_suborder(pair: Lattice, strength: float, g: Lattice, parent: float, tau:
     return bool(near.any()) and strength < 0.3 * parent
 
 
-def _is_sum(pair: Lattice, strength: float, parents: list[tuple[Lattice, float]], tau: float) -> bool:
+def _is_sum(
+    pair: Lattice, strength: float, parents: list[tuple[Lattice, float]], tau: float, alike: float
+) -> bool:
+    # Light passes every ink: their beat has the product of their colours, and where that can be
+    # seen to fit it may be as strong as they are.
+    first = 1.0 if alike == _SAME_COLOUR else 0.6
     for (a, sa), (b, sb) in combinations(parents, 2):
-        first, second = _ORDERS_2, _ORDERS_2
-        place = _places(first, a)[:, None, :] + _places(second, b)[None, :, :]
-        total = np.abs(first).sum(axis=1)[:, None] + np.abs(second).sum(axis=1)[None, :]
-        bound = np.select([total == 2, total == 3], [0.6, 0.4], 0.25) * min(sa, sb)
+        if _alike(pair.colour, _product(a, b)) < alike:
+            continue
+        place = _places(_ORDERS_2, a)[:, None, :] + _places(_ORDERS_2, b)[None, :, :]
+        total = np.abs(_ORDERS_2).sum(axis=1)[:, None] + np.abs(_ORDERS_2).sum(axis=1)[None, :]
+        bound = np.select([total == 2, total == 3], [first, 0.4], 0.25) * min(sa, sb)
         if (_near(pair, place, tau * (1 + total / 4)) & (strength < bound)).any():
             return True
     for trio in combinations(parents, 3):
         lattices = [t[0] for t in trio]
+        if _alike(pair.colour, _product(*lattices)) < alike:
+            continue
         one = [_places(_ORDERS_1, g) for g in lattices]
         place = one[0][:, None, None, :] + one[1][None, :, None, :] + one[2][None, None, :, :]
         if strength < 0.3 * min(t[1] for t in trio) and _near(pair, place, 1.75 * tau).any():
             return True
     return False
+
+
+def _product(*screens: Lattice) -> Vector:
+    return np.asarray(np.prod([np.maximum(g.colour, 0) for g in screens], axis=0))
 
 
 def _is_block_image(pair: Lattice, strength: float, parents: list[tuple[Lattice, float]], tau: float) -> bool:

@@ -3,20 +3,20 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from moire.chroma import ChromaReading, read_chroma
 from moire.grids import BLOCK_SCORE, BlockGrid, find_block_grid
-from moire.lattice import Lattice, find_lattices, missing_partners
+from moire.lattice import Lattice, find_lattices, half_orders, missing_partners, wrap
 from moire.model import Scan
 from moire.peaks import Peak, find_candidates, measure_bins
 from moire.refinement import polish, refine
 from moire.samples import rate_aspect
 from moire.screens import is_halftone
-from moire.spectrum import tile_spectrum
+from moire.spectrum import Spectrum, tile_spectrum
 
 _TILES_AT_MOST = 1200
 _CALLED_Z = 3.0
@@ -66,22 +66,44 @@ def take_survey(scan: Scan, channels: NDArray[np.float32], size: int) -> Survey:
     spectrum = tile_spectrum(mixed, size=size, pitch=pitch)
     seen = refine(channels, find_candidates(spectrum), size=size)
     peaks = tuple(p for p in seen if _credible(p))
-    # A partner too weak to stand out by itself counts where a coherent line calls for it.
-    called = measure_bins(spectrum, missing_partners(peaks, size=size, aspect=rate_aspect(scan)))
-    called = tuple(c for c in called if c.z > _CALLED_Z)
-    peaks += tuple(p for p in refine(channels, called, size=size) if _credible(p) and p.coherence > 0.9)
+    # A partner too weak to stand out by itself counts where a coherent line calls for it, and a
+    # screen whose (1, 1) order was seen where its own lines are.
+    aspect, jpeg = rate_aspect(scan), scan.jpeg or blocks is not None
+    peaks += _called(missing_partners(peaks, size=size, aspect=aspect), channels, spectrum)
+    seen_lattices = find_lattices(peaks, size=size, aspect=aspect, jpeg=jpeg)
+    peaks += _called(half_orders(seen_lattices, peaks, size=size), channels, spectrum)
     peaks = polish(channels, peaks, size=min(size, 64))
-    jpeg = scan.jpeg or blocks is not None
-    lattices = find_lattices(peaks, size=size, aspect=rate_aspect(scan), jpeg=jpeg)
+    halved = jpeg and channels.shape[2] == 3
+    if halved:
+        peaks = _with_chroma(peaks, channels, size)
+    lattices = find_lattices(peaks, size=size, aspect=aspect, jpeg=jpeg)
     # Print or cloth is asked once, of the strongest: weak inks of a print cannot dominate it.
     if lattices and not is_halftone(lattices[0], lattices, seen, size):
         lattices = ()
     chroma: tuple[tuple[ChromaReading, ChromaReading], ...] = ()
-    if jpeg and channels.shape[2] == 3:
+    if halved:
         chroma = _read_inks(lattices, channels, size)
     return Survey(
         scan=scan, channels=channels, size=size, peaks=peaks, lattices=lattices, chroma=chroma, blocks=blocks
     )  # fmt: skip
+
+
+def _with_chroma(peaks: tuple[Peak, ...], channels: NDArray[np.float32], size: int) -> tuple[Peak, ...]:
+    """Peaks with the colours that a codec's halved chroma moved elsewhere."""
+    if not peaks:
+        return ()
+    places, weights = np.array([wrap(p.f) for p in peaks]), np.stack([p.weight for p in peaks])
+    readings = read_chroma(channels, places, weights, size=size)
+    return tuple(replace(p, colour=r.colour) for p, r in zip(peaks, readings, strict=True))
+
+
+def _called(
+    bins: tuple[tuple[int, int], ...], channels: NDArray[np.float32], spectrum: Spectrum
+) -> tuple[Peak, ...]:
+    """Coherent lines at bins that others call for."""
+    called = tuple(c for c in measure_bins(spectrum, bins) if c.z > _CALLED_Z)
+    found = refine(channels, called, size=spectrum.size)
+    return tuple(p for p in found if _credible(p) and p.coherence > 0.9)
 
 
 def _read_inks(
