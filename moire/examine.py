@@ -19,7 +19,9 @@ from moire.verdict import judge
 from moire.vision import lightness, viewing_condition, visibility
 
 
-def examine(scan: Scan, *, viewing: Literal["monitor", "print"] = "monitor") -> Examination:
+def examine(
+    scan: Scan, *, viewing: Literal["monitor", "print"] = "monitor", second: Scan | None = None
+) -> Examination:
     """Find and explain every periodic pattern in one scan.
 
     Parameters
@@ -28,6 +30,9 @@ def examine(scan: Scan, *, viewing: Literal["monitor", "print"] = "monitor") -> 
         Of any mode and depth; without a ppi results are per pixel and say so.
     viewing : {"monitor", "print"}
         Condition under which visibility is judged.
+    second : Scan or None
+        Another scan of the same original, at another ppi or turned by a few degrees: it settles
+        which screens are folded.
 
     Returns
     -------
@@ -35,13 +40,12 @@ def examine(scan: Scan, *, viewing: Literal["monitor", "print"] = "monitor") -> 
         Findings, most visible first, a verdict and advice.
     """
     condition = viewing_condition(viewing)
-    channels = rgb_codes(scan)
-    size = tile_size(scan)
+    survey = _survey(scan)
     findings: tuple[Finding, ...] = ()
-    if size:
-        findings = _weigh(take_survey(scan, channels, size), condition)
+    if survey is not None:
+        findings = _weigh(survey, None if second is None else _survey(second), condition)
     verdict, worst, advice = judge(findings)
-    if not size:
+    if survey is None:
         verdict, advice = "refer", ("The scan is too small to measure a pattern in it: a person must look.",)
     if scan.ppi is None:
         advice += ("The sampling rate is unknown: give it with --ppi to have rulings in lines per inch.",)
@@ -64,9 +68,15 @@ def examine(scan: Scan, *, viewing: Literal["monitor", "print"] = "monitor") -> 
     )
 
 
-def _weigh(survey: Survey, condition: Viewing) -> tuple[Finding, ...]:
+def _survey(scan: Scan) -> Survey | None:
+    """What a scan holds; None where it is too small to hold a tile."""
+    size = tile_size(scan)
+    return take_survey(scan, rgb_codes(scan), size) if size else None
+
+
+def _weigh(survey: Survey, second: Survey | None, condition: Viewing) -> tuple[Finding, ...]:
     """Named findings, screens first, then what remains."""
-    groups = group_lines(survey)
+    groups = group_lines(survey, second)
     used = [peak for group in groups for peak, _ in group.lines]
     levels = {}
     if used:

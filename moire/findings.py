@@ -30,14 +30,10 @@ class Group:
     lines: list[tuple[Peak, tuple[int, int] | None]]
 
 
-def group_lines(survey: Survey) -> list[Group]:
+def group_lines(survey: Survey, second: Survey | None = None) -> list[Group]:
     """Findings without visibility, screens first, then what remains."""
     inks = name_inks(survey.lattices, survey.chroma)
-    folds: tuple[Fold | None, ...] = (None,) * len(survey.lattices)
-    if survey.scan.ppi is not None:
-        folds = judge_folds(
-            survey.lattices, inks, survey.channels, survey.scan.ppi, size=survey.size, jpeg=survey.jpeg
-        )
+    folds = judge_folds(survey, inks, second)
     groups = [_screen_group(survey, *each) for each in zip(survey.lattices, inks, folds, strict=True)]
     taken = {id(p) for g in survey.lattices for p in (g.first, g.second)}
     rest = []

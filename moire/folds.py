@@ -13,17 +13,20 @@ from moire.folding import Unfolded, agree, unfold
 from moire.lattice import Lattice
 from moire.model import Candidate, Ink, Kind, Screen
 from moire.scanner import srgb_decode
-from moire.screens import SIGNATURES, measure_screen
+from moire.screens import SIGNATURES, measure_screen, name_inks
+from moire.settling import settle
 from moire.spectrum import tile_means, tile_phasors
+from moire.survey import Survey
 
 _SETTLED = 0.9
 _EDGE_CPP = 0.005
 _MIDDLE_TONES = (0.08, 0.92)
+_NEXT = "a second scan at another ppi, or with the sheet turned by 5 degrees, settles it (--second)"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Fold:
-    """What one scan says about a lattice's true frequency."""
+    """What a scan, or two, say about a lattice's true frequency."""
 
     kind: Kind
     settled: bool
@@ -32,53 +35,78 @@ class Fold:
     words: str
 
 
-def judge_folds(
-    lattices: Sequence[Lattice],
-    inks: Sequence[Ink],
-    channels: NDArray[np.float32],
-    ppi: tuple[float, float],
-    *,
-    size: int,
-    jpeg: bool,
-) -> tuple[Fold | None, ...]:
+def judge_folds(survey: Survey, inks: Sequence[Ink], second: Survey | None = None) -> tuple[Fold | None, ...]:
     """Weigh the true screens that could be seen as each lattice of one print.
 
-    None for a lattice that no usual print could be.
+    Parameters
+    ----------
+    survey : Survey
+        Of a scan with a known rate.
+    inks : sequence of str
+        Ink of each lattice.
+    second : Survey or None
+        Of another scan of the same original, at another rate or turned.
+
+    Returns
+    -------
+    tuple of Fold or None
+        None for a lattice that no usual print could be.
     """
-    alone = len(lattices) == 1
-    # A codec that halved the chroma leaves a coloured ink only its luma to be judged by.
-    by_luma = jpeg and channels.shape[2] == 3
-    contrasts = [_contrast(g, i, channels, size, by_luma) for g, i in zip(lattices, inks, strict=True)]
-    options = agree(
-        [unfold(g.k1, ppi, contrast=c, alone=alone) for g, c in zip(lattices, contrasts, strict=True)]
-    )
+    ppi = survey.scan.ppi
+    if ppi is None:
+        return (None,) * len(survey.lattices)
+    options = _weigh(survey, ppi, inks)
+    words = ""
+    if second is not None and second.scan.ppi is not None:
+        others = _weigh(second, second.scan.ppi, name_inks(second.lattices, second.chroma))
+        options, turn = settle(options, others)
+        words = "no screen of the second scan is this one" if turn is None else (
+            f"settled with a second scan at {second.scan.ppi[0]:g} ppi, turned by {turn:.2f} degrees"
+        )  # fmt: skip
     return tuple(
-        _judge(o, g, ppi, ink) if o else None for o, g, ink in zip(options, lattices, inks, strict=True)
+        _judge(o, g, ppi, ink, words) if o else None
+        for o, g, ink in zip(options, survey.lattices, inks, strict=True)
     )
 
 
-def _judge(options: tuple[Unfolded, ...], lattice: Lattice, ppi: tuple[float, float], ink: Ink) -> Fold:
+def _weigh(survey: Survey, ppi: tuple[float, float], inks: Sequence[Ink]) -> tuple[tuple[Unfolded, ...], ...]:
+    alone = len(survey.lattices) == 1
+    contrasts = [_contrast(survey, g, ink) for g, ink in zip(survey.lattices, inks, strict=True)]
+    return agree(
+        [unfold(g.k1, ppi, contrast=c, alone=alone) for g, c in zip(survey.lattices, contrasts, strict=True)]
+    )
+
+
+def _judge(
+    options: tuple[Unfolded, ...], lattice: Lattice, ppi: tuple[float, float], ink: Ink, second: str
+) -> Fold:
     best = options[0]
-    screen = _screen(best, lattice, ppi, ink)
     listed = tuple(
         Candidate(ruling_lpi=o.ruling_lpi, angle_deg=o.angle_deg, order=o.order, probability=o.probability)
         for o in options[:5]
         if o.probability > 0.005
     )
+    screen = _screen(best, lattice, ppi, ink)
     direct = sum(o.probability for o in options if o.order == (0, 0))
-    edge = float(np.abs(np.abs(np.stack([lattice.k1, lattice.k2])) - 0.5).min())
-    if best.order == (0, 0) and direct >= _SETTLED and edge > _EDGE_CPP:
+    # At the edge of the grid a line meets its own mirror image: only another scan can tell.
+    edge = float(np.abs(np.abs(np.stack([lattice.k1, lattice.k2])) - 0.5).min()) <= _EDGE_CPP
+    settled = best.probability >= _SETTLED and (bool(second) or (best.order == (0, 0) and not edge))
+    kind: Kind = "halftone" if best.order == (0, 0) and (settled or direct > 0.6) else "alias"
+    if settled and second:
+        order = "not folded" if best.order == (0, 0) else f"folded by order {best.order}"
+        words = f"{second}: {best.ruling_lpi:.1f} lpi at {best.angle_deg:.1f} degrees, {order}"
+    elif settled:
         words = f"not folded: probability {direct:.3f} by ruling, angle and remaining contrast"
-        return Fold(kind="halftone", settled=True, screen=screen, candidates=listed, words=words)
-    if best.order == (0, 0):
-        kind: Kind = "halftone" if direct > 0.6 else "alias"
-        words = f"probably not folded ({direct:.2f}), but one scan cannot rule a fold out"
-        return Fold(kind=kind, settled=False, screen=screen, candidates=listed, words=words)
-    words = (
-        f"folded: {best.ruling_lpi:.1f} lpi at {best.angle_deg:.1f} degrees by order {best.order} is the "
-        f"most probable source ({best.probability:.2f}); a second scan at another ppi settles it"
-    )
-    return Fold(kind="alias", settled=False, screen=screen, candidates=listed, words=words)
+    elif best.order == (0, 0):
+        words = f"probably not folded ({direct:.2f}), but one scan cannot rule a fold out; {_NEXT}"
+    else:
+        words = (
+            f"folded: {best.ruling_lpi:.1f} lpi at {best.angle_deg:.1f} degrees by order {best.order} is "
+            f"the most probable source ({best.probability:.2f}); {_NEXT}"
+        )
+    if second and not settled:
+        words += "; the second scan given does not settle it"
+    return Fold(kind=kind, settled=settled, screen=screen, candidates=listed, words=words)
 
 
 def _screen(best: Unfolded, lattice: Lattice, ppi: tuple[float, float], ink: Ink) -> Screen:
@@ -92,15 +120,15 @@ def _screen(best: Unfolded, lattice: Lattice, ppi: tuple[float, float], ink: Ink
     return measure_screen(k1, k2 * rate, (sigma[0], sigma[1]), ink=ink)
 
 
-def _contrast(
-    lattice: Lattice, ink: Ink, channels: NDArray[np.float32], size: int, by_luma: bool
-) -> float | None:
+def _contrast(survey: Survey, lattice: Lattice, ink: Ink) -> float | None:
     """Observed modulation over that of a screen of this tone without loss.
 
     In the channel that the ink takes most of, or in luma with the ink's share of it. None where
     the tone is so light or dark that the expected modulation is itself uncertain.
     """
-    if by_luma:
+    channels, size = survey.channels, survey.size
+    # A codec that halved the chroma leaves a coloured ink only its luma to be judged by.
+    if survey.chroma:
         if ink == "unknown":
             return None
         luma = np.array([0.2126, 0.7152, 0.0722], np.float32)

@@ -10,8 +10,9 @@ from numpy.typing import NDArray
 
 from moire.chroma import ChromaReading, read_chroma
 from moire.grids import BLOCK_SCORE, BlockGrid, find_block_grid
-from moire.lattice import Lattice, find_lattices, half_orders, missing_partners, wrap
+from moire.lattice import Lattice, wrap
 from moire.model import Scan
+from moire.pairing import find_lattices, half_orders, missing_partners
 from moire.peaks import Peak, find_candidates, measure_bins
 from moire.refinement import polish, refine
 from moire.samples import rate_aspect

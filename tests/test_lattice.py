@@ -6,7 +6,8 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from moire.beats import rosette_parents
-from moire.lattice import Lattice, find_lattices, grid_distance, missing_partners, quarter_turn, wrap
+from moire.lattice import Lattice, grid_distance, quarter_turn, wrap
+from moire.pairing import find_lattices, missing_partners
 from moire.peaks import Peak
 from moire.screens import measure_screen, name_inks, order_of
 from moire.units import page_vector

@@ -6,12 +6,18 @@ from typing import Any
 
 import click
 
-from moire.cli.options import VERDICTS, shared
+from moire.cli.options import VERDICTS, PpiType, shared
 
 
 @click.command("examine")
 @click.argument("scan", type=click.Path())
 @shared("ppi", "viewing", "page")
+@click.option(
+    "--second",
+    type=click.Path(),
+    help="Another scan of the same original, at another ppi or turned by a few degrees: settles folds.",
+)
+@click.option("--second-ppi", type=PpiType(), metavar="N|XxY", help="Sampling rate of the second scan.")
 @click.option(
     "--fail-on", type=click.Choice(VERDICTS), multiple=True, help="Exit with code 10 on this verdict."
 )
@@ -23,15 +29,22 @@ def command(scan: str, **flags: Any) -> int:
     Example:
       moire examine postcard.tif --ppi 600
       moire examine page.png --json --fail-on rescan > page.json
+      moire examine leaf-300.tif --second leaf-400.tif
     """
     from moire.cli.console import console, print_json, show_examination
     from moire.cli.main import EXIT_VERDICT
+    from moire.errors import BadRequest
     from moire.examine import examine
     from moire.scanfile import read
 
     out = console(as_json=flags["as_json"], quiet=flags["quiet"])
     master = read(scan, ppi=flags["ppi"], page=flags["page"])
-    found = examine(master, viewing=flags["viewing"])
+    second = None if flags["second"] is None else read(flags["second"], ppi=flags["second_ppi"])
+    if second is not None and (second.ppi is None or master.ppi is None):
+        raise BadRequest(
+            "--second needs the ppi of both scans: give --ppi, or a second scan that states its own."
+        )
+    found = examine(master, viewing=flags["viewing"], second=second)
     if flags["report"]:
         from moire.cli.reporting import save_report
 
