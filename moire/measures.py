@@ -5,7 +5,9 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
+from moire.patches import Codes, cut_patches, patch_phasors, strong_tiles
 from moire.spectrum import tile_means, tile_phasors
+from moire.vision import lightness
 
 _EDGES = 300
 
@@ -40,8 +42,7 @@ def line_levels(
     weights : ndarray
         The weights used.
     """
-    image = plane[..., None]
-    v = np.abs(tile_phasors(image, frequencies, size=size)[0][..., 0])
+    v = np.abs(tile_phasors(plane, frequencies, size=size)[0])
     if weights is None:
         sought = v if inside is None else np.where(inside, v, np.nan)
         strong = np.nanquantile(sought, 0.95, axis=(1, 2), keepdims=True)
@@ -52,11 +53,37 @@ def line_levels(
     ring = 4 / size * np.array([(np.cos(a), np.sin(a)) for a in np.pi * np.arange(8) / 4])
     around = np.zeros(len(frequencies))
     for offset in ring:
-        side = np.abs(tile_phasors(image, frequencies + offset, size=size)[0][..., 0])
+        side = np.abs(tile_phasors(plane, frequencies + offset, size=size)[0])
         around += (side**2 * weights).sum(axis=(1, 2)) / total
-    tone = tile_means(image, size=size)[..., 0]
+    tone = tile_means(plane, size=size)
     mean = (tone[None] * weights).sum(axis=(1, 2)) / total
     return amplitude, np.sqrt(around / 8), mean, weights
+
+
+def levels_where_strong(
+    codes: Codes, frequencies: NDArray[np.float64], weights: NDArray[np.float32], *, size: int
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """L* swing of each line, and the mean L* under it, in tiles that carry it well.
+
+    Parameters
+    ----------
+    codes : ndarray, shape (rows, columns, channels)
+        Code values on a 0..255 scale.
+    frequencies : ndarray, shape (n, 2)
+        Cycles per pixel.
+    weights : ndarray, shape (n, tile rows, tile columns)
+        Where each line counts.
+    size : int
+        Tile side.
+    """
+    swing, tone = np.zeros(len(frequencies)), np.zeros(len(frequencies))
+    for i, (f, weight) in enumerate(zip(frequencies, weights, strict=True)):
+        tiles = strong_tiles(weight)
+        patches = cut_patches(codes, tiles, size=size)
+        light = lightness(patches.reshape(-1, size, codes.shape[2])).reshape(-1, size, size, 1)
+        v, means = patch_phasors(light, f[None])
+        swing[i], tone[i] = np.abs(v[0, :, 0]).mean(), means.mean()
+    return swing, tone
 
 
 def edge_energy(before: NDArray[np.float32], after: NDArray[np.float32]) -> float | None:
