@@ -6,8 +6,6 @@ import math
 from dataclasses import replace
 from typing import Literal
 
-import numpy as np
-
 import moire
 from moire.findings import group_lines
 from moire.measures import levels_where_strong
@@ -80,12 +78,7 @@ def _weigh(survey: Survey, second: Survey | None, condition: Viewing) -> tuple[F
     used = [peak for group in groups for peak, _ in group.lines]
     levels = {}
     if used:
-        amplitude, mean = levels_where_strong(
-            survey.codes,
-            np.array([p.f for p in used]),
-            np.stack([p.weight for p in used]),
-            size=survey.size,
-        )
+        amplitude, mean = levels_where_strong(survey.codes, used, size=survey.size)
         levels = {id(p): (float(a), float(m)) for p, a, m in zip(used, amplitude, mean, strict=True)}
     out = []
     for group in groups:

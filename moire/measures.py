@@ -2,10 +2,13 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import numpy as np
 from numpy.typing import NDArray
 
 from moire.patches import Codes, cut_patches, patch_phasors, strong_tiles
+from moire.peaks import Peak
 from moire.spectrum import tile_means, tile_phasors
 from moire.vision import lightness
 
@@ -61,28 +64,32 @@ def line_levels(
 
 
 def levels_where_strong(
-    codes: Codes, frequencies: NDArray[np.float64], weights: NDArray[np.float32], *, size: int
+    codes: Codes, peaks: Sequence[Peak], *, size: int
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """L* swing of each line, and the mean L* under it, in tiles that carry it well.
+
+    A line in step over the page is added up in step, so that picture detail at its frequency
+    does not count.
 
     Parameters
     ----------
     codes : ndarray, shape (rows, columns, channels)
         Code values on a 0..255 scale.
-    frequencies : ndarray, shape (n, 2)
-        Cycles per pixel.
-    weights : ndarray, shape (n, tile rows, tile columns)
-        Where each line counts.
+    peaks : sequence of Peak
     size : int
-        Tile side.
+        Tile side of the peaks' weights.
     """
-    swing, tone = np.zeros(len(frequencies)), np.zeros(len(frequencies))
-    for i, (f, weight) in enumerate(zip(frequencies, weights, strict=True)):
-        tiles = strong_tiles(weight)
+    swing, tone = np.zeros(len(peaks)), np.zeros(len(peaks))
+    for i, peak in enumerate(peaks):
+        tiles = strong_tiles(peak.weight)
         patches = cut_patches(codes, tiles, size=size)
         light = lightness(patches.reshape(-1, size, codes.shape[2])).reshape(-1, size, size, 1)
-        v, means = patch_phasors(light, f[None])
-        swing[i], tone[i] = np.abs(v[0, :, 0]).mean(), means.mean()
+        v, means = patch_phasors(light, peak.f[None])
+        turn = np.exp(-2j * np.pi * (size // 2) * (tiles[:, 1] * peak.f[0] + tiles[:, 0] * peak.f[1]))
+        in_step = abs((v[0, :, 0] * turn).mean())
+        apart = np.abs(v[0, :, 0]).mean()
+        swing[i] = in_step / peak.coherence if peak.coherence > 0.97 and not peak.doubled else apart
+        tone[i] = means.mean()
     return swing, tone
 
 

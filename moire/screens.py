@@ -133,6 +133,28 @@ def measure_screen(
     )
 
 
+def measure_line_screen(k_cpi: NDArray[np.float64], sigma_cpi: float, *, ink: Ink) -> Screen:
+    """Ruling and angle of a screen of lines; the angle is the direction across the lines, [0, 180)."""
+    ruling = float(np.hypot(*k_cpi))
+    return Screen(
+        ruling_lpi=ruling,
+        ruling_lpi_sigma=math.hypot(sigma_cpi * _SIGMA_SCALE, _GRID_SIGMA * ruling),
+        ruling_lpcm=lpi_to_lpcm(ruling),
+        angle_deg=fold_angle(page_angle(*k_cpi), 180),
+        angle_deg_sigma=math.degrees(math.hypot(sigma_cpi * _SIGMA_SCALE / ruling, _GRID_SIGMA)),
+        ink=ink,
+        shape="line",
+    )
+
+
+def name_line_ink(colour: NDArray[np.float64]) -> Ink:
+    """Nearest ink by colour of a single line; black in a grey scan."""
+    if len(colour) != 3:
+        return "black"
+    best = max(SIGNATURES, key=lambda ink: _cosine(colour, SIGNATURES[ink]))
+    return best if _cosine(colour, SIGNATURES[best]) > _ALIKE else "unknown"
+
+
 def is_halftone(lattice: Lattice, lattices: tuple[Lattice, ...], peaks: tuple[Peak, ...], size: int) -> bool:
     """Vote on whether a square lattice is print or cloth.
 

@@ -8,8 +8,9 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
+from moire.banding import Band, find_bands
+from moire.blocks import BlockGrid, find_block_grid
 from moire.chroma import ChromaReading, read_chroma
-from moire.grids import BLOCK_SCORE, BlockGrid, find_block_grid
 from moire.lattice import Lattice, wrap
 from moire.model import Scan
 from moire.pairing import find_lattices, half_orders, missing_partners
@@ -22,6 +23,9 @@ from moire.spectrum import Spectrum, tile_spectrum
 
 _TILES_AT_MOST = 1200
 _CALLED_Z = 3.0
+# Excess that is worth one robust standard deviation, for a profile's line beside a tile's.
+_NAT_OF_Z = 0.35
+_BANDS_AT_MOST = 3
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -54,23 +58,22 @@ class Survey:
 
     @property
     def jpeg(self) -> bool:
-        """Whether the pixels went through a block codec."""
-        return self.scan.jpeg or self.blocks is not None
+        """Whether the pixels lie as a block codec left them."""
+        return self.scan.jpeg or _in_place(self.blocks)
 
 
 def take_survey(scan: Scan, size: int) -> Survey:
     """Measure a scan in tiles of `size`: lines, then the lattices that they form."""
     codes = code_planes(scan)
     mixed = mixed_plane(codes)
-    grid = find_block_grid(mixed)
-    blocks = grid if grid.score > BLOCK_SCORE else None
+    blocks = find_block_grid(mixed)
     pitch = max(size // 2, math.isqrt(mixed.size // _TILES_AT_MOST))
     spectrum = tile_spectrum(mixed, size=size, pitch=pitch)
     seen = refine(mixed, find_candidates(spectrum), size=size)
     peaks = tuple(p for p in seen if _credible(p))
     # A partner too weak to stand out by itself counts where a coherent line calls for it, and a
     # screen whose (1, 1) order was seen where its own lines are.
-    aspect, jpeg = rate_aspect(scan), scan.jpeg or blocks is not None
+    aspect, jpeg = rate_aspect(scan), scan.jpeg or _in_place(blocks)
     peaks += _called(missing_partners(peaks, size=size, aspect=aspect), mixed, spectrum)
     seen_lattices = find_lattices(peaks, size=size, aspect=aspect, jpeg=jpeg)
     peaks += _called(half_orders(seen_lattices, peaks, size=size), mixed, spectrum)
@@ -82,9 +85,60 @@ def take_survey(scan: Scan, size: int) -> Survey:
     if lattices and not is_halftone(lattices[0], lattices, seen, size):
         lattices = ()
     chroma = _read_inks(lattices, codes, size) if halved else ()
+    hop = size // 2
+    grid = (mixed.shape[0] // hop - 1, mixed.shape[1] // hop - 1)
+    peaks += _band_peaks(find_bands(mixed), peaks, blocks, size=size, grid=grid)
     return Survey(
         scan=scan, codes=codes, size=size, peaks=peaks, lattices=lattices, chroma=chroma, blocks=blocks
     )  # fmt: skip
+
+
+def _band_peaks(
+    bands: tuple[Band, ...],
+    peaks: tuple[Peak, ...],
+    blocks: BlockGrid | None,
+    *,
+    size: int,
+    grid: tuple[int, int],
+) -> tuple[Peak, ...]:
+    """Faint lines of the whole page as peaks, less those that tiles saw too."""
+    weight = np.ones(grid, np.float32)
+    out = []
+    for band in _sparse(bands):
+        f, sigma = np.zeros(2), np.full(2, band.sigma_cpp)
+        f[band.axis] = band.f_cpp
+        # Where tiles saw lines on this axis already (text, rules, threads), fainter ones are theirs.
+        if any(abs(p.f[1 - band.axis]) < 1 / size for p in peaks):
+            continue
+        if blocks is not None and abs(band.f_cpp * blocks.period_px % 1 - 0.5) > 0.45:
+            continue
+        out.append(
+            Peak(
+                f=f,
+                sigma=sigma,
+                z=band.excess_nat / _NAT_OF_Z,
+                excess_nat=band.excess_nat,
+                amplitude=band.amplitude,
+                coherence=1.0,
+                local_coherence=1.0,
+                doubled=False,
+                tiles=float(weight.size),
+                bin_cpp=1 / size,
+                off_bin=0.0,
+                colour=np.ones(1),
+                weight=weight,
+            )
+        )
+    return tuple(out)
+
+
+def _sparse(bands: tuple[Band, ...]) -> tuple[Band, ...]:
+    """Bands of axes that show only a few: a scanner has one or two periods, a comb is content."""
+    return tuple(b for b in bands if sum(o.axis == b.axis for o in bands) <= _BANDS_AT_MOST)
+
+
+def _in_place(blocks: BlockGrid | None) -> bool:
+    return blocks is not None and blocks.period_px == 8
 
 
 def _with_chroma(peaks: tuple[Peak, ...], codes: Codes, size: int) -> tuple[Peak, ...]:
