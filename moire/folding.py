@@ -31,6 +31,8 @@ _COMMON_RULING_SD = 0.05
 # The terms of a score are not independent; power of the odds that makes them honest on the prints
 # used for tuning.
 _TEMPER = 0.6
+# Odds against each fold, as a power of e: scans are meant to be fine enough.
+_FOLD_COST = 0.7
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -103,7 +105,7 @@ def unfold(
         if not _RULING_RANGE[0] <= ruling <= _RULING_RANGE[1]:
             continue
         angle = fold_angle(page_angle(*true), 90)
-        score = _log_ruling(ruling) + _log_angle(angle) - 0.7 * (abs(order[0]) + abs(order[1]))
+        score = _log_ruling(ruling) + _log_angle(angle) - _FOLD_COST * (abs(order[0]) + abs(order[1]))
         if contrast is None and order != (0, 0):
             score -= _UNSEEN_FOLD
         if contrast is not None and contrast > 0:
