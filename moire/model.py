@@ -28,6 +28,7 @@ Kind = Literal[
 Verdict = Literal["sound", "mendable", "rescan", "refer", "unreadable"]
 Ink = Literal["cyan", "magenta", "yellow", "black", "unknown"]
 PpiSource = Literal["option", "file"]
+WeavePattern = Literal["plain", "basket", "twill", "satin", "knit", "unknown"]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
