@@ -16,7 +16,8 @@ from moire.model import Finding, Ink, Kind, Scan
 from moire.peaks import Peak
 from moire.screens import name_inks, on_axis, order_of
 from moire.survey import Survey
-from moire.weaves import Threads, find_threads, measure_weave
+from moire.vision import lightness
+from moire.weaves import cloth_finding, find_threads, thread_lines
 
 _TEXTURE_LINES, _TEXTURE_OBLIQUE = 4, 2
 _OF_THE_CLOTH = 0.15
@@ -51,12 +52,14 @@ def group_lines(survey: Survey) -> list[Group]:
                 break
         else:
             rest.append(peak)
-    threads = None if survey.lattices else find_threads(tuple(rest), size=survey.size)
+    threads = None if survey.lattices else find_threads(lightness(survey.channels))
+    members: list[tuple[Peak, tuple[int, int] | None]] = []
     if threads is not None:
-        groups.append(_cloth_group(survey, threads))
-        rest = [p for p in rest if not any(p is m for m in threads.members)]
+        members = thread_lines(threads, survey.channels, tuple(rest), size=survey.size)
+        groups.append(Group(finding=cloth_finding(threads, survey.scan), lines=members))
+        rest = [p for p in rest if not any(p is m for m, _ in members)]
     merged: dict[tuple[Kind, tuple[int, ...]], Group] = {}
-    woven = 0.0 if threads is None else max(p.amplitude for p in threads.members)
+    woven = max((p.amplitude for p, _ in members), default=0.0)
     textured = not survey.lattices and _is_texture(rest)
     for peak in rest:
         found = _leftover(survey, peak, tuple(rest), woven=woven, textured=textured)
@@ -69,27 +72,6 @@ def group_lines(survey: Survey) -> list[Group]:
     if survey.blocks is not None and all(g.finding.kind != "block-grid" for g in groups):
         groups.append(_block_group(survey.blocks))
     return groups
-
-
-def _cloth_group(survey: Survey, threads: Threads) -> Group:
-    coverage, regions = _extent(threads.warp.weight, threads.weft.weight, survey.size, survey.scan)
-    ppi = survey.scan.ppi
-    finding = Finding(
-        kind="weave",
-        confidence=round(float(min(threads.warp.local_coherence, threads.weft.local_coherence)), 3),
-        visibility=0.0,
-        coverage=coverage,
-        regions=regions,
-        lines=(),
-        period_px=float(1 / np.hypot(*threads.warp.f)),
-        period_mm=_period_mm(threads.warp.f, ppi),
-        weave=None if ppi is None else measure_weave(threads, ppi),
-        evidence=(f"thread lines near both axes, bound as in a {threads.pattern} weave",),
-    )
-    named: list[tuple[Peak, tuple[int, int] | None]] = [(threads.warp, (1, 0)), (threads.weft, (0, 1))]
-    rest = (p for p in threads.members if p is not threads.warp and p is not threads.weft)
-    named.extend((p, None) for p in rest)
-    return Group(finding=finding, lines=named)
 
 
 def _screen_group(survey: Survey, lattice: Lattice, ink: Ink, fold: Fold | None) -> Group:

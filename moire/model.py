@@ -132,8 +132,12 @@ class Weave:
     sigma_per_cm: float
     ends_per_inch: float
     picks_per_inch: float
-    pattern: Literal["plain", "twill", "satin", "unknown"]
+    pattern: WeavePattern
     skew_deg: float
+    structure: str = ""
+    ends_sigma_per_cm: float | None = None
+    picks_sigma_per_cm: float | None = None
+    bow: float | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -1,97 +1,217 @@
-"""Cloth: thread frequencies and weave among the lines that no screen explains."""
+"""Cloth: is this a weave, which one, and how many threads does it have."""
 
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
-from typing import Literal
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
-from moire.lattice import grid_distance, wrap
-from moire.model import Weave
-from moire.peaks import Peak
+from moire.bindingfit import BindingFit, find_lines, fit_binding
+from moire.model import Finding, Scan, Weave
+from moire.peaks import Candidate, Peak
+from moire.refinement import refine
+from moire.spectrum import tile_spectrum
+from moire.threads import ThreadCount, count_threads
 
-_AXIS_DEG = 12.0
-# Where each weave's binding points put their lowest lines, as fractions of the thread frequencies
-# (transform of the binding matrix).
-_BINDINGS: dict[Literal["plain", "twill", "satin"], tuple[int, tuple[tuple[int, int], ...]]] = {
-    "plain": (2, ((1, 1), (1, -1))),
-    "twill": (12, ((3, 3), (3, -3), (4, 4), (4, -4))),
-    "satin": (40, ((8, 16), (16, -8), (16, 8), (8, -16), (10, 10), (5, 15), (15, -5))),
-}
+_TILE, _PITCH, _TILES_AT_MOST = 128, 64, 600
+_SMALLEST_PX = 200
+_COARSEST = 8
+# Nats gained and weight of lines at fractions of the threads' frequencies, either pair being enough.
+_SURE = ((14.0, 0.8), (12.0, 2.0), (20.0, 0.4))
+_COUNTED_LINES = 8
+_MEMBER_BINS, _PATCH = 0.8, 0.005
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Threads:
-    """Observed thread lines of a cloth.
+    """A cloth's threads as observed.
 
-    ``warp`` repeats across the page (ends), ``weft`` down it (picks); ``members`` are the
-    lines that the cloth explains.
+    Attributes
+    ----------
+    fit : BindingFit
+        The reading of the lines, at the size of the picture that showed it best.
+    count : ThreadCount
+        In pixels of that size.
+    reduction : int
+        By how many pixels that picture was reduced, each way.
     """
 
-    warp: Peak
-    weft: Peak
-    pattern: Literal["plain", "twill", "satin", "unknown"]
-    members: tuple[Peak, ...]
+    fit: BindingFit
+    count: ThreadCount
+    reduction: int
+
+    @property
+    def warp(self) -> NDArray[np.float64]:
+        """Thread frequency of the ends, cycles per pixel of the scan."""
+        return self.count.warp / self.reduction
+
+    @property
+    def weft(self) -> NDArray[np.float64]:
+        """Thread frequency of the picks, cycles per pixel of the scan."""
+        return self.count.weft / self.reduction
 
 
-def find_threads(peaks: tuple[Peak, ...], *, size: int) -> Threads | None:
-    """Two thread lines near the axes with binding lines between them, or None.
+def find_threads(image: NDArray[np.float32]) -> Threads | None:
+    """The cloth in a picture, or None.
 
     A table or a page of text also has lines on both axes; only cloth has the fractions of
     both at once that the binding of warp and weft makes.
+
+    Parameters
+    ----------
+    image : ndarray, shape (rows, columns)
+        Lightness or code values on a 0..255 scale.
     """
-    across = _strongest(peaks, axis=0)
-    down = _strongest(peaks, axis=1)
-    if across is None or down is None:
+    best: tuple[BindingFit, NDArray[np.float32], int] | None = None
+    reduction = 1
+    small = image
+    while reduction <= _COARSEST and min(small.shape) >= _SMALLEST_PX:
+        pitch = max(_PITCH, math.isqrt(small.size // _TILES_AT_MOST))
+        spectrum = tile_spectrum(small, size=_TILE, pitch=pitch)
+        fit = as_cloth(fit_binding(spectrum, find_lines(spectrum)))
+        if fit is not None and (best is None or fit.gain > best[0].gain):
+            best = (fit, small, reduction)
+        reduction *= 2
+        small = _halve(small)
+    if best is None:
         return None
-    tolerance = 0.4 / size
-    best: tuple[float, Literal["plain", "twill", "satin"]] | None = None
-    for name, (n, orders) in _BINDINGS.items():
-        energy = 0.0
-        for a, b in orders:
-            place = wrap((a * across.f + b * down.f) / n)
-            energy += sum(p.amplitude**2 for p in peaks if grid_distance(p.f, place) < tolerance)
-        if energy > 0 and (best is None or energy > best[0]):
-            best = (energy, name)
-    if best is None or best[0] < 0.02 * across.amplitude * down.amplitude:
-        return None
-    members = tuple(p for p in peaks if _is_member(p.f, across.f, down.f, tolerance))
-    return Threads(warp=across, weft=down, pattern=best[1], members=members)
+    fit, small, reduction = best
+    orders = np.array([o for _, o in fit.lines if max(map(abs, o)) <= 2][:_COUNTED_LINES])
+    count = count_threads(small, np.stack([fit.warp, fit.weft], axis=1), orders)
+    return None if count is None else Threads(fit=fit, count=count, reduction=reduction)
+
+
+def as_cloth(fits: tuple[BindingFit, ...]) -> BindingFit | None:
+    """The best of several readings as a weave if it is sure enough, else None.
+
+    It must be worth its words, and bound, not only ruled both ways: lines that a ruling worth
+    more explains as well do not count as binding.
+    """
+    ruled = next((fit for fit in fits if fit.binding.pattern == "unknown"), None)
+    for fit in fits:
+        if fit.binding.pattern == "unknown":
+            continue
+        rival = [line for line, _ in ruled.lines] if ruled is not None and ruled.gain > fit.gain else []
+        bound = sum(
+            line.weight
+            for line, order in fit.lines
+            if any(abs(c - round(c)) > 1e-6 for c in order) and not any(line is r for r in rival)
+        )
+        if any(fit.gain > gain and bound > least for gain, least in _SURE):
+            return fit
+    return None
 
 
 def measure_weave(threads: Threads, ppi: tuple[float, float]) -> Weave:
     """Thread counts of a cloth at a known sampling rate."""
     rate = np.array(ppi)
-    ends = float(np.hypot(*(threads.warp.f * rate)))
-    picks = float(np.hypot(*(threads.weft.f * rate)))
-    sigma = float(max(threads.warp.sigma.max(), threads.weft.sigma.max())) * float(rate.max())
-    lean = math.degrees(math.atan2(threads.warp.f[1] * rate[1], threads.warp.f[0] * rate[0]))
+    warp, weft = threads.warp * rate, threads.weft * rate
+    ends, picks = float(np.hypot(*warp)), float(np.hypot(*weft))
+    scale = [float(np.hypot(*(f * rate)) / np.hypot(*f)) for f in (threads.warp, threads.weft)]
+    sigma = [s / threads.reduction * k / 2.54 for s, k in zip(threads.count.sigma, scale, strict=True)]
+    skew = math.degrees(math.atan2(weft[0], weft[1]) - math.atan2(-warp[1], warp[0]))
     return Weave(
         ends_per_cm=ends / 2.54,
         picks_per_cm=picks / 2.54,
-        sigma_per_cm=sigma / 2.54,
+        sigma_per_cm=max(sigma),
         ends_per_inch=ends,
         picks_per_inch=picks,
-        pattern=threads.pattern,
-        skew_deg=-(lean + 90) % 180 - 90,
+        pattern=threads.fit.binding.pattern,
+        skew_deg=skew,
+        structure=threads.fit.binding.structure,
+        ends_sigma_per_cm=sigma[0],
+        picks_sigma_per_cm=sigma[1],
+        bow=threads.count.bow,
     )
 
 
-def _strongest(peaks: tuple[Peak, ...], *, axis: int) -> Peak | None:
-    limit = math.tan(math.radians(_AXIS_DEG))
-    near = [p for p in peaks if abs(p.f[1 - axis]) <= limit * abs(p.f[axis])]
-    return max(near, key=lambda p: p.amplitude, default=None)
+def cloth_finding(threads: Threads, scan: Scan) -> Finding:
+    """What is told of a cloth; its lines and visibility are filled in by the caller."""
+    binding = threads.fit.binding
+    coverage, regions = _extent(threads, scan)
+    evidence = [
+        f"{len(threads.fit.lines)} lines at fractions of two thread frequencies, as in a {binding.structure} "
+        f"weave (worth {threads.fit.gain:.0f} nat)",
+        "which threads are the warp cannot be seen: ends are taken to run down the page",
+    ]
+    rate = scan.ppi
+    return Finding(
+        kind="weave",
+        confidence=round(1 - math.exp(-(threads.fit.gain - _SURE[0][0] / 2) / 8), 3),
+        visibility=0.0,
+        coverage=coverage,
+        regions=regions,
+        lines=(),
+        period_px=float(1 / np.hypot(*threads.warp)),
+        period_mm=None if rate is None else float(25.4 / np.hypot(*(threads.warp * np.array(rate)))),
+        weave=None if rate is None else measure_weave(threads, rate),
+        evidence=tuple(evidence),
+    )
 
 
-def _is_member(
-    f: NDArray[np.float64], warp: NDArray[np.float64], weft: NDArray[np.float64], tolerance: float
-) -> bool:
-    for n in (1, 2, 3, 4, 5, 8):
-        orders = np.arange(-3 * n, 3 * n + 1) / n
-        place = orders[:, None, None] * warp + orders[None, :, None] * weft
-        if bool((grid_distance(f, place) < tolerance).any()):
-            return True
-    return False
+def thread_lines(
+    threads: Threads, channels: NDArray[np.float32], peaks: tuple[Peak, ...], *, size: int
+) -> list[tuple[Peak, tuple[int, int] | None]]:
+    """The cloth's lines: the two thread lines, those it was read from, and others of its orders.
+
+    Parameters
+    ----------
+    threads : Threads
+    channels : ndarray, shape (rows, columns, channels)
+        Code values on a 0..255 scale.
+    peaks : tuple of Peak
+        Lines found in the scan by other means.
+    size : int
+        Tile side that their weights refer to.
+    """
+    frame = np.stack([threads.warp, threads.weft], axis=1)
+    levels = {(1.0, 0.0): (0.0, 0.0), (0.0, 1.0): (0.0, 0.0)}
+    for line, order in threads.fit.lines:
+        levels[order] = (line.z, line.excess_nat)
+    out: list[tuple[Peak, tuple[int, int] | None]] = []
+    for order, (z, excess) in levels.items():
+        f = frame @ np.array(order)
+        if np.abs(f).max() >= 0.5:
+            continue
+        kx, ky = np.rint(f * size).astype(int)
+        candidate = Candidate(kx=int(kx), ky=int(ky), z=z, excess_nat=excess)
+        (peak,) = refine(channels, (candidate,), size=size)
+        sigma = np.hypot(*(np.array(order) * np.array(threads.count.sigma) / threads.reduction))
+        whole = all(float(c).is_integer() for c in order)
+        named = (int(order[0]), int(order[1])) if whole else None
+        out.append((replace(peak, f=f, sigma=np.full(2, sigma)), named))
+    repeat = np.array(threads.fit.binding.repeat)
+    known = [p for p, _ in out]
+    for peak in peaks:
+        near = np.rint(np.linalg.solve(frame, peak.f) * repeat) / repeat
+        if np.hypot(*(frame @ near - peak.f)) < _MEMBER_BINS / size:
+            same = [i for i, p in enumerate(known) if np.hypot(*(p.f - peak.f)) < _MEMBER_BINS / size]
+            if same:
+                out[same[0]] = (peak, out[same[0]][1])
+            else:
+                out.append((peak, None))
+    return out
+
+
+def _extent(threads: Threads, scan: Scan) -> tuple[float, tuple[tuple[int, int, int, int], ...]]:
+    """Share of the scan that is cloth, and boxes around it, largest first."""
+    import cv2
+
+    present = threads.count.present.astype(np.uint8)
+    rows, columns = present.shape
+    _, _, stats, _ = cv2.connectedComponentsWithStats(present, connectivity=8)
+    boxes = []
+    scale = (scan.width_px / columns, scan.height_px / rows)
+    for x, y, w, h, area in sorted(stats[1:].tolist(), key=lambda s: -s[4])[:12]:
+        if area >= _PATCH * present.size:
+            left, top = int(x * scale[0]), int(y * scale[1])
+            boxes.append((left, top, round((x + w) * scale[0]) - left, round((y + h) * scale[1]) - top))
+    return float(present.mean()), tuple(boxes)
+
+
+def _halve(image: NDArray[np.float32]) -> NDArray[np.float32]:
+    rows, columns = image.shape[0] // 2 * 2, image.shape[1] // 2 * 2
+    cells = image[:rows, :columns].reshape(rows // 2, 2, columns // 2, 2)
+    return np.ascontiguousarray(cells.mean(axis=(1, 3)), np.float32)
