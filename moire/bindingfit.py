@@ -292,12 +292,13 @@ def _absent(weave: _Weave, frame: NDArray[np.float64], z: NDArray[np.float64]) -
     size = len(z)
 
     def present(order: tuple[float, float]) -> bool | None:
+        least = _PRESENT_Z if weave.lowest else 2 * _PRESENT_Z
         f = frame @ np.array(order)
         if np.hypot(*f) > _OUTER_CPP or np.hypot(*f) * size < _INNER_BINS:
             return None
         x, y = np.rint(f * size).astype(int)
         return bool(
-            z[np.arange(y - 1, y + 2)[:, None] % size, np.arange(x - 1, x + 2) % size].max() > _PRESENT_Z
+            z[np.arange(y - 1, y + 2)[:, None] % size, np.arange(x - 1, x + 2) % size].max() > least
         )
 
     price = 0.0
@@ -305,7 +306,8 @@ def _absent(weave: _Weave, frame: NDArray[np.float64], z: NDArray[np.float64]) -
     if first:
         price += 8.0 * (not any(first)) + 2.0 * sum(not s for s in first)
     for order in ((1.0, 0.0), (0.0, 1.0)):
-        price += 3.0 * (present(order) is False)
+        # A ruling is nothing without its fundamentals; threads of one colour may hide theirs.
+        price += (3.0 if weave.lowest else 25.0) * (present(order) is False)
     return price
 
 
