@@ -297,9 +297,7 @@ def _absent(weave: _Weave, frame: NDArray[np.float64], z: NDArray[np.float64]) -
         if np.hypot(*f) > _OUTER_CPP or np.hypot(*f) * size < _INNER_BINS:
             return None
         x, y = np.rint(f * size).astype(int)
-        return bool(
-            z[np.arange(y - 1, y + 2)[:, None] % size, np.arange(x - 1, x + 2) % size].max() > least
-        )
+        return bool(z[np.arange(y - 1, y + 2)[:, None] % size, np.arange(x - 1, x + 2) % size].max() > least)
 
     price = 0.0
     first = [s for s in map(present, weave.lowest) if s is not None]

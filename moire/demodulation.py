@@ -62,7 +62,7 @@ def bring_to_rest(
     )
     smoothing = max(1 / (2 * math.pi * _BAND) * period, _APART / max(apart, 1e-6))
     smoothing = min(smoothing, 4 * period)
-    step = max(1, int(smoothing / 3))
+    step = max(1, int(smoothing / 2))
     rows, columns = image.shape
     size = (max(2, columns // step), max(2, rows // step))
     flat = image - cv2.GaussianBlur(image, (0, 0), period)

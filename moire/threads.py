@@ -9,17 +9,19 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from moire.demodulation import RestingLines, advances, blur, bring_to_rest, local_departures
+from moire.straightening import straighten
 
 _PRESENT = 0.3
 _LEAST_PERIODS = 6.0
 _BLOCKS = 8
 _MAP_PERIODS = 6.0
-_EDGE_THREADS = 3.0
+_EDGE_THREADS = 5.0
 _PHASE_FLOOR = 0.01
 _CHOICES, _REACH = 41, 0.35
 
@@ -77,17 +79,19 @@ def count_threads(
     ThreadCount or None
         None where the lines do not run over at least six threads both ways.
     """
-    fields = bring_to_rest(image, frame, orders)
     shape = (image.shape[1], image.shape[0])
+    fields = bring_to_rest(image, frame, orders)
     drift = _fit_drift(fields, shape)
-    turns = _drift_turns(drift, fields, shape)
-    rest = fields.values * np.exp(-2j * np.pi * turns)
-    across = _count_along(rest, turns, fields.x, fields.y, fields, axis=0)
-    down = _count_along(rest.transpose(0, 2, 1), turns.transpose(0, 2, 1), fields.y, fields.x, fields, axis=1)
-    if across is None or down is None:
+    turns = _follow(fields, _drift_turns(drift, fields, shape))
+    # Seen with its threads straightened, the cloth's lines are sharp and do not slip.
+    straight, known, place = straighten(image, frame, turns)
+    again = bring_to_rest(straight, frame, orders)
+    rest = _drift_turns(_fit_drift(again, shape), again, shape)
+    totals = [_total_along(again, rest, known, place, axis=axis) for axis in (0, 1)]
+    if totals[0] is None or totals[1] is None:
         return None
-    moved = np.stack([across[0], down[0]], axis=1)
-    sigma = np.stack([across[1], down[1]], axis=1)
+    moved = np.stack([t[0] for t in totals if t], axis=1)
+    sigma = np.stack([t[1] for t in totals if t], axis=1)
     present = _presence(fields)
     jitter = (_jitter(fields, present, 0), _jitter(fields, present, 1))
     near = fields.frame.T + local_departures(fields, _MAP_PERIODS, _MAP_PERIODS)
@@ -160,39 +164,82 @@ def _fit_drift(fields: RestingLines, shape: tuple[int, int]) -> NDArray[np.float
 def _drift_turns(
     drift: NDArray[np.float64], fields: RestingLines, shape: tuple[int, int]
 ) -> NDArray[np.float64]:
+    """Drift of warp and weft over the grid in turns, shape (2, rows, columns)."""
     value, _, _ = _basis(fields, shape)
-    return np.asarray(np.einsum("ni,ik,yxk->nyx", fields.orders, drift, value))
+    return np.asarray(np.einsum("ik,yxk->iyx", drift, value))
 
 
-def _count_along(
-    v: NDArray[np.complex64],
-    turns: NDArray[np.float64],
-    at: NDArray[np.float64],
-    other: NDArray[np.float64],
+def _rows(planes: NDArray[Any], axis: int) -> list[NDArray[Any]]:
+    """Blocks of rows (of columns for axis 1), each block running along the last axis."""
+    return np.array_split(planes if axis == 0 else planes.transpose(0, 2, 1), _BLOCKS, axis=1)
+
+
+def _advance(block: NDArray[np.complex64]) -> tuple[NDArray[np.complex64], int, int]:
+    """Products of neighbours summed over a block's rows, and the longest run where lines are.
+
+    They add up whatever the other set of threads does there, so a block follows the threads that
+    cross it all along.
+    """
+    product = (block[:, :, 1:] * np.conj(block[:, :, :-1])).sum(axis=1)
+    strength = np.abs(product).sum(axis=0)
+    return product, *_longest(strength > _PRESENT**2 * float(np.quantile(strength, 0.9)))
+
+
+def _at_rest(fields: RestingLines, drift: NDArray[np.float64]) -> NDArray[np.complex64]:
+    turns = np.einsum("ni,iyx->nyx", fields.orders, drift)
+    return np.asarray(fields.values * np.exp(-2j * np.pi * turns), np.complex64)
+
+
+def _follow(fields: RestingLines, drift: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Departures of both sets in turns over the grid, shape (2, rows, columns), as they lie."""
+    import cv2
+
+    still = _at_rest(fields, drift)
+    out = drift.copy()
+    for axis in (0, 1):
+        paths = []
+        for block in _rows(still, axis):
+            product, a, b = _advance(block)
+            path = np.zeros(block.shape[2], np.float32)
+            if b > a:
+                path[a + 1 : b + 1] = np.cumsum(_vote(product[:, a:b], fields, axis))
+                path[b + 1 :] = path[b]
+            paths.append(path - path.mean())
+        rows = out.shape[1 + axis]
+        smooth = cv2.resize(np.array(paths), (len(paths[0]), rows), interpolation=cv2.INTER_LINEAR)
+        out[axis] += smooth if axis == 0 else smooth.T
+    return out
+
+
+def _total_along(
     fields: RestingLines,
+    drift: NDArray[np.float64],
+    known: NDArray[np.float64],
+    place: NDArray[np.float64],
     *,
     axis: int,
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]] | None:
     """Mean departure of warp and weft along one axis, per pixel, and its standard uncertainty.
 
-    Neighbours' products over a block of rows add up whatever the other set of threads does there,
-    so a block follows the threads that cross it all along. At each step all lines vote on how far
-    the threads have moved; a low order cannot slip by a whole turn, a high one is sharp.
+    Parameters
+    ----------
+    fields : RestingLines
+    drift, known : ndarray, shape (2, rows, columns)
+        Turns of warp and weft still in the fields, and already taken out of them.
+    place : ndarray, shape (2, rows, columns)
+        Where the grid's points lie in the picture, pixels.
+    axis : int
     """
-    step = float(at[1] - at[0])
-    solve = np.linalg.pinv(fields.orders)
+    blocks = [_rows(a, axis) for a in (_at_rest(fields, drift), drift + known, place)]
     counts = []
-    for block, smooth in zip(
-        np.array_split(v, _BLOCKS, axis=1), np.array_split(turns, _BLOCKS, axis=1), strict=True
-    ):
-        product = (block[:, :, 1:] * np.conj(block[:, :, :-1])).sum(axis=1)
-        strength = np.abs(product).sum(axis=0)
-        a, b = _longest(strength > _PRESENT**2 * float(np.quantile(strength, 0.9)))
-        if (b - a) * step < _LEAST_PERIODS * fields.period:
+    for block, turns, at in zip(*blocks, strict=True):
+        product, a, b = _advance(block)
+        if (b - a) * fields.step[axis] < _LEAST_PERIODS * fields.period:
             continue
-        moved = _vote(product[:, a:b], fields, step, axis)
-        drift = solve @ (smooth[:, :, b] - smooth[:, :, a]).mean(axis=1)
-        counts.append((*((moved.sum(axis=1) + drift) / ((b - a) * step)), (b - a) * step))
+        length = float((at[axis, :, b] - at[axis, :, a]).mean())
+        gained = _agreed(np.angle(product[:, a:b]).sum(axis=1) / (2 * np.pi), fields)
+        gained += (turns[:, :, b] - turns[:, :, a]).mean(axis=1)
+        counts.append((*(gained / length), length))
     if not counts:
         return None
     table = np.array(counts)
@@ -205,10 +252,23 @@ def _count_along(
     return middle, np.hypot(spread / math.sqrt(len(table)), _PHASE_FLOOR / table[:, 2].max())
 
 
-def _vote(
-    product: NDArray[np.complex64], fields: RestingLines, step: float, axis: int
-) -> NDArray[np.float64]:
-    """Turns of warp and weft at each step that suit all lines best, shape (2, steps)."""
+def _agreed(turns: NDArray[np.float64], fields: RestingLines) -> NDArray[np.float64]:
+    """Turns of warp and weft on which most lines agree; a line that slipped by one is left alone."""
+    weight: NDArray[np.float64] = np.sqrt(fields.shares)
+    solution: NDArray[np.floating] = np.zeros(2)
+    for _ in range(12):
+        solution = np.linalg.lstsq(fields.orders * weight[:, None], turns * weight, rcond=None)[0]
+        off = np.abs(turns - fields.orders @ solution)
+        weight = np.sqrt(fields.shares / np.maximum(off, 0.02))
+    return np.asarray(solution)
+
+
+def _vote(product: NDArray[np.complex64], fields: RestingLines, axis: int) -> NDArray[np.float64]:
+    """Turns of one set at each step that suit all lines best.
+
+    A low order cannot slip by a whole turn, a high one is sharp.
+    """
+    step = fields.step[axis]
     own = np.linspace(-1, 1, _CHOICES) * _REACH * step * float(np.hypot(*fields.frame[:, axis]))
     cross = np.linspace(-1, 1, 7) * _REACH / 5 * step * float(np.hypot(*fields.frame[:, 1 - axis]))
     grid = np.stack(np.meshgrid(own, cross, indexing="ij"), axis=-1)[..., :: 1 if axis == 0 else -1]
@@ -222,9 +282,8 @@ def _vote(
     low, mid, high = (worth[steps, inner + k, column] for k in (-1, 0, 1))
     curve = low - 2 * mid + high
     shift = np.where(curve < 0, 0.5 * (low - high) / np.where(curve < 0, curve, 1), 0.0)
-    best = grid[row, column].T.copy()
-    best[axis] += np.where(row == inner, np.clip(shift, -0.5, 0.5), 0.0) * (own[1] - own[0])
-    return np.asarray(best)
+    inside = np.where(row == inner, np.clip(shift, -0.5, 0.5), 0.0)
+    return np.asarray(own[row] + inside * (own[1] - own[0]))
 
 
 def _longest(present: NDArray[np.bool_]) -> tuple[int, int]:

@@ -19,7 +19,7 @@ _TILE, _PITCH, _TILES_AT_MOST = 128, 64, 600
 _SMALLEST_PX = 200
 _COARSEST = 8
 # Nats gained and weight of lines at fractions of the threads' frequencies, either pair being enough.
-_SURE = ((14.0, 0.8), (12.0, 2.0), (20.0, 0.4))
+_SURE = ((14.0, 0.8), (9.0, 2.2), (20.0, 0.4))
 _COUNTED_LINES = 8
 _MEMBER_BINS, _PATCH = 0.8, 0.005
 
