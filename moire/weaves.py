@@ -9,9 +9,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from moire.bindingfit import BindingFit, find_lines, fit_binding
+from moire.bindings import Binding
 from moire.model import Finding, Scan, Weave
 from moire.peaks import Candidate, Peak
 from moire.refinement import refine
+from moire.setts import coarse_map, sett_map, sett_places, sett_range
 from moire.spectrum import tile_spectrum
 from moire.threads import ThreadCount, count_threads
 
@@ -22,6 +24,8 @@ _COARSEST = 8
 _SURE = ((14.0, 0.8), (9.0, 2.2), (20.0, 0.4))
 _COUNTED_LINES = 8
 _MEMBER_BINS, _PATCH = 0.8, 0.005
+_KNIT_GAIN = 20.0
+_JERSEY = Binding(pattern="knit", structure="single jersey", direction=None, matrix=np.zeros((1, 1), bool))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -101,7 +105,30 @@ def as_cloth(fits: tuple[BindingFit, ...]) -> BindingFit | None:
         )
         if any(fit.gain > gain and bound > least for gain, least in _SURE):
             return fit
-    return None
+    return None if ruled is None or not _is_knit(ruled) else replace(ruled, binding=_JERSEY)
+
+
+def _is_knit(ruled: BindingFit) -> bool:
+    """Whether lines both ways are those of stitches, not of rules, type or a display.
+
+    A loop shows two slanting legs, so wales have a strong second harmonic and every wale line is
+    crossed by courses on both diagonals, while courses have no comb of harmonics.
+    """
+    level: dict[tuple[int, int], float] = {}
+    for line, order in ruled.lines:
+        h, k = round(order[0]), round(order[1])
+        level[(h, k) if h > 0 or (h == 0 and k > 0) else (-h, -k)] = line.level_nat
+    low = -math.inf
+    wale, leg, course = level.get((1, 0), low), level.get((2, 0), low), level.get((0, 1), low)
+    slants = [level.get(o, low) for o in ((1, 1), (1, -1))]
+    doubled = max(level.get((2, 1), low), level.get((2, -1), low))
+    return (
+        ruled.gain > _KNIT_GAIN
+        and leg > wale - 2.5
+        and min(slants) > max(wale, course) - 3.5
+        and doubled > leg - 4
+        and level.get((0, 2), low) < course - 1.5
+    )
 
 
 def measure_weave(threads: Threads, ppi: tuple[float, float]) -> Weave:
@@ -111,6 +138,9 @@ def measure_weave(threads: Threads, ppi: tuple[float, float]) -> Weave:
     ends, picks = float(np.hypot(*warp)), float(np.hypot(*weft))
     scale = [float(np.hypot(*(f * rate)) / np.hypot(*f)) for f in (threads.warp, threads.weft)]
     sigma = [s / threads.reduction * k / 2.54 for s, k in zip(threads.count.sigma, scale, strict=True)]
+    maps = sett_map(threads.count, threads.reduction, ppi)
+    low, high = sett_range(maps)
+    coarse = coarse_map(maps, threads.count)
     skew = math.degrees(math.atan2(weft[0], weft[1]) - math.atan2(-warp[1], warp[0]))
     return Weave(
         ends_per_cm=ends / 2.54,
@@ -124,19 +154,32 @@ def measure_weave(threads: Threads, ppi: tuple[float, float]) -> Weave:
         ends_sigma_per_cm=sigma[0],
         picks_sigma_per_cm=sigma[1],
         bow=threads.count.bow,
+        ends_range_per_cm=(low[0], high[0]),
+        picks_range_per_cm=(low[1], high[1]),
+        places_per_cm=sett_places(maps),
+        ends_map_per_cm=coarse[0],
+        picks_map_per_cm=coarse[1],
     )
 
 
 def cloth_finding(threads: Threads, scan: Scan) -> Finding:
     """What is told of a cloth; its lines and visibility are filled in by the caller."""
-    binding = threads.fit.binding
+    binding, rate = threads.fit.binding, scan.ppi
     coverage, regions = _extent(threads, scan)
-    evidence = [
-        f"{len(threads.fit.lines)} lines at fractions of two thread frequencies, as in a {binding.structure} "
-        f"weave (worth {threads.fit.gain:.0f} nat)",
-        "which threads are the warp cannot be seen: ends are taken to run down the page",
-    ]
-    rate = scan.ppi
+    worth = f"(worth {threads.fit.gain:.0f} nat)"
+    if binding.pattern == "knit":
+        evidence = [
+            f"{len(threads.fit.lines)} lines of loops with two slanting legs each {worth}: a knit",
+            "wales are taken to run down the page; per cm they stand as ends, courses as picks",
+        ]
+    else:
+        evidence = [
+            f"{len(threads.fit.lines)} lines at fractions of two thread frequencies, "
+            f"as in a {binding.structure} weave {worth}",
+            "which threads are the warp cannot be seen: ends are taken to run down the page",
+        ]
+    if rate is not None:
+        evidence.extend(_count_words(threads, rate))
     return Finding(
         kind="weave",
         confidence=round(1 - math.exp(-(threads.fit.gain - _SURE[0][0] / 2) / 8), 3),
@@ -149,6 +192,19 @@ def cloth_finding(threads: Threads, scan: Scan) -> Finding:
         weave=None if rate is None else measure_weave(threads, rate),
         evidence=tuple(evidence),
     )
+
+
+def _count_words(threads: Threads, ppi: tuple[float, float]) -> list[str]:
+    """What the standards' way of counting adds, and what a picture cannot say."""
+    maps = sett_map(threads.count, threads.reduction, ppi)
+    low, high = sett_range(maps)
+    places = "; ".join(f"{ends:.1f} x {picks:.1f}" for ends, picks in sett_places(maps))
+    return [
+        f"at five places {places} ends x picks per cm (as ISO 7211-2 and ASTM D3775 count, which ask for "
+        "longer pieces than most scans hold)",
+        f"over the cloth {low[0]:.1f} to {high[0]:.1f} ends/cm and {low[1]:.1f} to {high[1]:.1f} picks/cm",
+        "in a dispute the reference method is dissection; a plied yarn counts as one thread",
+    ]
 
 
 def thread_lines(

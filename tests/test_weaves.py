@@ -101,3 +101,40 @@ def test_a_ruled_table_is_no_cloth() -> None:
     table[::9] = 60
     table[:, ::14] = 60
     assert find_threads(table) is None
+
+
+def test_a_knit_is_told_by_its_loops() -> None:
+    cloth = Cloth(width_in=1.3, height_in=1.3, ends_per_cm=12, picks_per_cm=16, pattern="knit", jitter=0.03)
+    scanner = Scanner(ppi=(500, 500), turn_deg=0.5)
+    pixels = digitise(sample(cloth, scanner), scanner, np.random.default_rng(1))
+    threads = find_threads(lightness(pixels.astype(np.float32)))
+    assert threads is not None
+    weave = measure_weave(threads, (500, 500))
+    assert (weave.pattern, weave.structure) == ("knit", "single jersey")
+    assert weave.ends_per_cm == pytest.approx(12, rel=0.005)
+    assert weave.picks_per_cm == pytest.approx(16, rel=0.005)
+
+
+def test_counts_at_five_places_and_their_range() -> None:
+    cloth, weave = seen("plain")
+    assert len(weave.places_per_cm) == 5
+    ends = [e for e, _ in weave.places_per_cm]
+    assert np.mean(ends) == pytest.approx(cloth.true_setts()[0], rel=0.01)
+    low, high = weave.ends_range_per_cm
+    assert low < weave.ends_per_cm < high
+
+
+def test_a_map_shows_where_the_sett_changes() -> None:
+    """Pictures of the same cloth at two scales side by side: the map tells one side from the other."""
+    cloth = Cloth(width_in=1.0, height_in=1.6, ends_per_cm=16, picks_per_cm=16, jitter=0.02)
+    scanner = Scanner(ppi=(400, 400))
+    pixels = lightness(digitise(sample(cloth, scanner), scanner, np.random.default_rng(1)).astype(np.float32))
+    dense = lightness(
+        digitise(sample(cloth, Scanner(ppi=(380, 400))), scanner, np.random.default_rng(1)).astype(np.float32)
+    )
+    threads = find_threads(np.hstack([pixels, dense]))
+    assert threads is not None
+    rows = measure_weave(threads, (400, 400)).ends_map_per_cm
+    left, right = (np.mean([row[i] for row in rows]) for i in (1, -2))
+    assert left == pytest.approx(16, rel=0.015)
+    assert right == pytest.approx(16 / 0.95, rel=0.015)
