@@ -159,7 +159,7 @@ def _face(fit: BindingFit) -> BindingFit:
     """
     if fit.binding.pattern != "twill" or fit.binding.direction is None:
         return fit
-    up, down = map(int, fit.binding.structure.split()[0].split("/"))
+    up, down = fit.binding.numbers
     level: dict[tuple[int, int], float] = {}
     for line, order in fit.lines:
         h, k = (round(abs(c) * (up + down)) for c in order)

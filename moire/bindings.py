@@ -40,17 +40,38 @@ class Binding:
         How a twill's wale runs on the page: Z rises to the right, S to the left.
     matrix : ndarray of bool, shape (picks, ends)
         One repeat, first row at the top of the page; True where the warp lies on top.
+    numbers : (int, int)
+        Of a basket its ends and picks, of a twill picks over and under, of a satin ends and step.
     """
 
     pattern: WeavePattern
     structure: str
     direction: Direction | None
     matrix: NDArray[np.bool_]
+    numbers: tuple[int, int] = (1, 1)
 
     @property
     def repeat(self) -> tuple[int, int]:
         """Ends and picks of one repeat."""
         return (self.matrix.shape[1], self.matrix.shape[0])
+
+    def orders(self, highest: float) -> tuple[tuple[float, float], ...]:
+        """Orders of warp and weft where the weave has lines, one of each opposite pair, lowest first.
+
+        `highest` is the largest sum of both orders' sizes.
+        """
+        ends, picks = self.repeat
+        levels = binding_levels(self.matrix)
+        h_reach, k_reach = math.floor(highest * ends), math.floor(highest * picks)
+        found = [
+            (h / ends, k / picks)
+            for h in range(-h_reach, h_reach + 1)
+            for k in range(k_reach + 1)
+            if (k > 0 or h > 0)
+            and abs(h) / ends + k / picks <= highest
+            and (levels[k % picks, h % ends] > _ZERO or (h % ends, k % picks) == (0, 0))
+        ]
+        return tuple(sorted(found, key=lambda o: (abs(o[0]) + o[1], -o[0])))
 
 
 def plain() -> Binding:
@@ -63,7 +84,13 @@ def basket(ends: int = 2, picks: int = 2) -> Binding:
     if min(ends, picks) < 1 or max(ends, picks) < 2 or 2 * max(ends, picks) > _LONGEST:
         raise ValueError(f"basket {ends}/{picks}: give 1 to 8 threads each way, at least two one way")
     matrix = np.kron(np.eye(2, dtype=bool), np.ones((picks, ends), bool))
-    return Binding(pattern="basket", structure=f"{ends}/{picks} basket", direction=None, matrix=matrix)
+    return Binding(
+        pattern="basket",
+        structure=f"{ends}/{picks} basket",
+        direction=None,
+        matrix=matrix,
+        numbers=(ends, picks),
+    )
 
 
 def twill(up: int, down: int, direction: Direction) -> Binding:
@@ -73,7 +100,11 @@ def twill(up: int, down: int, direction: Direction) -> Binding:
     # Seen upwards the float moves one end to the right (Z) or to the left (S) at each pick.
     matrix = _step_weave(up, up + down, 1 if direction == "Z" else -1)
     return Binding(
-        pattern="twill", structure=f"{up}/{down} twill {direction}", direction=direction, matrix=matrix
+        pattern="twill",
+        structure=f"{up}/{down} twill {direction}",
+        direction=direction,
+        matrix=matrix,
+        numbers=(up, down),
     )
 
 
@@ -86,7 +117,18 @@ def satin(n: int, step: int) -> Binding:
         structure=f"{n}-end satin step {step}",
         direction=None,
         matrix=_step_weave(1, n, step),
+        numbers=(n, step),
     )
+
+
+def swapped(binding: Binding) -> Binding:
+    """The same cloth with the threads that run across the page as its warp."""
+    a, b = binding.numbers
+    if binding.pattern == "basket":
+        return basket(b, a)
+    if binding.pattern == "twill" and binding.direction is not None:
+        return twill(b, a, binding.direction)
+    return satin(a, pow(b, -1, a)) if binding.pattern == "satin" else binding
 
 
 def parse_binding(text: str) -> Binding:

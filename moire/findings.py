@@ -17,10 +17,11 @@ from moire.peaks import Peak
 from moire.screens import name_inks, on_axis, order_of
 from moire.survey import Survey
 from moire.vision import lightness
-from moire.weaves import cloth_finding, find_threads, thread_lines
+from moire.weavealias import WeaveAlias
+from moire.weaves import cloth_finding, find_threads, thread_beat, thread_lines
 
 _TEXTURE_LINES, _TEXTURE_OBLIQUE = 4, 2
-_OF_THE_CLOTH = 0.15
+_OF_THE_CLOTH, _BEAT_SHARE = 0.15, 0.03
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -55,14 +56,18 @@ def group_lines(survey: Survey) -> list[Group]:
     threads = None if survey.lattices else find_threads(lightness(survey.channels))
     members: list[tuple[Peak, tuple[int, int] | None]] = []
     if threads is not None:
-        members = thread_lines(threads, survey.channels, tuple(rest), size=survey.size)
+        members, taken_up = thread_lines(threads, survey.channels, tuple(rest), size=survey.size)
         groups.append(Group(finding=cloth_finding(threads, survey.scan), lines=members))
-        rest = [p for p in rest if not any(p is m for m, _ in members)]
+        rest = [p for p in rest if not any(p is m for m in taken_up)]
     merged: dict[tuple[Kind, tuple[int, ...]], Group] = {}
     woven = max((p.amplitude for p, _ in members), default=0.0)
     textured = not survey.lattices and _is_texture(rest)
     for peak in rest:
-        found = _leftover(survey, peak, tuple(rest), woven=woven, textured=textured)
+        beat = None if threads is None else thread_beat(threads, peak.f, size=survey.size)
+        if beat is not None and peak.amplitude > _BEAT_SHARE * woven:
+            found = _beat_group(survey, peak, beat, parent=len(survey.lattices))
+        else:
+            found = _leftover(survey, peak, tuple(rest), woven=woven, textured=textured)
         key = (found.finding.kind, found.finding.parents)
         if key in merged and found.finding.kind != "banding":
             merged[key].lines.extend(found.lines)
@@ -138,6 +143,24 @@ def _leftover(survey: Survey, peak: Peak, rest: tuple[Peak, ...], *, woven: floa
         settled=settled,
         parents=() if parents is None else parents[:2],
         evidence=(words,),
+    )
+    return Group(finding=finding, lines=[(peak, None)])
+
+
+def _beat_group(survey: Survey, peak: Peak, beat: WeaveAlias, *, parent: int) -> Group:
+    coverage, regions = _extent(peak.weight, peak.weight, survey.size, survey.scan)
+    a, b = beat.order
+    finding = Finding(
+        kind="alias",
+        confidence=round(float(peak.coherence * (1 - math.exp(-(peak.z - 4) / 2))), 3),
+        visibility=0.0,
+        coverage=coverage,
+        regions=regions,
+        lines=(),
+        period_px=float(1 / np.hypot(*peak.f)),
+        period_mm=_period_mm(peak.f, survey.scan.ppi),
+        parents=(parent,),
+        evidence=(f"a beat with the pixel grid: order ({a:g}, {b:g}) of the threads, folded by {beat.fold}",),
     )
     return Group(finding=finding, lines=[(peak, None)])
 

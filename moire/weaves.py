@@ -4,18 +4,20 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass, replace
+from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
 
 from moire.bindingfit import BindingFit, find_lines, fit_binding
-from moire.bindings import Binding
+from moire.bindings import Binding, swapped
 from moire.model import Finding, Scan, Weave
 from moire.peaks import Candidate, Peak
 from moire.refinement import refine
 from moire.setts import coarse_map, sett_map, sett_places, sett_range
 from moire.spectrum import tile_spectrum
 from moire.threads import ThreadCount, count_threads
+from moire.weavealias import WeaveAlias, explain_alias, thread_aliases
 
 _TILE, _PITCH, _TILES_AT_MOST = 128, 64, 600
 _SMALLEST_PX = 200
@@ -25,6 +27,8 @@ _SURE = ((14.0, 0.8), (9.0, 2.2), (20.0, 0.4))
 _COUNTED_LINES = 8
 _MEMBER_BINS, _PATCH = 0.8, 0.005
 _KNIT_GAIN = 20.0
+_DRIFT = 0.05
+_COARSER, _BEAT_BINS, _HIGHEST_BEAT = 0.75, 0.4, 3.0
 _JERSEY = Binding(pattern="knit", structure="single jersey", direction=None, matrix=np.zeros((1, 1), bool))
 
 
@@ -131,8 +135,18 @@ def _is_knit(ruled: BindingFit) -> bool:
     )
 
 
-def measure_weave(threads: Threads, ppi: tuple[float, float]) -> Weave:
-    """Thread counts of a cloth at a known sampling rate."""
+def measure_weave(
+    threads: Threads, ppi: tuple[float, float], *, warp_runs: Literal["vertical", "horizontal"] = "vertical"
+) -> Weave:
+    """Thread counts of a cloth at a known sampling rate.
+
+    Parameters
+    ----------
+    threads : Threads
+    ppi : (float, float)
+    warp_runs : {"vertical", "horizontal"}
+        Which threads are the ends; a picture cannot tell.
+    """
     rate = np.array(ppi)
     warp, weft = threads.warp * rate, threads.weft * rate
     ends, picks = float(np.hypot(*warp)), float(np.hypot(*weft))
@@ -142,7 +156,7 @@ def measure_weave(threads: Threads, ppi: tuple[float, float]) -> Weave:
     low, high = sett_range(maps)
     coarse = coarse_map(maps, threads.count)
     skew = math.degrees(math.atan2(weft[0], weft[1]) - math.atan2(-warp[1], warp[0]))
-    return Weave(
+    weave = Weave(
         ends_per_cm=ends / 2.54,
         picks_per_cm=picks / 2.54,
         sigma_per_cm=max(sigma),
@@ -159,6 +173,27 @@ def measure_weave(threads: Threads, ppi: tuple[float, float]) -> Weave:
         places_per_cm=sett_places(maps),
         ends_map_per_cm=coarse[0],
         picks_map_per_cm=coarse[1],
+    )
+    return weave if warp_runs == "vertical" else _turned(weave, threads.fit.binding)
+
+
+def _turned(weave: Weave, binding: Binding) -> Weave:
+    """The weave with the threads across the page as its ends; its weft then runs down and has no bow."""
+    return replace(
+        weave,
+        ends_per_cm=weave.picks_per_cm,
+        picks_per_cm=weave.ends_per_cm,
+        ends_per_inch=weave.picks_per_inch,
+        picks_per_inch=weave.ends_per_inch,
+        structure=swapped(binding).structure,
+        ends_sigma_per_cm=weave.picks_sigma_per_cm,
+        picks_sigma_per_cm=weave.ends_sigma_per_cm,
+        bow=None,
+        ends_range_per_cm=weave.picks_range_per_cm,
+        picks_range_per_cm=weave.ends_range_per_cm,
+        places_per_cm=tuple((p, e) for e, p in weave.places_per_cm),
+        ends_map_per_cm=weave.picks_map_per_cm,
+        picks_map_per_cm=weave.ends_map_per_cm,
     )
 
 
@@ -199,7 +234,12 @@ def _count_words(threads: Threads, ppi: tuple[float, float]) -> list[str]:
     maps = sett_map(threads.count, threads.reduction, ppi)
     low, high = sett_range(maps)
     places = "; ".join(f"{ends:.1f} x {picks:.1f}" for ends, picks in sett_places(maps))
+    drift = max(h / max(lo, 1e-9) - 1 for lo, h in zip(low, high, strict=True))
+    drifts = drift > _DRIFT and max(threads.count.jitter) < drift
+    caution = ["the sett changes over the picture, as in a photograph taken at a slant: read the range, "
+               "not the mean"] if drifts else []  # fmt: skip
     return [
+        *caution,
         f"at five places {places} ends x picks per cm (as ISO 7211-2 and ASTM D3775 count, which ask for "
         "longer pieces than most scans hold)",
         f"over the cloth {low[0]:.1f} to {high[0]:.1f} ends/cm and {low[1]:.1f} to {high[1]:.1f} picks/cm",
@@ -209,8 +249,10 @@ def _count_words(threads: Threads, ppi: tuple[float, float]) -> list[str]:
 
 def thread_lines(
     threads: Threads, channels: NDArray[np.float32], peaks: tuple[Peak, ...], *, size: int
-) -> list[tuple[Peak, tuple[int, int] | None]]:
-    """The cloth's lines: the two thread lines, those it was read from, and others of its orders.
+) -> tuple[list[tuple[Peak, tuple[int, int] | None]], list[Peak]]:
+    """The cloth's lines, and the peaks among `peaks` that they stand for.
+
+    They are the two thread lines, those the weave was read from, and others of its orders.
 
     Parameters
     ----------
@@ -240,15 +282,25 @@ def thread_lines(
         out.append((replace(peak, f=f, sigma=np.full(2, sigma)), named))
     repeat = np.array(threads.fit.binding.repeat)
     known = [p for p, _ in out]
+    taken = []
     for peak in peaks:
         near = np.rint(np.linalg.solve(frame, peak.f) * repeat) / repeat
         if np.hypot(*(frame @ near - peak.f)) < _MEMBER_BINS / size:
+            taken.append(peak)
             same = [i for i, p in enumerate(known) if np.hypot(*(p.f - peak.f)) < _MEMBER_BINS / size]
-            if same:
-                out[same[0]] = (peak, out[same[0]][1])
-            else:
+            if not same:
+                known.append(peak)
                 out.append((peak, None))
-    return out
+    return out, taken
+
+
+def thread_beat(threads: Threads, f: NDArray[np.float64], *, size: int) -> WeaveAlias | None:
+    """The order of the threads that has folded to a line coarser than they are, or None."""
+    finest = min(float(np.hypot(*threads.warp)), float(np.hypot(*threads.weft)))
+    if np.hypot(*f) > _COARSER * finest:
+        return None
+    aliases = thread_aliases(threads.warp, threads.weft, orders=threads.fit.binding.orders(_HIGHEST_BEAT))
+    return explain_alias(f, aliases, tolerance=_BEAT_BINS / size)
 
 
 def _extent(threads: Threads, scan: Scan) -> tuple[float, tuple[tuple[int, int, int, int], ...]]:

@@ -5,7 +5,7 @@ import math
 import numpy as np
 import pytest
 
-from moire.bindings import binding_levels, parse_binding, repeat_lattice, wale_angle
+from moire.bindings import binding_levels, parse_binding, repeat_lattice, swapped, wale_angle
 
 
 @pytest.mark.parametrize(
@@ -81,3 +81,19 @@ def test_twill_angle_is_that_of_its_setts() -> None:
 def test_what_is_no_weave_is_refused(name: str) -> None:
     with pytest.raises(ValueError, match=r"write|give"):
         parse_binding(name)
+
+
+def test_orders_of_a_plain_weave_are_halves_together_and_whole() -> None:
+    assert parse_binding("plain").orders(1) == ((1, 0), (0.5, 0.5), (0, 1), (-0.5, 0.5))
+    assert (0.5, 0) not in parse_binding("plain").orders(3)
+    assert (0.25, 0.25) in parse_binding("twill2/2Z").orders(1)
+    assert (-0.25, 0.25) not in parse_binding("twill2/2Z").orders(1)
+
+
+@pytest.mark.parametrize("name", ["plain", "basket2/1", "twill3/1S", "twill2/2Z", "satin5/2", "satin8/3"])
+def test_a_cloth_turned_over_in_mind_has_the_transposed_lines(name: str) -> None:
+    binding = parse_binding(name)
+    # Warp on top becomes weft on top; which of them shows more changes the mean alone.
+    levels, other = binding_levels(~binding.matrix.T), binding_levels(swapped(binding).matrix)
+    levels[0, 0] = other[0, 0] = 0
+    assert np.allclose(levels, other)

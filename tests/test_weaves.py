@@ -3,6 +3,7 @@
 from functools import cache
 from typing import Any
 
+import cv2
 import numpy as np
 import pytest
 import skimage.data
@@ -21,7 +22,7 @@ SETTS = {"plain": (16, 13), "basket2/2": (22, 18), "twill3/1S": (24, 17), "twill
 def seen(pattern: str, ppi: float = 400, turn: float = 0.7, **cloth: Any) -> tuple[Cloth, Any]:
     ends, picks = SETTS[pattern]
     swatch = Cloth(
-        width_in=1.3, height_in=1.3, ends_per_cm=ends, picks_per_cm=picks, pattern=pattern,
+        width_in=1.0, height_in=1.0, ends_per_cm=ends, picks_per_cm=picks, pattern=pattern,
         **{"jitter": 0.03, "thickness": 0.08, "hair": 0.4, **cloth},
     )  # fmt: skip
     scanner = Scanner(ppi=(ppi, ppi), turn_deg=turn)
@@ -138,3 +139,34 @@ def test_a_map_shows_where_the_sett_changes() -> None:
     left, right = (np.mean([row[i] for row in rows]) for i in (1, -2))
     assert left == pytest.approx(16, rel=0.015)
     assert right == pytest.approx(16 / 0.95, rel=0.015)
+
+
+def test_the_user_says_which_threads_are_the_warp() -> None:
+    cloth = Cloth(width_in=1.0, height_in=1.0, ends_per_cm=24, picks_per_cm=17, pattern="twill3/1S")
+    scanner = Scanner(ppi=(400, 400))
+    pixels = digitise(sample(cloth, scanner), scanner, np.random.default_rng(1))
+    threads = find_threads(lightness(pixels.astype(np.float32)))
+    assert threads is not None
+    weave = measure_weave(threads, (400, 400), warp_runs="horizontal")
+    assert weave.structure == "1/3 twill S"
+    assert weave.picks_per_cm == pytest.approx(24, rel=0.005)
+
+
+@pytest.mark.parametrize("slant", [0.05, 0.1])
+def test_cloth_photographed_at_a_slant_is_followed(slant: float) -> None:
+    """The far edge is smaller by twice the slant, so its threads lie closer: the range says so."""
+    cloth = Cloth(width_in=1.5, height_in=1.5, ends_per_cm=16, picks_per_cm=14, jitter=0.02)
+    scanner = Scanner(ppi=(400, 400))
+    pixels = digitise(sample(cloth, scanner), scanner, np.random.default_rng(1))
+    side = pixels.shape[0]
+    a = slant * side
+    corners = np.array([[0, 0], [side, 0], [side, side], [0, side]], np.float32)
+    seen_at = np.array([[a, a], [side - a, a], [side, side], [0, side]], np.float32)
+    tilted = cv2.warpPerspective(pixels, cv2.getPerspectiveTransform(corners, seen_at), (side, side))
+    cut = round(a) + 2
+    threads = find_threads(lightness(tilted[cut:, cut:-cut].astype(np.float32)))
+    assert threads is not None
+    low, high = measure_weave(threads, (400, 400)).ends_range_per_cm or (0, 0)
+    assert low == pytest.approx(16, rel=0.03)
+    # The range leaves out the outermost twentieth of the picture.
+    assert high == pytest.approx(16 / (1 - 2 * slant), rel=0.045)
