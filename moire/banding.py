@@ -17,7 +17,7 @@ _ACTIVITY_FLOOR = 0.7
 _EXCESS_NAT = 2.9
 _IN_STEP = 0.62
 _LOWEST_CYCLES = 6
-_LINES_AT_MOST = 2000
+_LINES_AT_MOST = 700
 _SHORTEST = 64
 # Long periods step little from line to line; over a longer lag flat places show them better.
 _LAGS = (1, 4, 12)

@@ -17,10 +17,11 @@ from moire.model import Finding, Ink, Kind, Scan
 from moire.peaks import Peak
 from moire.screens import measure_line_screen, name_inks, name_line_ink, on_axis, order_of
 from moire.survey import Survey
-from moire.weaves import Threads, find_threads, measure_weave
+from moire.weavealias import WeaveAlias
+from moire.weaves import cloth_finding, find_threads, thread_beat, thread_lines
 
 _TEXTURE_LINES, _TEXTURE_OBLIQUE = 4, 2
-_OF_THE_CLOTH = 0.15
+_OF_THE_CLOTH, _BEAT_SHARE = 0.15, 0.03
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -50,21 +51,27 @@ def group_lines(survey: Survey, second: Survey | None = None) -> list[Group]:
                 break
         else:
             rest.append(peak)
-    threads = None if survey.lattices else find_threads(tuple(rest), size=survey.size)
+    threads = None if survey.lattices else find_threads(survey.mixed)
+    members: list[tuple[Peak, tuple[int, int] | None]] = []
     if threads is not None:
-        groups.append(_cloth_group(survey, threads))
-        rest = [p for p in rest if not any(p is m for m in threads.members)]
-    ruled = (
-        () if survey.lattices or threads is not None else find_line_screen(tuple(rest), ppi=survey.scan.ppi)
-    )
+        members, taken_up = thread_lines(threads, survey.mixed, tuple(rest), size=survey.size)
+        groups.append(Group(finding=cloth_finding(threads, survey.scan), lines=members))
+        rest = [p for p in rest if not any(p is m for m in taken_up)]
+    ruled: tuple[tuple[Peak, int], ...] = ()
+    if not survey.lattices and threads is None:
+        ruled = find_line_screen(tuple(rest), ppi=survey.scan.ppi)
     if ruled:
         groups.append(_line_screen_group(survey, ruled))
         rest = [p for p in rest if not any(p is m for m, _ in ruled)]
     merged: dict[tuple[Kind, tuple[int, ...]], Group] = {}
-    woven = 0.0 if threads is None else max(p.amplitude for p in threads.members)
+    woven = max((p.amplitude for p, _ in members), default=0.0)
     textured = not survey.lattices and _is_texture(rest)
     for peak in rest:
-        found = _leftover(survey, peak, tuple(rest), woven=woven, textured=textured)
+        beat = None if threads is None else thread_beat(threads, peak.f, size=survey.size)
+        if beat is not None and peak.amplitude > _BEAT_SHARE * woven:
+            found = _beat_group(survey, peak, beat, parent=len(survey.lattices))
+        else:
+            found = _leftover(survey, peak, tuple(rest), woven=woven, textured=textured)
         key = (found.finding.kind, found.finding.parents)
         if key in merged and found.finding.kind != "banding":
             merged[key].lines.extend(found.lines)
@@ -74,27 +81,6 @@ def group_lines(survey: Survey, second: Survey | None = None) -> list[Group]:
     if survey.blocks is not None and all(g.finding.kind != "block-grid" for g in groups):
         groups.append(_block_group(survey.blocks))
     return groups
-
-
-def _cloth_group(survey: Survey, threads: Threads) -> Group:
-    coverage, regions = _extent(threads.warp.weight, threads.weft.weight, survey.size, survey.scan)
-    ppi = survey.scan.ppi
-    finding = Finding(
-        kind="weave",
-        confidence=round(float(min(threads.warp.local_coherence, threads.weft.local_coherence)), 3),
-        visibility=0.0,
-        coverage=coverage,
-        regions=regions,
-        lines=(),
-        period_px=float(1 / np.hypot(*threads.warp.f)),
-        period_mm=_period_mm(threads.warp.f, ppi),
-        weave=None if ppi is None else measure_weave(threads, ppi),
-        evidence=(f"thread lines near both axes, bound as in a {threads.pattern} weave",),
-    )
-    named: list[tuple[Peak, tuple[int, int] | None]] = [(threads.warp, (1, 0)), (threads.weft, (0, 1))]
-    rest = (p for p in threads.members if p is not threads.warp and p is not threads.weft)
-    named.extend((p, None) for p in rest)
-    return Group(finding=finding, lines=named)
 
 
 def _screen_group(survey: Survey, lattice: Lattice, drift: float, ink: Ink, fold: Fold | None) -> Group:
@@ -193,6 +179,24 @@ def _leftover(survey: Survey, peak: Peak, rest: tuple[Peak, ...], *, woven: floa
         settled=settled,
         parents=() if parents is None else parents[:2],
         evidence=(words,),
+    )
+    return Group(finding=finding, lines=[(peak, None)])
+
+
+def _beat_group(survey: Survey, peak: Peak, beat: WeaveAlias, *, parent: int) -> Group:
+    coverage, regions = _extent(peak.weight, peak.weight, survey.size, survey.scan)
+    a, b = beat.order
+    finding = Finding(
+        kind="alias",
+        confidence=round(float(peak.coherence * (1 - math.exp(-(peak.z - 4) / 2))), 3),
+        visibility=0.0,
+        coverage=coverage,
+        regions=regions,
+        lines=(),
+        period_px=float(1 / np.hypot(*peak.f)),
+        period_mm=_period_mm(peak.f, survey.scan.ppi),
+        parents=(parent,),
+        evidence=(f"a beat with the pixel grid: order ({a:g}, {b:g}) of the threads, folded by {beat.fold}",),
     )
     return Group(finding=finding, lines=[(peak, None)])
 

@@ -28,6 +28,7 @@ Kind = Literal[
 Verdict = Literal["sound", "mendable", "rescan", "refer", "unreadable"]
 Ink = Literal["cyan", "magenta", "yellow", "black", "unknown"]
 PpiSource = Literal["option", "file"]
+WeavePattern = Literal["plain", "basket", "twill", "satin", "knit", "unknown"]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -124,15 +125,30 @@ class Screen:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Weave:
-    """A cloth's thread lattice."""
+    """A cloth's thread lattice; a knit has its wales as ends and its courses as picks.
+
+    ``structure`` names the weave in words, ``skew_deg`` how far the weft rises to the right of
+    square with the warp, ``bow`` the depth of its arc over the width. Ranges leave out a twentieth
+    of the cloth at either end; ``places_per_cm`` are (ends, picks) at five places; maps are rows of
+    cells from the top, null off the cloth.
+    """
 
     ends_per_cm: float
     picks_per_cm: float
     sigma_per_cm: float
     ends_per_inch: float
     picks_per_inch: float
-    pattern: Literal["plain", "twill", "satin", "unknown"]
+    pattern: WeavePattern
     skew_deg: float
+    structure: str = ""
+    ends_sigma_per_cm: float | None = None
+    picks_sigma_per_cm: float | None = None
+    bow: float | None = None
+    ends_range_per_cm: tuple[float, float] | None = None
+    picks_range_per_cm: tuple[float, float] | None = None
+    places_per_cm: tuple[tuple[float, float], ...] = ()
+    ends_map_per_cm: tuple[tuple[float | None, ...], ...] = ()
+    picks_map_per_cm: tuple[tuple[float | None, ...], ...] = ()
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -9,8 +9,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 import moire
+from moire.bindings import parse_binding
 from moire.folding import fold
-from moire.loom import Cloth
+from moire.loom import KNIT, Cloth
 from moire.press import InkLayer, Print, Spot, separate
 from moire.scanner import Scanner, Sheet, digitise, sample
 from moire.units import fold_angle, lpi_to_lpcm, page_vector
@@ -71,6 +72,12 @@ class Truth:
     ends_per_cm: float | None = None
     picks_per_cm: float | None = None
     weave: str | None = None
+    structure: str | None = None
+    yarn_jitter: float | None = None
+    yarn_thickness: float | None = None
+    hair: float | None = None
+    skew_deg: float | None = None
+    bow: float | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -118,9 +125,20 @@ def scan_cloth(cloth: Cloth, scanner: Scanner, *, seed: int, name: str, unscreen
     """Scan a swatch, and a sheet of its mean colour without threads."""
     woven, plain = _scan_both(cloth, replace(cloth, woven=False), scanner, seed)
     truth = _truth(cloth, scanner, seed, name, unscreened_name, "cloth")
+    ends, picks = cloth.true_setts()
+    knit = cloth.pattern == KNIT
     truth = replace(
-        truth, ends_per_cm=cloth.ends_per_cm, picks_per_cm=cloth.picks_per_cm, weave=cloth.pattern
-    )  # fmt: skip
+        truth,
+        ends_per_cm=ends,
+        picks_per_cm=picks,
+        weave=KNIT if knit else parse_binding(cloth.pattern).pattern,
+        structure="single jersey" if knit else parse_binding(cloth.pattern).structure,
+        yarn_jitter=cloth.jitter,
+        yarn_thickness=cloth.thickness,
+        hair=cloth.hair,
+        skew_deg=cloth.skew_deg,
+        bow=cloth.bow,
+    )
     return Proof(scan=woven, unscreened=plain, truth=truth)
 
 

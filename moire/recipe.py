@@ -81,7 +81,7 @@ def _removals(finding: Finding) -> list[Removal]:
     if finding.drift:
         # One lattice for the whole page would miss a drifting screen.
         return []
-    if finding.kind in _SCREENS and (0, 1) in by_order:
+    if finding.kind in _SCREENS and {(1, 0), (0, 1)} <= by_order.keys():
         ink = finding.screen.ink if finding.screen else "unknown"
         vectors = (by_order[(1, 0)], by_order[(0, 1)])
         return [Removal(kind=finding.kind, method="descreen", vectors_cpp=vectors, ink=ink)]

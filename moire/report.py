@@ -54,7 +54,7 @@ def render_report(
     environment = Environment(
         loader=PackageLoader("moire", "templates"), autoescape=True, trim_blocks=True, lstrip_blocks=True
     )
-    environment.filters.update(sigma=with_sigma, number=number, period=_period)
+    environment.filters.update(sigma=with_sigma, number=number, period=_period, cells=_cells)
     named = tuple(zip(labels(before.findings), before.findings, strict=True))
     states = [master] if mending is None else [master, mending.scan]
     pictures = [shown_rgb(scan) for scan in states]
@@ -115,6 +115,20 @@ def _warranted(sigma: float, most: int) -> int:
     if not math.isfinite(sigma) or sigma <= 0:
         return most
     return min(most, max(0, 1 - math.floor(math.log10(sigma))))
+
+
+def _cells(rows: tuple[tuple[float | None, ...], ...], spread: tuple[float, float]) -> list[dict[str, Any]]:
+    """Squares of a map of setts, ten units wide, darker where threads lie closer; none off the cloth."""
+    span = max(spread[1] - spread[0], 1e-9)
+    out = []
+    for i, row in enumerate(rows):
+        for j, value in enumerate(row):
+            if value is not None:
+                grey = round(235 - 170 * min(max((value - spread[0]) / span, 0.0), 1.0))
+                out.append(
+                    {"x": 10 * j, "y": 10 * i, "value": value, "fill": f"#{grey:02x}{grey:02x}{grey:02x}"}
+                )
+    return out
 
 
 def _period(finding: Finding, unit: str) -> str:

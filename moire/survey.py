@@ -43,6 +43,8 @@ class Survey:
     scan : Scan
     codes : ndarray, shape (rows, columns, 1 or 3)
         Code values on a 0..255 scale.
+    mixed : ndarray, shape (rows, columns)
+        Mean of the channels.
     size : int
         Tile side that weights and bins refer to.
     peaks : tuple of Peak
@@ -58,6 +60,7 @@ class Survey:
 
     scan: Scan
     codes: Codes
+    mixed: NDArray[np.float32]
     size: int
     peaks: tuple[Peak, ...]
     lattices: tuple[Lattice, ...]
@@ -103,8 +106,8 @@ def take_survey(scan: Scan, size: int) -> Survey:
     grid = (mixed.shape[0] // hop - 1, mixed.shape[1] // hop - 1)
     peaks += _band_peaks(find_bands(mixed), peaks, blocks, size=size, grid=grid)
     return Survey(
-        scan=scan, codes=codes, size=size, peaks=peaks, lattices=lattices, drifts=drifts, chroma=chroma,
-        blocks=blocks,
+        scan=scan, codes=codes, mixed=mixed, size=size, peaks=peaks, lattices=lattices, drifts=drifts,
+        chroma=chroma, blocks=blocks,
     )  # fmt: skip
 
 

@@ -291,6 +291,27 @@ def test_a_weave_is_told_per_centimetre_and_per_inch(html: str) -> None:
     assert "plain weave, 70.90 ± 0.12 ends/cm (180.10 ± 0.30 per inch), 66.10 ± 0.12 picks/cm" in _text(html)
 
 
+def test_a_map_of_setts_is_darker_where_threads_lie_closer(master: Scan, before: Examination) -> None:
+    found = next(f for f in before.findings if f.weave is not None)
+    assert found.weave is not None
+    cloth = replace(
+        found.weave,
+        structure="2/2 twill Z",
+        ends_map_per_cm=((70.0, 71.0), (None, 72.0)),
+        picks_map_per_cm=((66.0, 66.0), (None, 66.0)),
+        ends_range_per_cm=(70.0, 72.0),
+        picks_range_per_cm=(66.0, 66.1),
+    )
+    html = render_report(
+        master=master, before=replace(before, findings=(replace(found, weave=cloth),)), mending=None
+    )
+    assert "2/2 twill Z weave" in _text(html)
+    ends, picks = re.findall(r'<svg [^>]*aria-label="Map of[^>]*>(.*?)</svg>', html, flags=re.S)
+    assert ends.count("<rect") == picks.count("<rect") == 3
+    assert re.findall(r'fill="#(..)', ends) == ["eb", "96", "41"]
+    assert "ends per cm: 70.00 (light) to 72.00 (dark)" in _text(html)
+
+
 def test_sections_follow_the_readers_questions(html: str) -> None:
     headings = [_text(h) for h in re.findall(r"<h2[^>]*>(.*?)</h2>", html)]
     assert headings[0].startswith("Mendable")

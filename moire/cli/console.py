@@ -95,7 +95,9 @@ def _what(finding: Finding) -> str:
         return text if finding.settled else text + ", not settled by one scan"
     if finding.weave is not None:
         w = finding.weave
-        return f"{w.pattern} weave, {w.ends_per_cm:.2f} ends/cm by {w.picks_per_cm:.2f} picks/cm"
+        what, by = ("wales", "courses") if w.pattern == "knit" else ("ends", "picks")
+        name = w.structure or w.pattern
+        return f"{name}, {w.ends_per_cm:.2f} {what}/cm by {w.picks_per_cm:.2f} {by}/cm"
     if finding.parents:
         return f"beat of {' and '.join(str(p) for p in finding.parents)}"
     return finding.evidence[0] if finding.evidence else ""

@@ -10,7 +10,8 @@ import click
 
 from moire.cli.options import PpiType, shared
 
-_CLOTH = re.compile(r"^(?P<ends>[\d.]+)x(?P<picks>[\d.]+):(?P<weave>plain|twill|satin)$")
+_CLOTH = re.compile(r"^(?P<ends>[\d.]+)x(?P<picks>[\d.]+):(?P<weave>[a-zA-Z\d/]+)$")
+_STRIPES = ((0.20, 0.26, 0.42), (0.72, 0.70, 0.64))
 _SCREEN = re.compile(r"^(?P<lpi>[\d.]+)@(?P<angle>-?[\d.]+):(?P<ink>[a-z]+)$")
 
 
@@ -26,12 +27,53 @@ _SCREEN = re.compile(r"^(?P<lpi>[\d.]+)@(?P<angle>-?[\d.]+):(?P<ink>[a-z]+)$")
     help="One ink's screen; repeat for each ink.",
 )
 @click.option(
-    "--cloth", metavar="ENDSxPICKS:WEAVE", help="A swatch instead: threads per cm, plain|twill|satin."
+    "--cloth",
+    metavar="ENDSxPICKS:WEAVE",
+    help="A swatch instead: threads per cm and plain, basket2/2, twill3/1S, satin8/3 or knit.",
 )
+@click.option(
+    "--jitter",
+    type=click.FloatRange(0, 0.3),
+    default=0.0,
+    show_default=True,
+    help="Cloth: sd of the gaps between threads, as a share.",
+)
+@click.option(
+    "--slub",
+    type=click.FloatRange(0, 0.5),
+    default=0.0,
+    show_default=True,
+    help="Cloth: sd of the yarn's thickness, as a share.",
+)
+@click.option(
+    "--hair",
+    type=click.FloatRange(0, 1),
+    default=0.0,
+    show_default=True,
+    help="Cloth: how hairy the yarn is.",
+)
+@click.option(
+    "--skew",
+    type=click.FloatRange(-20, 20),
+    default=0.0,
+    show_default=True,
+    help="Cloth: degrees the weft rises to the right of square.",
+)
+@click.option(
+    "--bow",
+    type=click.FloatRange(-0.1, 0.1),
+    default=0.0,
+    show_default=True,
+    help="Cloth: depth of the weft's arc over the width.",
+)
+@click.option("--stripes", type=click.IntRange(1, 200), help="Cloth: threads in each coloured stripe.")
+@click.option("--checks", is_flag=True, help="Cloth: stripes both ways.")
 @click.option("--spot", type=click.Choice(["round", "ellipse", "diamond", "square", "line"]), default="round",
               show_default=True, help="Dot shape.")  # fmt: skip
 @click.option(
-    "--picture", type=click.Path(dir_okay=False), help="Picture to print; a drawn card if not given."
+    "--picture",
+    type=click.Path(dir_okay=False),
+    help="Picture to print; a drawn card if not given (cloth: none).",
 )
 @click.option(
     "--size", metavar="WxH", help="Sheet in inches; from the picture's shape at 2 in wide if not given."
@@ -84,7 +126,7 @@ def command(output: str, screens: tuple[str, ...], **flags: Any) -> int:
     )  # fmt: skip
     names = {"seed": flags["seed"], "name": target.name, "unscreened_name": plain.name}
     if flags["cloth"]:
-        made = scan_cloth(_cloth(flags["cloth"], flags["size"], flags["seed"]), scanner, **names)
+        made = scan_cloth(_cloth(**flags), scanner, **names)
     else:
         orders = _orders(screens, flags["spot"])
         picture = _picture(flags["picture"])
@@ -126,26 +168,31 @@ def _orders(screens: tuple[str, ...], spot: Any) -> Any:
     return tuple(out)
 
 
-def _cloth(text: str, size: str | None, seed: int) -> Any:
-    from moire.loom import Cloth
+def _cloth(*, cloth: str, size: str | None, picture: str | None, **flags: Any) -> Any:
+    from moire.bindings import parse_binding
+    from moire.loom import KNIT, Cloth, stripes
 
-    match = _CLOTH.match(text)
+    match = _CLOTH.match(cloth)
     setts = (float(match["ends"]), float(match["picks"])) if match else (0.0, 0.0)
     if match is None or not all(1 <= s <= 100 for s in setts):
         raise click.BadParameter(
-            f"{text!r}: write ENDSxPICKS:WEAVE, 1 to 100 threads per cm, plain, twill or satin",
+            f"{cloth!r}: write ENDSxPICKS:WEAVE with 1 to 100 threads per cm, such as 18x15:twill3/1S",
             param_hint="--cloth",
         )
-    width, height = _size(size, (1, 1))
-    weave: Any = match["weave"]
+    if match["weave"] != KNIT:
+        try:
+            parse_binding(match["weave"])
+        except ValueError as problem:
+            raise click.BadParameter(str(problem), param_hint="--cloth") from problem
+    figure = None if picture is None else _picture(picture)
+    width, height = _size(size, (1, 1) if figure is None else figure.shape)
+    bands = stripes(flags["stripes"], *_STRIPES) if flags["stripes"] else ()
     return Cloth(
-        width_in=width,
-        height_in=height,
-        ends_per_cm=setts[0],
-        picks_per_cm=setts[1],
-        pattern=weave,
-        seed=seed,
-    )
+        width_in=width, height_in=height, ends_per_cm=setts[0], picks_per_cm=setts[1], pattern=match["weave"],
+        warp_stripes=bands, weft_stripes=bands if flags["checks"] else (), jitter=flags["jitter"],
+        thickness=flags["slub"], hair=flags["hair"], skew_deg=flags["skew"], bow=flags["bow"],
+        figure=figure, seed=flags["seed"],
+    )  # fmt: skip
 
 
 def _picture(path: str | None) -> Any:

@@ -1,0 +1,331 @@
+"""Which weave's lines a spectrum has: thread frequencies and binding, fitted together.
+
+Every weave predicts where lines may be: at fractions of its thread frequencies. A pair of observed
+lines, read as two orders of a weave, gives thread frequencies; a reading is worth what it saves in
+telling where all the lines are (a code length), less what it predicts and is not there.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass, replace
+from functools import cache
+
+import numpy as np
+from numpy.typing import NDArray
+
+from moire.bindings import Binding, basket, binding_levels, plain, satin, twill
+from moire.peaks import Candidate, find_candidates, measure_bins
+from moire.spectrum import Spectrum
+
+_STRONGEST, _KEPT = 12, 4
+_TOLERANCE_BINS = 0.8
+_FURTHEST_ORDER = 8.5
+_INNER_BINS = 3.5
+_PRESENT_Z = 2.5
+_TILT_DEG, _SQUARE_DEG, _STEEPEST_DEG = 5.0, 2.0, 25.0
+_FINEST_CPP = 0.62
+_EVEN_NAT, _LENS_PX = 4.0, 0.45
+_OUTER_CPP, _FOLDED = 0.45, 4.0
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class SpectralLine:
+    """A line with its place to a fraction of a bin: ``(fx, fy)`` cycles per pixel, excess in nat.
+
+    ``share`` weighs it by its level among the others.
+    """
+
+    f: NDArray[np.float64]
+    z: float
+    excess_nat: float
+    level_nat: float
+    share: float = 1.0
+
+    @property
+    def weight(self) -> float:
+        """What the line counts for in a reading."""
+        return float(np.clip(self.excess_nat / 3, 0.2, 1.5) * self.share)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class BindingFit:
+    """A reading of the lines as a weave.
+
+    Attributes
+    ----------
+    binding : Binding
+    warp, weft : ndarray, shape (2,)
+        Thread frequencies ``(fx, fy)`` in cycles per pixel: ends repeat along `warp`.
+    gain : float
+        Nats saved by this reading.
+    explained : float
+        Share of the lines' excess that it explains.
+    lines : tuple of (SpectralLine, (float, float))
+        The lines that it explains and their orders, in threads.
+    """
+
+    binding: Binding
+    warp: NDArray[np.float64]
+    weft: NDArray[np.float64]
+    gain: float
+    explained: float
+    lines: tuple[tuple[SpectralLine, tuple[float, float]], ...]
+
+
+@cache
+def _weaves() -> tuple[_Weave, ...]:
+    bindings = [plain(), basket(2, 2), basket(2, 1), basket(1, 2), basket(3, 3)]
+    for way in ("Z", "S"):
+        bindings += [twill(up, down, way) for up, down in ((2, 1), (3, 1), (2, 2), (4, 1), (3, 3), (5, 1))]
+    bindings += [satin(5, 2), satin(5, 3), satin(8, 3), satin(8, 5)]
+    return (*(_Weave.of(b) for b in bindings), _RULED)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class _Weave:
+    """What a binding predicts: allowed orders of one repeat, and the lowest lines it must show."""
+
+    binding: Binding
+    allowed: NDArray[np.bool_]
+    lowest: tuple[tuple[float, float], ...]
+    prior: float
+
+    @staticmethod
+    def of(binding: Binding) -> _Weave:
+        levels = binding_levels(binding.matrix)
+        picks, ends = levels.shape
+        strong = levels.copy()
+        strong[0, 0] = 0
+        allowed = strong > 0.2 * strong.max()
+        orders = [
+            (h / ends, k / picks)
+            for h in range(-ends // 2, ends // 2 + 1)
+            for k in range(picks // 2 + 1)
+            if (k > 0 or h > 0) and strong[k % picks, h % ends] > 0.6 * strong.max()
+        ]
+        orders.sort(key=lambda o: math.hypot(*o))
+        allowed[0, 0] = True
+        prior = {"plain": 0.0, "twill": -1.0, "basket": -2.0, "satin": -2.0}[binding.pattern]
+        return _Weave(binding=binding, allowed=allowed, lowest=tuple(orders[:3]), prior=prior)
+
+
+# Lines both ways without any binding: a table, graph paper, type on a grid, and a knit.
+_RULED = _Weave(
+    binding=Binding(pattern="unknown", structure="unbound", direction=None, matrix=np.zeros((1, 1), bool)),
+    allowed=np.ones((1, 1), bool),
+    lowest=(),
+    prior=0.0,
+)
+
+
+def find_lines(spectrum: Spectrum) -> tuple[SpectralLine, ...]:
+    """Lines of a tiled spectrum, in step over the page or not, strongest first."""
+    found = []
+    for c in find_candidates(spectrum):
+        f = _sub_bin(spectrum, c)
+        if np.hypot(*f) > _OUTER_CPP:
+            continue
+        level = float(spectrum.mean[c.ky % spectrum.size, c.kx % spectrum.size])
+        found.append(SpectralLine(f=f, z=c.z, excess_nat=c.excess_nat, level_nat=level))
+    found.sort(key=lambda line: -line.level_nat)
+    # A line a thousandth as strong as the strongest says little about the cloth.
+    return tuple(
+        replace(line, share=float(np.clip(1 - (found[0].level_nat - line.level_nat) / 9, 0.2, 1)))
+        for line in found
+    )
+
+
+def fit_binding(spectrum: Spectrum, lines: tuple[SpectralLine, ...]) -> tuple[BindingFit, ...]:
+    """Readings of the lines as weaves, best first; empty if no two lines make a cloth."""
+    if len(lines) < 2:
+        return ()
+    z = _z_plane(spectrum)
+    best: list[BindingFit] = []
+    for weave in _weaves():
+        frames = _frames(weave, lines, spectrum.size)
+        if not len(frames):
+            continue
+        gains, _ = _gains(weave, frames, lines, spectrum.size)
+        for i in _distinct(frames, gains, spectrum.size):
+            best.append(_settle(weave, frames[i], lines, spectrum.size, z))
+    return tuple(sorted(map(_face, best), key=lambda fit: -fit.gain))
+
+
+def _face(fit: BindingFit) -> BindingFit:
+    """A twill named by its floats: even orders tell 3/1 from 2/2, the stronger threads the face.
+
+    Warp floats show more warp ridges than weft ridges, hence the stronger thread line.
+    """
+    if fit.binding.pattern != "twill" or fit.binding.direction is None:
+        return fit
+    up, down = fit.binding.numbers
+    level: dict[tuple[int, int], float] = {}
+    for line, order in fit.lines:
+        h, k = (round(abs(c) * (up + down)) for c in order)
+        level[h, k] = max(level.get((h, k), -math.inf), line.level_nat - _seen(line.f))
+    if up + down == 4:
+        odd = max((v for (h, k), v in level.items() if h % 2 and k % 2), default=-math.inf)
+        even = max((v for (h, k), v in level.items() if h % 4 == 2 and k % 4 == 2), default=-math.inf)
+        up, down = (3, 1) if even > odd - _EVEN_NAT else (2, 2)
+    n = up + down
+    if level.get((0, n), -math.inf) > level.get((n, 0), -math.inf):
+        up, down = min(up, down), max(up, down)
+    return replace(fit, binding=twill(up, down, fit.binding.direction))
+
+
+def _seen(f: NDArray[np.float64]) -> float:
+    """What a usual lens and aperture leave of a line's power, in nat."""
+    box = float(np.log(np.abs(np.sinc(f))).sum())
+    return 2 * box - 4 * math.pi**2 * _LENS_PX**2 * float(f @ f)
+
+
+def _sub_bin(spectrum: Spectrum, c: Candidate) -> NDArray[np.float64]:
+    n = spectrum.size
+    plane = spectrum.mean
+    shift = []
+    for dy, dx in ((0, 1), (1, 0)):
+        a, b, d = (float(plane[(c.ky + s * dy) % n, (c.kx + s * dx) % n]) for s in (-1, 0, 1))
+        curve = a - 2 * b + d
+        shift.append(float(np.clip(0.5 * (a - d) / curve, -0.5, 0.5)) if curve < 0 else 0.0)
+    return np.array([c.kx + shift[0], c.ky + shift[1]]) / n
+
+
+def _frames(weave: _Weave, lines: tuple[SpectralLine, ...], size: int) -> NDArray[np.float64]:
+    """Thread frequencies, shape (n, 2, 2) with warp and weft as columns, from pairs of lines."""
+    orders = [*weave.lowest, (1.0, 0.0), (0.0, 1.0)] if weave.lowest else [(1.0, 0.0), (0.0, 1.0), (1.0, 1.0)]
+    f = np.array([line.f for line in lines[:_STRONGEST]])
+    first, second = np.triu_indices(len(f), 1)
+    pairs = np.stack([f[first], f[second]], axis=-1)
+    pairs = np.concatenate([pairs * np.array(s) for s in ((1, 1), (1, -1), (-1, 1), (-1, -1))])
+    out = []
+    for i, a in enumerate(orders):
+        for j, b in enumerate(orders):
+            matrix = np.array([a, b]).T
+            if i != j and abs(np.linalg.det(matrix)) > 1e-6:
+                out.append(pairs @ np.linalg.inv(matrix))
+    frames = np.concatenate(out)
+    ux, uy, vx, vy = frames[:, 0, 0], frames[:, 1, 0], frames[:, 0, 1], frames[:, 1, 1]
+    steep = math.tan(math.radians(_STEEPEST_DEG))
+    u, v = np.hypot(ux, uy), np.hypot(vx, vy)
+    keep = (ux > 0) & (vy > 0) & (np.abs(uy) < steep * ux) & (np.abs(vx) < steep * vy)
+    keep &= np.abs(ux * vx + uy * vy) < math.sin(math.radians(12)) * u * v
+    keep &= (np.minimum(u, v) > _INNER_BINS / size) & (np.maximum(u, v) < _FINEST_CPP)
+    keep &= (u < 3.5 * v) & (v < 3.5 * u)
+    return np.asarray(frames[keep])
+
+
+def _gains(
+    weave: _Weave, frames: NDArray[np.float64], lines: tuple[SpectralLine, ...], size: int
+) -> tuple[NDArray[np.float64], NDArray[np.bool_]]:
+    """Nats saved by each frame, and which lines it explains, shape (frames, lines)."""
+    f = np.array([line.f for line in lines])
+    weight = np.array([line.weight for line in lines])
+    hit, _ = _match(weave, frames, f, size)
+    density = weave.allowed.sum() / np.abs(np.linalg.det(frames))
+    cells = size**2 / (math.pi * _TOLERANCE_BINS**2)
+    saved = np.log(np.maximum(cells / density, 1.0))
+    folds = 1.0 if weave.binding.pattern == "plain" else 2.0
+    return (hit * weight).sum(axis=1) * saved + weave.prior + _prior(frames, folds), hit
+
+
+def _match(
+    weave: _Weave, frames: NDArray[np.float64], f: NDArray[np.float64], size: int
+) -> tuple[NDArray[np.bool_], NDArray[np.float64]]:
+    """Which lines lie on allowed orders, and the orders, shape (frames, lines, 2)."""
+    picks, ends = weave.allowed.shape
+    repeat = np.array([ends, picks])
+    at = np.einsum("nij,mj->nmi", np.linalg.inv(frames), f)
+    whole = np.rint(at * repeat)
+    orders = whole / repeat
+    off = np.einsum("nij,nmj->nmi", frames, at - orders)
+    near = np.hypot(off[..., 0], off[..., 1]) * size < _TOLERANCE_BINS
+    h, k = whole[..., 0].astype(int) % ends, whole[..., 1].astype(int) % picks
+    low = (np.abs(orders).max(axis=-1) < _FURTHEST_ORDER) & (np.abs(whole).max(axis=-1) > 0)
+    return near & low & weave.allowed[k, h], orders
+
+
+def _prior(frames: NDArray[np.float64], folds: float) -> NDArray[np.float64]:
+    """How likely cloth lies so, in nat; `folds` is the price of threads beyond the grid's reach."""
+    ux, uy, vx, vy = frames[:, 0, 0], frames[:, 1, 0], frames[:, 0, 1], frames[:, 1, 1]
+    a, b = np.degrees(np.arctan2(uy, ux)), np.degrees(np.arctan2(-vx, vy))
+    ratio = np.log(np.hypot(ux, uy) / np.hypot(vx, vy))
+    tilt, skew = (a + b) / 2, a - b
+    fine = [np.hypot(x, y) > _OUTER_CPP for x, y in ((ux, uy), (vx, vy))]
+    folded = folds * _FOLDED * np.add(*fine, dtype=float)
+    return np.asarray(
+        -0.5 * ((tilt / _TILT_DEG) ** 2 + (skew / _SQUARE_DEG) ** 2 + (ratio / 0.6) ** 2) - folded
+    )
+
+
+def _settle(
+    weave: _Weave,
+    frame: NDArray[np.float64],
+    lines: tuple[SpectralLine, ...],
+    size: int,
+    z: NDArray[np.float64],
+) -> BindingFit:
+    """The frame fitted to all the lines it explains, and its final worth."""
+    f = np.array([line.f for line in lines])
+    weight = np.array([line.weight for line in lines])
+    for _ in range(3):
+        hit, orders = _match(weave, frame[None], f, size)
+        used = hit[0]
+        a = orders[0][used] * weight[used, None]
+        if used.sum() < 2 or np.linalg.matrix_rank(a) < 2:
+            break
+        frame = np.linalg.lstsq(a, f[used] * weight[used, None], rcond=None)[0].T
+    gains, hit = _gains(weave, frame[None], lines, size)
+    _, orders = _match(weave, frame[None], f, size)
+    gain = float(gains[0]) - _absent(weave, frame, z)
+    explained = float(weight[hit[0]].sum() / weight.sum())
+    named = tuple(
+        (line, (float(o[0]), float(o[1]))) for line, o, h in zip(lines, orders[0], hit[0], strict=True) if h
+    )
+    return BindingFit(
+        binding=weave.binding, warp=frame[:, 0], weft=frame[:, 1], gain=gain, explained=explained, lines=named
+    )
+
+
+def _absent(weave: _Weave, frame: NDArray[np.float64], z: NDArray[np.float64]) -> float:
+    """Price of lines that the weave should show within the band and does not."""
+    size = len(z)
+
+    def present(order: tuple[float, float]) -> bool | None:
+        least = _PRESENT_Z if weave.lowest else 2 * _PRESENT_Z
+        f = frame @ np.array(order)
+        if np.hypot(*f) > _OUTER_CPP or np.hypot(*f) * size < _INNER_BINS:
+            return None
+        x, y = np.rint(f * size).astype(int)
+        return bool(z[np.arange(y - 1, y + 2)[:, None] % size, np.arange(x - 1, x + 2) % size].max() > least)
+
+    price = 0.0
+    first = [s for s in map(present, weave.lowest) if s is not None]
+    if first:
+        price += 8.0 * (not any(first)) + 2.0 * sum(not s for s in first)
+    for order in ((1.0, 0.0), (0.0, 1.0)):
+        # A ruling is nothing without its fundamentals; threads of one colour may hide theirs.
+        price += (3.0 if weave.lowest else 25.0) * (present(order) is False)
+    return price
+
+
+def _z_plane(spectrum: Spectrum) -> NDArray[np.float64]:
+    """How far each bin stands above its background, in robust standard deviations."""
+    n = spectrum.size
+    bins = tuple((x, y) for y in range(n) for x in range(n // 2 + 1))
+    half = np.array([c.z for c in measure_bins(spectrum, bins)]).reshape(n, n // 2 + 1)
+    full = np.empty((n, n))
+    full[:, : n // 2 + 1] = half
+    full[:, n // 2 + 1 :] = half[(-np.arange(n)) % n][:, 1 : n // 2][:, ::-1]
+    return full
+
+
+def _distinct(frames: NDArray[np.float64], gains: NDArray[np.float64], size: int) -> list[int]:
+    """The best few frames that differ by more than a bin."""
+    kept: list[int] = []
+    for i in np.argsort(-gains)[:60]:
+        if all(np.abs(frames[i] - frames[j]).max() * size > 1 for j in kept):
+            kept.append(int(i))
+        if len(kept) == _KEPT:
+            break
+    return kept

@@ -1,0 +1,325 @@
+"""Threads counted by phase: a weave's lines demodulated together and followed from edge to edge.
+
+The phase of a line gains one turn for each thread, so its gain from edge to edge counts threads,
+however unevenly they lie. The middle of many such counts is kept (over rows for one direction,
+columns for the other), and the counts of all lines must agree on two sets of threads.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from moire.demodulation import RestingLines, advances, blur, bring_to_rest, local_departures
+from moire.straightening import straighten
+
+_PRESENT = 0.3
+_LEAST_PERIODS = 6.0
+_BLOCKS = 8
+_MAP_PERIODS = 6.0
+_EDGE_THREADS = 5.0
+_PHASE_FLOOR = 0.01
+_CHOICES, _REACH = 41, 0.35
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class ThreadCount:
+    """Two sets of threads as counted.
+
+    Attributes
+    ----------
+    warp, weft : ndarray, shape (2,)
+        Mean thread frequencies ``(fx, fy)``, cycles per pixel.
+    sigma : (float, float)
+        Standard uncertainty of each one's length, cycles per pixel.
+    jitter : (float, float)
+        Apparent standard deviation of the gaps between threads, as a share of a gap.
+    x, y : ndarray
+        A grid of places over the picture, in pixels.
+    present : ndarray of bool, shape (len(y), len(x))
+        Where the lines are.
+    warp_map, weft_map : ndarray, shape (len(y), len(x), 2)
+        Thread frequencies around those places, over some fifteen threads.
+    bow : float
+        Depth of the weft's arc as a share of the width; positive: middle lower.
+    """
+
+    warp: NDArray[np.float64]
+    weft: NDArray[np.float64]
+    sigma: tuple[float, float]
+    jitter: tuple[float, float]
+    x: NDArray[np.float64]
+    y: NDArray[np.float64]
+    present: NDArray[np.bool_]
+    warp_map: NDArray[np.float64]
+    weft_map: NDArray[np.float64]
+    bow: float
+
+
+def count_threads(
+    image: NDArray[np.float32], frame: NDArray[np.float64], orders: NDArray[np.float64]
+) -> ThreadCount | None:
+    """Count two sets of threads by the phases of given lines.
+
+    Parameters
+    ----------
+    image : ndarray, shape (rows, columns)
+        Lightness or code values.
+    frame : ndarray, shape (2, 2)
+        First estimates of warp and weft frequency as columns, cycles per pixel.
+    orders : ndarray, shape (n, 2)
+        Lines to count by, as orders of warp and weft; they must span both.
+
+    Returns
+    -------
+    ThreadCount or None
+        None where the lines do not run over at least six threads both ways.
+    """
+    shape = (image.shape[1], image.shape[0])
+    fields = bring_to_rest(image, frame, orders)
+    drift = _fit_drift(fields, shape)
+    turns = _follow(fields, _drift_turns(drift, fields, shape))
+    # Seen with its threads straightened, the cloth's lines are sharp and do not slip.
+    straight, known, place = straighten(image, frame, turns)
+    again = bring_to_rest(straight, frame, orders)
+    rest = _drift_turns(_fit_drift(again, shape), again, shape)
+    totals = [_total_along(again, rest, known, place, axis=axis) for axis in (0, 1)]
+    if totals[0] is None or totals[1] is None:
+        return None
+    moved = np.stack([t[0] for t in totals if t], axis=1)
+    sigma = np.stack([t[1] for t in totals if t], axis=1)
+    present = _presence(fields)
+    jitter = (_jitter(fields, present, 0), _jitter(fields, present, 1))
+    near = fields.frame.T + local_departures(fields, _MAP_PERIODS, _MAP_PERIODS)
+    threads = fields.frame.T + moved
+    lengths = []
+    for i in (0, 1):
+        length = float(np.hypot(*threads[i]))
+        noise = float(np.hypot(*(sigma[i] * threads[i] / length)))
+        # A few threads at the edges are not seen whole; they may lie anyhow.
+        across = abs(threads[i]) @ np.array(shape)
+        lengths.append(math.hypot(noise, length * jitter[i] * math.sqrt(_EDGE_THREADS) / across))
+    return ThreadCount(
+        warp=threads[0],
+        weft=threads[1],
+        sigma=(lengths[0], lengths[1]),
+        jitter=jitter,
+        x=fields.x,
+        y=fields.y,
+        present=present,
+        warp_map=near[..., 0, :],
+        weft_map=near[..., 1, :],
+        bow=float(drift[1, 2] / (np.hypot(*threads[1]) * image.shape[1])),
+    )
+
+
+def _basis(
+    fields: RestingLines, shape: tuple[int, int]
+) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
+    """Polynomials of third degree without a constant over the grid, and their gradients.
+
+    Coordinates run from -1 to 1 over the picture; gradients are per pixel.
+    """
+    half = np.array(shape) / 2
+    x, y = np.meshgrid((fields.x + 0.5) / half[0] - 1, (fields.y + 0.5) / half[1] - 1)
+    zero, one = np.zeros_like(x), np.ones_like(x)
+    value = np.stack([x, y, x * x, x * y, y * y, x**3, x * x * y, x * y * y, y**3], axis=-1)
+    along = np.stack([one, zero, 2 * x, y, zero, 3 * x * x, 2 * x * y, y * y, zero], axis=-1) / half[0]
+    down = np.stack([zero, one, zero, x, 2 * y, zero, x * x, 2 * x * y, 3 * y * y], axis=-1) / half[1]
+    return value, along, down
+
+
+def _fit_drift(fields: RestingLines, shape: tuple[int, int]) -> NDArray[np.float64]:
+    """Smooth drift of both thread sets, in turns: polynomial coefficients, shape (2, 9)."""
+    _, along, down = _basis(fields, shape)
+    thin = max(1, int(2 * fields.period / min(fields.step)))
+    seen = np.s_[::thin, ::thin]
+    design, target, weight = [], [], []
+    for order, v, share in zip(fields.orders, fields.values, fields.shares, strict=True):
+        strength = np.abs(v)
+        for basis, product, step in zip((along, down), advances(v), fields.step, strict=True):
+            mean = blur(product, fields, 2.0, 2.0)[seen]
+            turn = np.angle(mean) / (2 * np.pi * step)
+            b = basis[seen].reshape(-1, 9)
+            design.append(np.concatenate([order[0] * b, order[1] * b], axis=1))
+            target.append(turn.ravel())
+            strong = np.abs(mean) / max(float(np.quantile(strength, 0.9)) ** 2, 1e-12)
+            weight.append(share * np.clip(strong, 0, 1).ravel())
+    a, t, w = np.concatenate(design), np.concatenate(target), np.concatenate(weight)
+    solution = np.zeros(18)
+    robust = np.ones_like(w)
+    for _ in range(6):
+        root = np.sqrt(w * robust)
+        solution = np.linalg.lstsq(a * root[:, None], t * root, rcond=1e-8)[0]
+        residual = np.abs(t - a @ solution)
+        scale = 1.5 * float(np.median(residual[w > 0.05])) if (w > 0.05).any() else 1.0
+        robust = 1 / np.maximum(1, residual / max(scale, 1e-9)) ** 2
+    return np.asarray(solution.reshape(2, 9))
+
+
+def _drift_turns(
+    drift: NDArray[np.float64], fields: RestingLines, shape: tuple[int, int]
+) -> NDArray[np.float64]:
+    """Drift of warp and weft over the grid in turns, shape (2, rows, columns)."""
+    value, _, _ = _basis(fields, shape)
+    return np.asarray(np.einsum("ik,yxk->iyx", drift, value))
+
+
+def _rows(planes: NDArray[Any], axis: int) -> list[NDArray[Any]]:
+    """Blocks of rows (of columns for axis 1), each block running along the last axis."""
+    return np.array_split(planes if axis == 0 else planes.transpose(0, 2, 1), _BLOCKS, axis=1)
+
+
+def _advance(block: NDArray[np.complex64]) -> tuple[NDArray[np.complex64], int, int]:
+    """Products of neighbours summed over a block's rows, and the longest run where lines are.
+
+    They add up whatever the other set of threads does there, so a block follows the threads that
+    cross it all along.
+    """
+    product = (block[:, :, 1:] * np.conj(block[:, :, :-1])).sum(axis=1)
+    strength = np.abs(product).sum(axis=0)
+    return product, *_longest(strength > _PRESENT**2 * float(np.quantile(strength, 0.9)))
+
+
+def _at_rest(fields: RestingLines, drift: NDArray[np.float64]) -> NDArray[np.complex64]:
+    turns = np.einsum("ni,iyx->nyx", fields.orders, drift)
+    return np.asarray(fields.values * np.exp(-2j * np.pi * turns), np.complex64)
+
+
+def _follow(fields: RestingLines, drift: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Departures of both sets in turns over the grid, shape (2, rows, columns), as they lie."""
+    import cv2
+
+    still = _at_rest(fields, drift)
+    out = drift.copy()
+    for axis in (0, 1):
+        paths = []
+        for block in _rows(still, axis):
+            product, a, b = _advance(block)
+            path = np.zeros(block.shape[2], np.float32)
+            if b > a:
+                path[a + 1 : b + 1] = np.cumsum(_vote(product[:, a:b], fields, axis))
+                path[b + 1 :] = path[b]
+            paths.append(path - path.mean())
+        rows = out.shape[1 + axis]
+        smooth = cv2.resize(np.array(paths), (len(paths[0]), rows), interpolation=cv2.INTER_LINEAR)
+        out[axis] += smooth if axis == 0 else smooth.T
+    return out
+
+
+def _total_along(
+    fields: RestingLines,
+    drift: NDArray[np.float64],
+    known: NDArray[np.float64],
+    place: NDArray[np.float64],
+    *,
+    axis: int,
+) -> tuple[NDArray[np.float64], NDArray[np.float64]] | None:
+    """Mean departure of warp and weft along one axis, per pixel, and its standard uncertainty.
+
+    Parameters
+    ----------
+    fields : RestingLines
+    drift, known : ndarray, shape (2, rows, columns)
+        Turns of warp and weft still in the fields, and already taken out of them.
+    place : ndarray, shape (2, rows, columns)
+        Where the grid's points lie in the picture, pixels.
+    axis : int
+    """
+    blocks = [_rows(a, axis) for a in (_at_rest(fields, drift), drift + known, place)]
+    counts = []
+    for block, turns, at in zip(*blocks, strict=True):
+        product, a, b = _advance(block)
+        if (b - a) * fields.step[axis] < _LEAST_PERIODS * fields.period:
+            continue
+        length = float((at[axis, :, b] - at[axis, :, a]).mean())
+        gained = _agreed(np.angle(product[:, a:b]).sum(axis=1) / (2 * np.pi), fields)
+        gained += (turns[:, :, b] - turns[:, :, a]).mean(axis=1)
+        counts.append((*(gained / length), length))
+    if not counts:
+        return None
+    table = np.array(counts)
+    weight = table[:, 2] ** 2
+    middle = np.array([_weighted_median(table[:, i], weight) for i in (0, 1)])
+    apart = np.abs(table[:, :2] - middle)
+    spread = np.maximum(1.4826 * np.median(apart, axis=0), np.sqrt((apart**2).mean(axis=0)) / 2)
+    if len(table) < 4:
+        spread = np.maximum(spread, 0.2 / table[:, 2].max())
+    return middle, np.hypot(spread / math.sqrt(len(table)), _PHASE_FLOOR / table[:, 2].max())
+
+
+def _agreed(turns: NDArray[np.float64], fields: RestingLines) -> NDArray[np.float64]:
+    """Turns of warp and weft on which most lines agree; a line that slipped by one is left alone."""
+    weight: NDArray[np.float64] = np.sqrt(fields.shares)
+    solution: NDArray[np.floating] = np.zeros(2)
+    for _ in range(12):
+        solution = np.linalg.lstsq(fields.orders * weight[:, None], turns * weight, rcond=None)[0]
+        off = np.abs(turns - fields.orders @ solution)
+        weight = np.sqrt(fields.shares / np.maximum(off, 0.02))
+    return np.asarray(solution)
+
+
+def _vote(product: NDArray[np.complex64], fields: RestingLines, axis: int) -> NDArray[np.float64]:
+    """Turns of one set at each step that suit all lines best.
+
+    A low order cannot slip by a whole turn, a high one is sharp.
+    """
+    step = fields.step[axis]
+    own = np.linspace(-1, 1, _CHOICES) * _REACH * step * float(np.hypot(*fields.frame[:, axis]))
+    cross = np.linspace(-1, 1, 7) * _REACH / 5 * step * float(np.hypot(*fields.frame[:, 1 - axis]))
+    grid = np.stack(np.meshgrid(own, cross, indexing="ij"), axis=-1)[..., :: 1 if axis == 0 else -1]
+    weight = 1 / np.sqrt(np.maximum(np.median(np.abs(product), axis=1), 1e-12))
+    phase = np.exp(-2j * np.pi * np.einsum("ni,abi->nab", fields.orders, grid))
+    worth = np.einsum("ns,nab->sab", product * weight[:, None], phase).real
+    flat = worth.reshape(len(worth), -1)
+    row, column = np.unravel_index(flat.argmax(axis=1), worth.shape[1:])
+    steps = np.arange(len(worth))
+    inner = np.clip(row, 1, len(own) - 2)
+    low, mid, high = (worth[steps, inner + k, column] for k in (-1, 0, 1))
+    curve = low - 2 * mid + high
+    shift = np.where(curve < 0, 0.5 * (low - high) / np.where(curve < 0, curve, 1), 0.0)
+    inside = np.where(row == inner, np.clip(shift, -0.5, 0.5), 0.0)
+    return np.asarray(own[row] + inside * (own[1] - own[0]))
+
+
+def _longest(present: NDArray[np.bool_]) -> tuple[int, int]:
+    """Start and end of the longest run."""
+    edges = np.flatnonzero(np.diff(np.concatenate([[0], present.astype(np.int8), [0]])))
+    starts, ends = edges[::2], edges[1::2]
+    if len(starts) == 0:
+        return 0, 0
+    longest = int(np.argmax(ends - starts))
+    return int(starts[longest]), int(ends[longest])
+
+
+def _weighted_median(values: NDArray[np.float64], weights: NDArray[np.float64]) -> float:
+    order = np.argsort(values)
+    share = np.cumsum(weights[order]) / weights.sum()
+    return float(values[order][np.searchsorted(share, 0.5)])
+
+
+def _presence(fields: RestingLines) -> NDArray[np.bool_]:
+    """Where most of the lines' power stands: within reach of the strongest tenth."""
+    power = sum(np.abs(blur(v, fields, 1.0, 1.0)) ** 2 for v in fields.values)
+    strength = np.sqrt(np.asarray(power))
+    return np.asarray(strength > _PRESENT * float(np.quantile(strength, 0.9)))
+
+
+def _jitter(fields: RestingLines, present: NDArray[np.bool_], which: int) -> float:
+    """Apparent sd of the gaps of one set, averaged along the threads.
+
+    Gaps of independent error j, seen through a Gaussian of s gaps, change the local frequency by
+    j / sqrt(2 sqrt(pi) s).
+    """
+    across, down = (0.0, 8.0) if which == 0 else (8.0, 0.0)
+    local = local_departures(fields, across, down)[..., which, which][present]
+    if local.size < 4:
+        return 0.0
+    middle = float(np.median(local))
+    spread = 1.4826 * float(np.median(np.abs(local - middle)))
+    gaps = fields.smoothing * float(np.hypot(*fields.frame[:, which]))
+    return spread / float(np.hypot(*fields.frame[:, which])) * math.sqrt(2 * math.sqrt(math.pi) * gaps)

@@ -1,0 +1,78 @@
+"""A cloth's beats with a pixel grid are where, and as strong, as the kernel of the reduction makes them."""
+
+import cv2
+import numpy as np
+import pytest
+from numpy.typing import NDArray
+from PIL import Image
+
+from moire.loom import Cloth
+from moire.scanner import Scanner, digitise, sample
+from moire.vision import lightness
+from moire.weavealias import Kernel, explain_alias, kernel_transfer, thread_aliases
+from moire.weaves import find_threads
+
+PILLOW = {
+    "box": Image.Resampling.BOX, "bilinear": Image.Resampling.BILINEAR, "hamming": Image.Resampling.HAMMING,
+    "bicubic": Image.Resampling.BICUBIC, "lanczos": Image.Resampling.LANCZOS,
+}  # fmt: skip
+SIDE = 900
+
+
+def reduced(image: NDArray[np.float32], kernel: str, size: int) -> NDArray[np.float32]:
+    if kernel in ("nearest", "area"):
+        flag = cv2.INTER_NEAREST if kernel == "nearest" else cv2.INTER_AREA
+        return np.asarray(cv2.resize(image, (size, size), interpolation=flag), np.float32)
+    return np.asarray(Image.fromarray(image).resize((size, size), PILLOW[kernel]), np.float32)
+
+
+def amplitude(image: NDArray[np.float32], f: tuple[float, float]) -> float:
+    rows, columns = image.shape
+    window = np.outer(np.hanning(rows), np.hanning(columns))
+    y, x = np.mgrid[:rows, :columns]
+    wave = np.exp(-2j * np.pi * (f[0] * x + f[1] * y))
+    return float(2 * np.abs((image * window * wave).sum()) / window.sum())
+
+
+@pytest.mark.parametrize("kernel", ["nearest", "area", *PILLOW])
+@pytest.mark.parametrize(("f", "size"), [((0.31, 0.02), 360), ((0.27, 0.0), 300)])
+def test_a_line_leaves_through_the_kernel_what_is_foretold(
+    kernel: Kernel, f: tuple[float, float], size: int
+) -> None:
+    y, x = np.mgrid[:SIDE, :SIDE]
+    image = (128 + 60 * np.cos(2 * np.pi * (f[0] * x + f[1] * y))).astype(np.float32)
+    scale = (SIDE / size, SIDE / size)
+    (alias,) = thread_aliases(
+        np.array(f), np.array([0.0, 0.1]), orders=((1.0, 0.0),), reduction=scale, kernel=kernel
+    )
+    seen = amplitude(reduced(image, kernel, size), alias.f_cpp)
+    assert seen == pytest.approx(60 * alias.transfer, abs=0.6)
+
+
+def test_box_at_its_own_rate_leaves_nothing() -> None:
+    assert kernel_transfer("box", np.array([0.25, 0.0]), (4.0, 4.0)) == pytest.approx(0, abs=1e-12)
+    assert kernel_transfer("nearest", np.array([0.25, 0.3]), (4.0, 4.0)) == pytest.approx(1)
+    assert kernel_transfer("lanczos", np.array([0.0, 0.0]), (4.0, 4.0)) == pytest.approx(1)
+
+
+@pytest.mark.parametrize(("kernel", "size"), [("nearest", 75), ("area", 110), ("bicubic", 110)])
+def test_a_beat_over_reduced_cloth_is_explained_by_its_threads(kernel: Kernel, size: int) -> None:
+    cloth = Cloth(width_in=1.25, height_in=1.25, ends_per_cm=22, picks_per_cm=19, unevenness=0.0)
+    scanner = Scanner(ppi=(600, 600))
+    pixels = digitise(sample(cloth, scanner), scanner, np.random.default_rng(0))
+    master = lightness(pixels.astype(np.float32))
+    threads = find_threads(master)
+    assert threads is not None
+    scale = (750 / size, 750 / size)
+    aliases = thread_aliases(threads.warp, threads.weft, reduction=scale, kernel=kernel)
+    ends = next(a for a in aliases if a.order == (1, 0))
+    seen = amplitude(reduced(master, kernel, size), ends.f_cpp)
+    assert seen == pytest.approx(amplitude(master, tuple(threads.warp)) * ends.transfer, rel=0.1)
+    found = explain_alias(np.array(ends.f_cpp) + 0.2 / size, aliases, tolerance=0.5 / size)
+    assert found is not None
+    assert (found.order, found.fold) == ((1, 0), ends.fold)
+
+
+def test_a_line_of_its_own_is_no_alias_of_the_threads() -> None:
+    aliases = thread_aliases(np.array([0.31, 0.0]), np.array([0.0, 0.23]), reduction=(2.0, 2.0))
+    assert explain_alias(np.array([0.111, 0.077]), aliases, tolerance=0.004) is None
