@@ -12,11 +12,12 @@ from prints import FOUR_INKS, card_print, scanned
 
 from moire.examine import examine
 from moire.model import Examination, Recipe
+from moire.outcome import Outcome, Terms, failed, succeeded
 from moire.proof import Truth
 from moire.recipe import prescribe
 
 DOCS = Path(__file__).resolve().parents[1] / "docs"
-SCHEMAS = {"examination": Examination, "recipe": Recipe, "truth": Truth}
+SCHEMAS = {"examination": Examination, "outcome": Outcome, "recipe": Recipe, "truth": Truth}
 
 
 @pytest.mark.parametrize("name", sorted(SCHEMAS))
@@ -38,6 +39,13 @@ def test_examinations_and_recipes_fit(ppi: int) -> None:
     found = examine(scanned(card_print(*FOUR_INKS), ppi)[0])
     for name, record in (("examination", found), ("recipe", prescribe(found))):
         jsonschema.validate(document(record), json.loads((DOCS / f"{name}.schema.json").read_text()))
+
+
+def test_outcomes_fit() -> None:
+    schema = json.loads((DOCS / "outcome.schema.json").read_text())
+    found = examine(scanned(card_print(FOUR_INKS[0]), 300)[0])
+    for outcome in (succeeded(found, "/a/b.png", seconds=1.5), failed("/a/c.png", "is empty", Terms())):
+        jsonschema.validate(document(outcome), schema)
 
 
 def test_demo_truths_fit() -> None:

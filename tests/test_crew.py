@@ -1,0 +1,93 @@
+"""Many files through any executor: whatever one file does, the others come through."""
+
+from collections import Counter
+from concurrent.futures import BrokenExecutor, Executor, Future, ThreadPoolExecutor
+from functools import partial
+from pathlib import Path
+from typing import Any
+
+import msgspec
+import pytest
+from leaves import sabotaged, tiny_folder
+
+import moire
+from moire.crew import EngineLost, processes
+from moire.outcome import Terms
+
+
+def test_any_executor_gives_the_same_outcomes(tmp_path: Path) -> None:
+    paths = tiny_folder(tmp_path, 12, broken_every=5)
+
+    def found(outcomes: Any) -> list[Any]:
+        documents = [msgspec.to_builtins(o) | {"seconds": 0, "examined_at": ""} for o in outcomes]
+        return sorted(documents, key=lambda d: str(d["path"]))
+
+    with ThreadPoolExecutor(2) as threads:
+        by_threads = found(moire.examine_many(paths, executor=threads))
+    by_processes = found(moire.examine_many(paths, executor=partial(processes, 2)))
+    assert by_threads == by_processes
+    assert [d["path"] for d in by_threads] == [str(p) for p in paths]
+    assert Counter(d["verdict"] for d in by_threads)["unreadable"] == 3
+
+
+def test_an_outcome_has_the_keys_of_an_examination(tmp_path: Path) -> None:
+    (path,) = tiny_folder(tmp_path, 1)
+    with ThreadPoolExecutor(1) as threads:
+        (outcome,) = moire.examine_many([path], executor=threads)
+    examination = msgspec.to_builtins(moire.examine(moire.read(path)))
+    document = msgspec.to_builtins(outcome)
+    assert {k: document[k] for k in examination if k != "format"} == {
+        k: v for k, v in examination.items() if k != "format"
+    }
+    assert outcome.examined_at
+    assert outcome.seconds > 0
+
+
+def test_a_crash_a_hang_and_a_fault_cost_one_file_each(tmp_path: Path) -> None:
+    paths = tiny_folder(tmp_path, 20)
+    for i, name in ((3, "crash-1.png"), (4, "hang-1.png"), (9, "crash-2.png"), (15, "bug-1.png")):
+        paths[i] = paths[i].rename(paths[i].with_name(name))
+    outcomes = list(moire.examine_many(paths, executor=sabotaged, limit_s=2.0, ahead=4))
+    assert sorted(o.path for o in outcomes) == sorted(str(p) for p in paths)
+    errors = {o.file: o.error for o in outcomes if o.error}
+    assert set(errors) == {"crash-1.png", "hang-1.png", "crash-2.png", "bug-1.png"}
+    assert "took longer than 2 s" in errors["hang-1.png"]
+    assert "ended the process" in errors["crash-1.png"]
+    assert "ended the process" in errors["crash-2.png"]
+    assert "ZeroDivisionError: a fault of ours" in errors["bug-1.png"]
+    assert all(o.sha256 for o in outcomes)
+
+
+def test_paths_are_taken_as_they_are_needed(tmp_path: Path) -> None:
+    paths = tiny_folder(tmp_path, 30)
+    taken = []
+
+    def walk() -> Any:
+        for path in paths:
+            taken.append(path)
+            yield path
+
+    with ThreadPoolExecutor(1) as threads:
+        outcomes = moire.examine_many(walk(), executor=threads, ahead=3)
+        next(outcomes)
+        assert len(taken) <= 6
+        outcomes.close()
+
+
+class _Broken(Executor):
+    def submit(self, *_: Any, **__: Any) -> Future[Any]:  # type: ignore[override]
+        raise BrokenExecutor("gone")
+
+
+def test_an_executor_that_cannot_be_replaced_is_told_of(tmp_path: Path) -> None:
+    with pytest.raises(EngineLost, match="run again"):
+        list(moire.examine_many(tiny_folder(tmp_path, 2), executor=_Broken()))
+
+
+def test_terms_are_asked_for_each_file(tmp_path: Path) -> None:
+    paths = tiny_folder(tmp_path, 4)
+    with ThreadPoolExecutor(1) as threads:
+        outcomes = moire.examine_many(
+            paths, executor=threads, terms=lambda path: Terms(ppi=(300.0, 300.0), material=Path(path).stem)
+        )
+        assert [(o.material, o.ppi) for o in outcomes] == [(p.stem, (300.0, 300.0)) for p in paths]
