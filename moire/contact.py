@@ -115,7 +115,7 @@ def _thumbnail(rgb: NDArray[np.uint8]) -> bytes:
     small = overview(rgb, limit=THUMB_PX)
     if small.uri.startswith("data:image/jpeg"):
         return _data(small)
-    pixels = cv2.imdecode(np.frombuffer(_data(small), np.uint8), cv2.IMREAD_COLOR)
+    pixels = np.asarray(cv2.imdecode(np.frombuffer(_data(small), np.uint8), cv2.IMREAD_COLOR))
     return cv2.imencode(".jpg", pixels, [cv2.IMWRITE_JPEG_QUALITY, 85])[1].tobytes()
 
 

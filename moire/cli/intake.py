@@ -29,6 +29,12 @@ if TYPE_CHECKING:
     "--jsonl", type=click.Path(dir_okay=False), metavar="FILE", help="Write one JSON line per file."
 )
 @click.option(
+    "--report",
+    type=click.Path(file_okay=False),
+    metavar="DIR",
+    help="Write a contact sheet and every scan's report.",
+)
+@click.option(
     "--time-limit", type=click.FloatRange(1), default=600.0, show_default=True, metavar="SECONDS",
     help="Give up one file after this.",
 )  # fmt: skip
@@ -58,6 +64,8 @@ def command(folder: str, **flags: Any) -> int:
     for target in (flags["csv"], flags["jsonl"]):
         if target:
             check_target(target, force=True, inputs=(flags["ledger"],))
+    if flags["report"]:
+        _make_folder(flags["report"])
     out = console(as_json=flags["as_json"], quiet=flags["quiet"])
     with Ledger(flags["ledger"]) as ledger:
         run = ledger.begin(os.path.abspath(folder), at=_now())
@@ -68,8 +76,10 @@ def command(folder: str, **flags: Any) -> int:
                 progress.stop()
                 out.print(f"Stopped. What is done is kept in {flags['ledger']}: the same command goes on.")
                 return 130
-        _export(ledger, run, flags)
+        _export(folder, ledger, run, flags)
         show_batch(out, ledger, run)
+        if flags["report"]:
+            out.print(f"Contact sheet: {os.path.join(flags['report'], 'index.html')}")
         if flags["as_json"]:
             print_json(summary(ledger, run, os.path.abspath(folder)))
         if any(verdict in flags["fail_on"] for _, verdict in ledger.tally(run)):
@@ -86,33 +96,54 @@ def _now() -> str:
 def _examine(folder: str, ledger: Ledger, run: int, progress: Any, flags: dict[str, Any]) -> None:
     from functools import partial
 
+    from moire.contact import has_pictures
     from moire.crew import processes
     from moire.intake import find_scans, take_in
     from moire.outcome import Terms
 
     jobs = flags["jobs"] or os.cpu_count() or 1
     terms = Terms(ppi=flags["ppi"], viewing=flags["viewing"])
+    sheet = flags["report"] or ""
+    leave = [sheet] if sheet else []
     if progress.shown:
-        progress.expect(sum(1 for _ in find_scans(folder)))
+        progress.expect(sum(1 for _ in find_scans(folder, leave=leave)))
     taken = take_in(
-        find_scans(folder),
+        find_scans(folder, leave=leave),
         ledger=ledger,
         run=run,
         executor=partial(processes, jobs),
         terms=lambda _: terms,
         on_known=lambda known: progress.count(known.verdict),
         retry=flags["retry"],
+        wanted=lambda known: bool(sheet) and not known.error and not has_pictures(sheet, known.content),
         ahead=2 * jobs,
         limit_s=flags["time_limit"],
+        sheet=sheet,
     )
     for outcome in taken:
         progress.count(outcome.verdict)
 
 
-def _export(ledger: Ledger, run: int, flags: dict[str, Any]) -> None:
+def _make_folder(path: str) -> None:
+    from moire.errors import OutputRefused
+
+    try:
+        os.makedirs(path, exist_ok=True)
+    except OSError as error:
+        raise OutputRefused(path, f"cannot be made a folder ({error.strerror}): give another name") from error
+
+
+def _export(folder: str, ledger: Ledger, run: int, flags: dict[str, Any]) -> None:
     from moire.intake import write_csv, write_jsonl
 
     if flags["csv"]:
         write_csv(ledger.outcomes(run), flags["csv"])
     if flags["jsonl"]:
         write_jsonl(ledger.outcomes(run), flags["jsonl"])
+    if flags["report"]:
+        from moire.outcome import path_text
+        from moire.sheet import render_sheet, write_sheet
+
+        sheet = flags["report"]
+        page = render_sheet(ledger.outcomes(run), folder=path_text(folder), sheet=sheet, made_at=_now())
+        write_sheet(page, sheet)
