@@ -17,7 +17,7 @@ from concurrent.futures import (
     wait,
 )
 
-from moire.errors import MoireError
+from moire.errors import EngineLost
 from moire.outcome import Outcome, Terms, failed, path_text
 from moire.station import INNER_THREADS, Job, examine_file, prepare
 
@@ -25,10 +25,6 @@ LIMIT_S = 600.0
 # A station ends a file at its limit; past this many limits nobody will answer for it any more.
 _PATIENCE = 3.0
 _TICK_S = 0.5
-
-
-class EngineLost(MoireError, RuntimeError):
-    """The executor stopped taking work; what was done is kept by whoever took it."""
 
 
 def examine_many(

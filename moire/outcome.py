@@ -9,7 +9,7 @@ from typing import Any, Literal
 
 import moire
 from moire.model import Examination, Finding, Kind, Verdict
-from moire.verdict import ARTIFACTS, judge
+from moire.verdict import ARTIFACTS, USUAL_PPI, judge
 from moire.vision import viewing_condition
 
 # Worst first: the order of tables and contact sheets.
@@ -98,18 +98,18 @@ def under_terms(found: Examination, terms: Terms) -> Examination:
     """The same findings judged by a material's own limits."""
     if found.verdict == "refer" and not found.findings:
         return found
-    if terms.visible_from == 1 and not terms.accepted:
+    if terms.visible_from == 1 and not terms.accepted and not terms.scanner_ppi:
         return found
     weighed = tuple(
         replace(f, visibility=f.visibility / terms.visible_from)
         for f in found.findings
         if f.kind not in terms.accepted
     )
-    verdict, visibility, advice = judge(weighed)
-    kept = tuple(line for line in found.advice if "sampling rate is unknown" in line)
-    return replace(
-        found, verdict=verdict, visibility=visibility * terms.visible_from, advice=(*advice, *kept)
-    )
+    verdict, visibility, advice = judge(weighed, rates=terms.scanner_ppi or USUAL_PPI)
+    # What was said for other reasons than the findings' stays said.
+    usual = judge(found.findings)[2]
+    advice += tuple(line for line in found.advice if line not in usual)
+    return replace(found, verdict=verdict, visibility=visibility * terms.visible_from, advice=advice)
 
 
 def succeeded(found: Examination, path: str, **more: Any) -> Outcome:

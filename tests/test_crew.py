@@ -11,7 +11,8 @@ import pytest
 from leaves import sabotaged, tiny_folder
 
 import moire
-from moire.crew import EngineLost, processes
+from moire.crew import processes
+from moire.errors import EngineLost
 from moire.outcome import Terms
 
 

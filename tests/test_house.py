@@ -59,7 +59,11 @@ def test_every_command_and_flag_is_described_in_the_readme_or_docs() -> None:
 
 def test_core_neither_prints_nor_reads_a_clock() -> None:
     people = {"cli", "templates"}
-    timed = {"station", "crew"}  # time limits and stamps of batch work, on the floor of files and machines
+    timed = {
+        "station",
+        "crew",
+        "watch",
+    }  # time limits and stamps of batch work, on the floor of files and machines
     for path in FILES:
         if path.parent.name in people or path.name == "__main__.py":
             continue

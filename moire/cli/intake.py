@@ -3,14 +3,11 @@
 from __future__ import annotations
 
 import os
-from typing import TYPE_CHECKING, Any
+from typing import Any
 
 import click
 
 from moire.cli.options import VERDICTS, shared
-
-if TYPE_CHECKING:
-    from moire.ledger import Ledger
 
 
 @click.command("intake")
@@ -23,6 +20,11 @@ if TYPE_CHECKING:
     "--jobs",
     type=click.IntRange(1, 512),
     help="Processes on this machine; one for each processor if not given.",
+)
+@click.option("--cluster", metavar="ADDRESS", help="Run on a dask.distributed scheduler instead.")
+@click.option("--watch", is_flag=True, help="Go on taking files as they are fully written, until Ctrl-C.")
+@click.option(
+    "--profile", type=click.Path(dir_okay=False), metavar="FILE.toml", help="Scanner, materials, limits."
 )
 @click.option("--csv", type=click.Path(dir_okay=False), metavar="FILE", help="Write a table.")
 @click.option(
@@ -51,99 +53,58 @@ def command(folder: str, **flags: Any) -> int:
     Example:
       moire intake /scans/today --ledger today.sqlite --csv today.csv
       moire intake /scans/today --ledger today.sqlite --jobs 8 --fail-on rescan
+      moire intake /scans/inbox --watch --profile bureau.toml --report sheet
     """
     from moire.cli.console import console, print_json
     from moire.cli.main import EXIT_PARTIAL, EXIT_VERDICT
+    from moire.cli.shift import Shift
     from moire.cli.tally import Progress, show_batch, summary
-    from moire.errors import ScanUnreadable
     from moire.ledger import Ledger
+    from moire.profile import Profile, read_profile
+
+    _check(folder, flags)
+    profile = read_profile(flags["profile"]) if flags["profile"] else Profile()
+    out = console(as_json=flags["as_json"], quiet=flags["quiet"])
+    with Ledger(flags["ledger"]) as ledger:
+        shift = Shift(folder, ledger, profile, flags, out)
+        with Progress(quiet=flags["quiet"]) as progress:
+            try:
+                (shift.watch if flags["watch"] else shift.examine)(progress)
+            except KeyboardInterrupt:
+                progress.stop()
+                # Watching ends no other way; anything else is cut short.
+                if not flags["watch"]:
+                    out.print(
+                        f"Stopped. What is done is kept in {flags['ledger']}: the same command goes on."
+                    )
+                    return 130
+        shift.export()
+        show_batch(out, ledger, shift.run)
+        if flags["report"]:
+            out.print(f"Contact sheet: {os.path.join(flags['report'], 'index.html')}")
+        if flags["as_json"]:
+            print_json(summary(ledger, shift.run, os.path.abspath(folder)))
+        if shift.stopped():
+            return EXIT_VERDICT
+        return EXIT_PARTIAL if ledger.failures(shift.run) else 0
+
+
+def _check(folder: str, flags: dict[str, Any]) -> None:
+    """Refuse what cannot work before any file is examined."""
+    from moire.errors import OutputRefused, ScanUnreadable
     from moire.scanfile import check_target
 
     if not os.path.isdir(folder):
         raise ScanUnreadable(folder, "is not a folder: give the folder that holds the scans")
+    if flags["jobs"] and flags["cluster"]:
+        raise click.UsageError("--jobs is for this machine, --cluster for another engine: give one of them")
+    inputs = [flags["ledger"], *([flags["profile"]] if flags["profile"] else [])]
     for target in (flags["csv"], flags["jsonl"]):
         if target:
-            check_target(target, force=True, inputs=(flags["ledger"],))
+            check_target(target, force=True, inputs=inputs)
     if flags["report"]:
-        _make_folder(flags["report"])
-    out = console(as_json=flags["as_json"], quiet=flags["quiet"])
-    with Ledger(flags["ledger"]) as ledger:
-        run = ledger.begin(os.path.abspath(folder), at=_now())
-        with Progress(quiet=flags["quiet"]) as progress:
-            try:
-                _examine(folder, ledger, run, progress, flags)
-            except KeyboardInterrupt:
-                progress.stop()
-                out.print(f"Stopped. What is done is kept in {flags['ledger']}: the same command goes on.")
-                return 130
-        _export(folder, ledger, run, flags)
-        show_batch(out, ledger, run)
-        if flags["report"]:
-            out.print(f"Contact sheet: {os.path.join(flags['report'], 'index.html')}")
-        if flags["as_json"]:
-            print_json(summary(ledger, run, os.path.abspath(folder)))
-        if any(verdict in flags["fail_on"] for _, verdict in ledger.tally(run)):
-            return EXIT_VERDICT
-        return EXIT_PARTIAL if ledger.failures(run) else 0
-
-
-def _now() -> str:
-    import datetime
-
-    return datetime.datetime.now().astimezone().isoformat(timespec="seconds")
-
-
-def _examine(folder: str, ledger: Ledger, run: int, progress: Any, flags: dict[str, Any]) -> None:
-    from functools import partial
-
-    from moire.contact import has_pictures
-    from moire.crew import processes
-    from moire.intake import find_scans, take_in
-    from moire.outcome import Terms
-
-    jobs = flags["jobs"] or os.cpu_count() or 1
-    terms = Terms(ppi=flags["ppi"], viewing=flags["viewing"])
-    sheet = flags["report"] or ""
-    leave = [sheet] if sheet else []
-    if progress.shown:
-        progress.expect(sum(1 for _ in find_scans(folder, leave=leave)))
-    taken = take_in(
-        find_scans(folder, leave=leave),
-        ledger=ledger,
-        run=run,
-        executor=partial(processes, jobs),
-        terms=lambda _: terms,
-        on_known=lambda known: progress.count(known.verdict),
-        retry=flags["retry"],
-        wanted=lambda known: bool(sheet) and not known.error and not has_pictures(sheet, known.content),
-        ahead=2 * jobs,
-        limit_s=flags["time_limit"],
-        sheet=sheet,
-    )
-    for outcome in taken:
-        progress.count(outcome.verdict)
-
-
-def _make_folder(path: str) -> None:
-    from moire.errors import OutputRefused
-
-    try:
-        os.makedirs(path, exist_ok=True)
-    except OSError as error:
-        raise OutputRefused(path, f"cannot be made a folder ({error.strerror}): give another name") from error
-
-
-def _export(folder: str, ledger: Ledger, run: int, flags: dict[str, Any]) -> None:
-    from moire.intake import write_csv, write_jsonl
-
-    if flags["csv"]:
-        write_csv(ledger.outcomes(run), flags["csv"])
-    if flags["jsonl"]:
-        write_jsonl(ledger.outcomes(run), flags["jsonl"])
-    if flags["report"]:
-        from moire.outcome import path_text
-        from moire.sheet import render_sheet, write_sheet
-
-        sheet = flags["report"]
-        page = render_sheet(ledger.outcomes(run), folder=path_text(folder), sheet=sheet, made_at=_now())
-        write_sheet(page, sheet)
+        try:
+            os.makedirs(flags["report"], exist_ok=True)
+        except OSError as error:
+            reason = f"cannot be made a folder ({error.strerror}): give another name"
+            raise OutputRefused(flags["report"], reason) from error

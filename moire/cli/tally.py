@@ -25,6 +25,7 @@ class Progress:
         from rich.progress import Progress as Bar
 
         terminal = Console(file=sys.stderr)
+        self.quiet = quiet
         self.shown = terminal.is_terminal and not quiet
         self.counts: Counter[str] = Counter()
         self._bar = Bar(
@@ -49,6 +50,11 @@ class Progress:
     def stop(self) -> None:
         """Leave the terminal as it was."""
         self._bar.stop()
+
+    def say(self, text: str) -> None:
+        """A line above the bar."""
+        if not self.quiet:
+            self._bar.console.print(text, markup=False)
 
     def expect(self, total: int) -> None:
         """Say how many files there are."""
