@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterable, Sequence
 from pathlib import Path
 
@@ -9,8 +10,10 @@ import msgspec
 
 from moire.contact import has_pictures, picture_paths
 from moire.outcome import SEVERITY, Outcome
+from moire.recipe import to_json
 from moire.report import number, template_text
 from moire.scanfile import write_bytes
+from moire.volume import Volume
 
 _MARKUP = {"<": "\\u003c", ">": "\\u003e", "&": "\\u0026", "\u2028": "\\u2028", "\u2029": "\\u2029"}
 
@@ -81,6 +84,24 @@ def write_sheet(html: str, sheet: str) -> None:
     OutputRefused
     """
     write_bytes(html.encode(), Path(sheet, "index.html"), force=True)
+
+
+def write_recipes(volumes: Sequence[Volume], sheet: str) -> list[str]:
+    """Write each volume's recipe beside the sheet, and say where, one sentence each.
+
+    Raises
+    ------
+    OutputRefused
+    """
+    notes = []
+    for number_, volume in enumerate((v for v in volumes if v.recipe is not None), 1):
+        assert volume.recipe is not None
+        stem = re.sub(r"[^A-Za-z0-9_-]+", "-", volume.folder.rpartition("/")[2])[:60] or "volume"
+        target = Path(sheet, "recipes", f"{number_:04d}-{stem}.json")
+        target.parent.mkdir(exist_ok=True)
+        write_bytes(to_json(volume.recipe), target, force=True)
+        notes.append(f"To mend a leaf of {volume.folder}: moire mend LEAF -o OUT --recipe {target}")
+    return notes
 
 
 def what_of(outcome: Outcome) -> str:

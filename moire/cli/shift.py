@@ -6,6 +6,7 @@ import datetime
 import os
 from collections.abc import Iterable, Iterator
 from contextlib import contextmanager
+from dataclasses import dataclass
 from functools import partial
 from typing import TYPE_CHECKING, Any
 
@@ -16,6 +17,23 @@ if TYPE_CHECKING:
     from moire.ledger import Ledger
     from moire.outcome import Outcome, Terms
     from moire.profile import Profile
+    from moire.trend import Trend
+    from moire.volume import Volume
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Insight:
+    """What many scans show together and one does not."""
+
+    volumes: tuple[Volume, ...]
+    trends: tuple[Trend, ...]
+
+    def notes(self) -> list[str]:
+        """One sentence for each, trends first."""
+        from moire.trend import trend_note
+        from moire.volume import volume_note
+
+        return [*map(trend_note, self.trends), *map(volume_note, self.volumes)]
 
 
 class Shift:
@@ -53,9 +71,21 @@ class Shift:
                 if self.stopped():
                     return
 
-    def export(self) -> None:
+    def insight(self) -> Insight:
+        """What the batch shows as a whole."""
+        from moire.trend import find_trends
+        from moire.volume import find_volumes
+
+        return Insight(
+            volumes=tuple(find_volumes(self.ledger.outcomes(self.run))),
+            trends=find_trends(self.ledger.with_banding()),
+        )
+
+    def export(self) -> Insight:
         """Write what the flags ask for, each whole or not at all."""
         from moire.intake import write_csv, write_jsonl
+
+        insight = self.insight()
 
         if self.flags["csv"]:
             write_csv(self.ledger.outcomes(self.run), self.flags["csv"])
@@ -63,12 +93,18 @@ class Shift:
             write_jsonl(self.ledger.outcomes(self.run), self.flags["jsonl"])
         if self.sheet:
             from moire.outcome import path_text
-            from moire.sheet import render_sheet, write_sheet
+            from moire.sheet import render_sheet, write_recipes, write_sheet
 
+            notes = [*insight.notes(), *write_recipes(insight.volumes, self.sheet)]
             page = render_sheet(
-                self.ledger.outcomes(self.run), folder=path_text(self.folder), sheet=self.sheet, made_at=now()
+                self.ledger.outcomes(self.run),
+                folder=path_text(self.folder),
+                sheet=self.sheet,
+                notes=notes,
+                made_at=now(),
             )
             write_sheet(page, self.sheet)
+        return insight
 
     def stopped(self) -> bool:
         """Whether a verdict occurred that the command line or the profile names."""

@@ -9,11 +9,13 @@ from typing import TYPE_CHECKING, Any
 if TYPE_CHECKING:
     from rich.console import Console
 
+    from moire.cli.shift import Insight
     from moire.ledger import Ledger
     from moire.outcome import Outcome
 
 _ORDER = ("unreadable", "rescan", "refer", "mendable", "sound")
 _SHOWN = 20
+_NOTES = 8
 
 
 class Progress:
@@ -100,7 +102,17 @@ def show_batch(out: Console, ledger: Ledger, run: int) -> None:
         out.print(f"and {rest} more: see --csv, --jsonl or --report.")
 
 
-def summary(ledger: Ledger, run: int, folder: str) -> dict[str, Any]:
+def show_notes(out: Console, notes: list[str]) -> None:
+    """What the batch shows as a whole, the first few sentences."""
+    from rich.markup import escape
+
+    for note in notes[:_NOTES]:
+        out.print(escape(note))
+    if len(notes) > _NOTES:
+        out.print(f"and {len(notes) - _NOTES} more such notes: see --json or --report.")
+
+
+def summary(ledger: Ledger, run: int, folder: str, insight: Insight) -> dict[str, Any]:
     """The batch as one JSON document."""
     failures = [{"path": o.path, "error": o.error} for o in ledger.outcomes(run) if o.error]
     counts = _counts(ledger, run)
@@ -111,6 +123,8 @@ def summary(ledger: Ledger, run: int, folder: str) -> dict[str, Any]:
         "files": sum(counts.values()),
         "verdicts": counts,
         "failed": failures,
+        "volumes": insight.volumes,
+        "trends": insight.trends,
     }
 
 
