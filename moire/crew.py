@@ -16,6 +16,7 @@ from concurrent.futures import (
     ProcessPoolExecutor,
     wait,
 )
+from dataclasses import dataclass, field
 
 from moire.errors import EngineLost
 from moire.outcome import Outcome, Terms, failed, path_text
@@ -64,67 +65,19 @@ def examine_many(
     EngineLost
         If the executor gives up and cannot be replaced.
     """
-    crew = _Crew(executor)
-    fresh = _jobs(iter(paths), terms, limit_s, sheet)
-    in_line: deque[Job] = deque()
-    suspects: deque[Job] = deque()
-    seen_broken: set[Job] = set()
-    waiting: dict[Future[Outcome], tuple[Job, float]] = {}
-    room = ahead or 2 * (os.cpu_count() or 1)
-    done_all = False
-    # After a crash each file that was under way is tried alone, to tell which one it was.
-    alone: Job | None = None
+    desk = _Desk(
+        crew=_Crew(executor),
+        fresh=_jobs(iter(paths), terms, limit_s, sheet),
+        room=ahead or 2 * (os.cpu_count() or 1),
+        limit_s=limit_s,
+    )
+    whole = False
     try:
-        while True:
-            while alone is None and len(waiting) < room and not (suspects and waiting):
-                job = suspects.popleft() if suspects else in_line.popleft() if in_line else next(fresh, None)
-                if job is None:
-                    break
-                was_suspect = job in seen_broken
-                future = crew.submit(job)
-                if future is None:
-                    (suspects if was_suspect else in_line).appendleft(job)
-                    crew.replace()
-                    break
-                waiting[future] = (job, time.monotonic())
-                alone = job if was_suspect else None
-            if not waiting:
-                if in_line or suspects:
-                    continue
-                break
-            wait(waiting, timeout=_TICK_S, return_when=FIRST_COMPLETED)
-            lost: list[Job] = []
-            for future in [f for f in waiting if f.done()]:
-                job, began = waiting.pop(future)
-                outcome = _answer(future, job)
-                if outcome is None and job is alone:
-                    outcome = _lost(job, _why_lost(time.monotonic() - began, limit_s))
-                    crew.replace()
-                if outcome is None:
-                    lost.append(job)
-                    continue
-                alone = None if job is alone else alone
-                seen_broken.discard(job)
-                yield outcome
-            overdue = [
-                f for f, (_, began) in waiting.items() if time.monotonic() - began > _PATIENCE * limit_s
-            ]
-            for future in overdue:
-                job, _ = waiting.pop(future)
-                alone = None if job is alone else alone
-                yield _lost(job, f"gave no answer in {_PATIENCE * limit_s:g} s: look at it by itself")
-            if overdue and crew.own:
-                in_line.extend(job for job, _ in waiting.values())
-            if lost:
-                suspects.extend(lost)
-                suspects.extend(job for job, _ in waiting.values())
-                seen_broken.update(suspects)
-            if lost or (overdue and crew.own):
-                waiting.clear()
-                crew.replace()
-        done_all = True
+        while desk.hand_out():
+            yield from desk.collect()
+        whole = True
     finally:
-        crew.close(whole=done_all)
+        desk.crew.close(whole=whole)
 
 
 def processes(jobs: int) -> ProcessPoolExecutor:
@@ -137,6 +90,76 @@ def processes(jobs: int) -> ProcessPoolExecutor:
         # Imported once there, a replaced worker starts at once.
         context.set_forkserver_preload(["moire.examine", "moire.station"])
     return ProcessPoolExecutor(jobs, mp_context=context, initializer=prepare)
+
+
+@dataclass(slots=True, kw_only=True)
+class _Desk:
+    """Jobs on their way: who has which, and which must be tried alone.
+
+    When a pool breaks, every job under way comes back without an answer. Each of them is then
+    tried alone, and the one that breaks the pool again is the one to blame.
+    """
+
+    crew: _Crew
+    fresh: Iterator[Job]
+    room: int
+    limit_s: float
+    again: deque[Job] = field(default_factory=deque)
+    suspects: deque[Job] = field(default_factory=deque)
+    waiting: dict[Future[Outcome], tuple[Job, float]] = field(default_factory=dict)
+    alone: Job | None = None
+
+    def hand_out(self) -> bool:
+        """Give out as many jobs as there is room for; False when all is done."""
+        while self.alone is None and len(self.waiting) < self.room and not (self.suspects and self.waiting):
+            suspect = bool(self.suspects)
+            line = self.suspects if suspect else self.again
+            job = line.popleft() if line else next(self.fresh, None)
+            if job is None:
+                break
+            future = self.crew.submit(job)
+            if future is None:
+                line.appendleft(job)
+                self.crew.replace()
+                continue
+            self.waiting[future] = (job, time.monotonic())
+            self.alone = job if suspect else None
+        return bool(self.waiting)
+
+    def collect(self) -> Iterator[Outcome]:
+        """Outcomes of what is done by now; waits a moment for the first."""
+        wait(self.waiting, timeout=_TICK_S, return_when=FIRST_COMPLETED)
+        lost: list[Job] = []
+        for future in [f for f in self.waiting if f.done()]:
+            job, began = self.waiting.pop(future)
+            outcome = _answer(future, job)
+            if outcome is not None:
+                yield self._done(job, outcome)
+            elif job is self.alone:
+                self.crew.replace()
+                yield self._done(job, _lost(job, _why_lost(time.monotonic() - began, self.limit_s)))
+            else:
+                lost.append(job)
+        if lost:
+            self.suspects.extend(lost)
+            self._start_afresh(self.suspects)
+        patience = _PATIENCE * self.limit_s
+        overdue = [f for f, (_, began) in self.waiting.items() if time.monotonic() - began > patience]
+        for future in overdue:
+            job, _ = self.waiting.pop(future)
+            yield self._done(job, _lost(job, f"gave no answer in {patience:g} s: look at it by itself"))
+        if overdue and self.crew.own:
+            self._start_afresh(self.again)
+
+    def _done(self, job: Job, outcome: Outcome) -> Outcome:
+        self.alone = None if job is self.alone else self.alone
+        return outcome
+
+    def _start_afresh(self, line: deque[Job]) -> None:
+        """A new executor; what the old one still had goes back into a line."""
+        line.extend(job for job, _ in self.waiting.values())
+        self.waiting.clear()
+        self.crew.replace()
 
 
 class _Crew:

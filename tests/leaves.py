@@ -30,7 +30,11 @@ def tiny_folder(folder: Path, count: int, *, broken_every: int = 0) -> list[Path
 
 
 def sabotaged(jobs: int = 2) -> ProcessPoolExecutor:
-    """Workers that die on files named crash*, and hang without giving up the interpreter on hang*."""
+    """Workers that fail on files of some names.
+
+    They die on crash*, hang on hang* without giving up the interpreter, stop so dead on stop*
+    that they cannot even end themselves, and raise on bug*.
+    """
     return ProcessPoolExecutor(jobs, mp_context=get_context("forkserver"), initializer=_sabotage)
 
 
@@ -46,6 +50,8 @@ def _sabotage() -> None:
             os.kill(os.getpid(), signal.SIGSEGV)
         if name.startswith("hang"):
             ctypes.PyDLL(None).sleep(60)
+        if name.startswith("stop"):
+            os.kill(os.getpid(), signal.SIGSTOP)
         if name.startswith("bug"):
             raise ZeroDivisionError("a fault of ours")
         return whole(path)

@@ -59,6 +59,17 @@ def test_a_crash_a_hang_and_a_fault_cost_one_file_each(tmp_path: Path) -> None:
     assert all(o.sha256 for o in outcomes)
 
 
+def test_a_process_that_cannot_end_itself_is_given_up(tmp_path: Path) -> None:
+    """As one that waits for a network disk that is gone."""
+    paths = tiny_folder(tmp_path, 8)
+    paths[2] = paths[2].rename(paths[2].with_name("stop-1.png"))
+    outcomes = list(moire.examine_many(paths, executor=sabotaged, limit_s=0.8, ahead=4))
+    assert sorted(o.path for o in outcomes) == sorted(str(p) for p in paths)
+    assert {o.file: o.error for o in outcomes if o.error} == {
+        "stop-1.png": "gave no answer in 2.4 s: look at it by itself"
+    }
+
+
 def test_paths_are_taken_as_they_are_needed(tmp_path: Path) -> None:
     paths = tiny_folder(tmp_path, 30)
     taken = []
