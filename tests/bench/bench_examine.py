@@ -15,23 +15,16 @@ from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
-import skimage.data
-from numpy.typing import NDArray
 
 sys.path.insert(0, str(Path(__file__).resolve().parents[1]))
 from prints import scanned
+from subjects import SEEDS, subject
 
 from moire.examine import examine
 from moire.press import Print
 from moire.proof import ScreenOrder, print_sheet
-from moire.scanner import srgb_decode
 from moire.units import angle_distance
 
-PICTURES = {
-    "tuning": ("astronaut", "camera", "chelsea", "gravel"),
-    "check": ("coffee", "coins", "immunohistochemistry", "rocket", "retina", "hubble_deep_field"),
-}
-SEEDS = {"tuning": 1000, "check": 77000}
 INKS = ("cyan", "magenta", "yellow", "black")
 
 
@@ -50,20 +43,10 @@ class Tally:
     angle_z: tuple[float, ...]
 
 
-def picture(name: str, rng: np.random.Generator) -> NDArray[np.float32]:
-    """A square crop of a shipped picture, linear light."""
-    data = getattr(skimage.data, name)()
-    data = np.repeat(data[..., None], 3, axis=2) if data.ndim == 2 else data[..., :3]
-    side = min(400, *data.shape[:2])
-    y, x = rng.integers(0, data.shape[0] - side + 1), rng.integers(0, data.shape[1] - side + 1)
-    return srgb_decode(data[y : y + side, x : x + side] / 255).astype(np.float32)
-
-
 def draw_print(kind: str, which: str, number: int) -> Print:
     """Print `number` of a set: ``one`` ink at any angle, or ``four`` inks."""
     rng = np.random.default_rng(SEEDS[which] + number + (0 if kind == "one" else 5000))
-    names = PICTURES[which]
-    subject = picture(names[number % len(names)], rng)
+    picture = subject(which, number, rng)
     spot = ("round", "ellipse", "diamond", "square")[int(rng.integers(4))]
     if kind == "one":
         ink = "black" if rng.random() < 0.6 else str(rng.choice(INKS[:3]))
@@ -81,7 +64,7 @@ def draw_print(kind: str, which: str, number: int) -> Print:
         orders = [(ruling, a, ink) for a, ink in zip((15, 75, 0, 45), INKS, strict=True)]
     screens = tuple(ScreenOrder(ruling_lpi=r, angle_deg=a, ink=i, spot=spot) for r, a, i in orders)
     return print_sheet(
-        subject,
+        picture,
         screens,
         width_in=1.5,
         height_in=1.5,
@@ -161,7 +144,7 @@ def row(name: str, t: Tally) -> str:
 
 def main() -> None:
     parser = argparse.ArgumentParser()
-    parser.add_argument("--set", default="check", choices=sorted(PICTURES))
+    parser.add_argument("--set", default="check", choices=sorted(SEEDS))
     parser.add_argument("--prints", type=int, default=12)
     parser.add_argument("--kinds", default="one,four,singular")
     parser.add_argument("--ppi", default="300,400,600")
