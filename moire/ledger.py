@@ -11,6 +11,7 @@ import hashlib
 import os
 import sqlite3
 from collections.abc import Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass, replace
 
 import msgspec
@@ -87,34 +88,41 @@ class Ledger:
     """
 
     def __init__(self, path: str | os.PathLike[str]) -> None:
-        name = os.fspath(path)
+        name = self._name = os.fspath(path)
         if os.path.exists(name) and not _is_database(name):
             raise OutputRefused(name, "is not a ledger: give another name to --ledger")
+        self._lock = _locked(name)
         try:
-            self._db = sqlite3.connect(name, timeout=60, isolation_level=None)
-            self._db.execute("PRAGMA journal_mode = WAL")
-            self._db.execute("PRAGMA synchronous = NORMAL")
-            self._migrate(name)
-        except sqlite3.Error as error:
-            raise OutputRefused(name, f"cannot be used as a ledger ({error})") from error
+            self._db = self._open()
+        except BaseException:
+            if self._lock is not None:
+                os.close(self._lock)
+            raise
 
     def __enter__(self) -> Ledger:
         return self
 
     def __exit__(self, *_: object) -> None:
         self._db.close()
+        if self._lock is not None:
+            os.close(self._lock)
 
-    def _migrate(self, name: str) -> None:
-        (version,) = self._db.execute("PRAGMA user_version").fetchone()
-        if version > len(MIGRATIONS):
-            raise OutputRefused(
-                name, f"is a ledger of version {version}, this moire knows {len(MIGRATIONS)}: update moire"
-            )
-        if version == 0 and self._db.execute("SELECT count(*) FROM sqlite_master").fetchone()[0]:
-            raise OutputRefused(name, "is a database of something else: give another name to --ledger")
-        for number, script in enumerate(MIGRATIONS[version:], version + 1):
-            # One transaction for each step, so that a kill leaves a whole version.
-            self._db.executescript(f"BEGIN IMMEDIATE; {script}; PRAGMA user_version = {number}; COMMIT;")
+    def _open(self) -> sqlite3.Connection:
+        try:
+            db = sqlite3.connect(self._name, timeout=60, isolation_level=None)
+        except sqlite3.Error as error:
+            raise OutputRefused(self._name, f"cannot be used as a ledger ({error})") from error
+        try:
+            db.execute("PRAGMA journal_mode = WAL")
+            db.execute("PRAGMA synchronous = NORMAL")
+            _migrate(db, self._name)
+        except sqlite3.Error as error:
+            db.close()
+            raise OutputRefused(self._name, f"cannot be used as a ledger ({error})") from error
+        except BaseException:
+            db.close()
+            raise
+        return db
 
     def begin(self, folder: str, *, at: str) -> int:
         """Number of a new run over a folder."""
@@ -144,32 +152,45 @@ class Ledger:
 
     def see(self, run: int, path: str, stamp: Stamp, content: str, terms: Terms) -> None:
         """Note that a run met a file whose result is known."""
-        self._db.execute(
-            "INSERT OR REPLACE INTO files VALUES (?, ?, ?, ?, ?, ?)",
-            (path, stamp.size, stamp.modified_ns, content, terms_key(terms), run),
-        )
+        with self._told():
+            self._db.execute(
+                "INSERT OR REPLACE INTO files VALUES (?, ?, ?, ?, ?, ?)",
+                (path, stamp.size, stamp.modified_ns, content, terms_key(terms), run),
+            )
 
     def record(self, run: int, outcome: Outcome, stamp: Stamp, terms: Terms) -> None:
         """Keep an outcome: both rows or none."""
         # A file whose bytes never came has no content; it is known by its place, and tried again.
         content, key = outcome.sha256 or f"unread:{outcome.path}", terms_key(terms)
         banding = any(f.kind == "banding" for f in outcome.findings)
-        self._db.execute("BEGIN IMMEDIATE")
+        with self._told():
+            self._db.execute("BEGIN IMMEDIATE")
+            try:
+                self._db.execute("INSERT OR IGNORE INTO terms VALUES (?, ?)", (key, _text(terms)))
+                self._db.execute(
+                    "INSERT OR REPLACE INTO results VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?)",
+                    (
+                        content, key, outcome.verdict, SEVERITY[outcome.verdict], outcome.visibility,
+                        outcome.error, outcome.seconds, outcome.examined_at, outcome.software,
+                        msgspec.json.encode(outcome), banding,
+                    ),
+                )  # fmt: skip
+                self.see(run, outcome.path, stamp, content, terms)
+                self._db.execute("COMMIT")
+            except BaseException:
+                if self._db.in_transaction:
+                    self._db.execute("ROLLBACK")
+                raise
+
+    @contextmanager
+    def _told(self) -> Iterator[None]:
+        """A full disk or a lost one becomes one line that names the ledger."""
         try:
-            self._db.execute("INSERT OR IGNORE INTO terms VALUES (?, ?)", (key, _text(terms)))
-            self._db.execute(
-                "INSERT OR REPLACE INTO results VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?)",
-                (
-                    content, key, outcome.verdict, SEVERITY[outcome.verdict], outcome.visibility,
-                    outcome.error, outcome.seconds, outcome.examined_at, outcome.software,
-                    msgspec.json.encode(outcome), banding,
-                ),
-            )  # fmt: skip
-            self.see(run, outcome.path, stamp, content, terms)
-        except BaseException:
-            self._db.execute("ROLLBACK")
-            raise
-        self._db.execute("COMMIT")
+            yield
+        except sqlite3.Error as error:
+            raise OutputRefused(
+                self._name, f"cannot be written ({error}): what was kept before is whole, run again"
+            ) from error
 
     def outcomes(self, run: int) -> Iterator[Outcome]:
         """Every file that a run met, once, by path."""
@@ -208,6 +229,18 @@ class Ledger:
             yield _outcome(path, outcome)
 
 
+def _migrate(db: sqlite3.Connection, name: str) -> None:
+    (version,) = db.execute("PRAGMA user_version").fetchone()
+    if version > len(MIGRATIONS):
+        known = f"this moire knows {len(MIGRATIONS)}"
+        raise OutputRefused(name, f"is a ledger of version {version}, {known}: update moire")
+    if version == 0 and db.execute("SELECT count(*) FROM sqlite_master").fetchone()[0]:
+        raise OutputRefused(name, "is a database of something else: give another name to --ledger")
+    for number, script in enumerate(MIGRATIONS[version:], version + 1):
+        # One transaction for each step, so that a kill leaves a whole version.
+        db.executescript(f"BEGIN IMMEDIATE; {script}; PRAGMA user_version = {number}; COMMIT;")
+
+
 def terms_key(terms: Terms) -> str:
     """Short digest of terms, the same for the same values."""
     return hashlib.sha256(_text(terms).encode()).hexdigest()[:16]
@@ -221,6 +254,28 @@ def _outcome(path: str, text: bytes) -> Outcome:
     found = msgspec.json.decode(text, type=Outcome)
     # One content may lie at several places.
     return found if found.path == path else replace(found, path=path, file=path.rsplit(os.sep, 1)[-1])
+
+
+def _locked(name: str) -> int | None:
+    """Hold a ledger for this process alone; the system lets go of it however the process ends.
+
+    Two runs at once would each take files out of the other's table.
+    """
+    try:
+        import fcntl
+    except ImportError:  # not on this system: its users keep to one run at a time
+        return None
+    try:
+        # Beside the ledger: closing a second handle on the ledger itself would drop SQLite's own locks.
+        handle = os.open(f"{name}-lock", os.O_CREAT | os.O_RDWR, 0o666)
+    except OSError as error:
+        raise OutputRefused(name, f"cannot be used as a ledger ({error.strerror})") from error
+    try:
+        fcntl.flock(handle, fcntl.LOCK_EX | fcntl.LOCK_NB)
+    except OSError as error:
+        os.close(handle)
+        raise OutputRefused(name, "is in use by another run: wait for it, or keep another ledger") from error
+    return handle
 
 
 def _is_database(name: str) -> bool:

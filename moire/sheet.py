@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 import re
 from collections.abc import Iterable, Sequence
 from pathlib import Path
@@ -9,12 +10,14 @@ from pathlib import Path
 import msgspec
 
 from moire.contact import has_pictures, picture_paths
+from moire.errors import OutputRefused
 from moire.outcome import SEVERITY, Outcome
 from moire.recipe import to_json
 from moire.report import number, template_text
 from moire.scanfile import write_bytes
 from moire.volume import Volume
 
+_MARK = 'content="moire contact sheet"'
 _MARKUP = {"<": "\\u003c", ">": "\\u003e", "&": "\\u0026", "\u2028": "\\u2028", "\u2029": "\\u2029"}
 
 
@@ -74,6 +77,22 @@ def render_sheet(
         css=template_text("report.css") + template_text("sheet.css"),
         script=template_text("sheet.js"),
     )
+
+
+def check_sheet(sheet: str, folder: str) -> None:
+    """Refuse a folder for the contact sheet in which it would harm something.
+
+    Raises
+    ------
+    OutputRefused
+        If it holds the folder that is taken in, or a page that is no contact sheet.
+    """
+    top, scans = os.path.realpath(sheet), os.path.realpath(folder)
+    if os.path.commonpath([top, scans]) == top:
+        raise OutputRefused(sheet, f"holds {folder}, where nothing is written: give a folder of its own")
+    page = Path(sheet, "index.html")
+    if page.exists() and _MARK not in page.read_text(encoding="utf-8", errors="replace")[:4096]:
+        raise OutputRefused(str(page), "is not a contact sheet: give another folder")
 
 
 def write_sheet(html: str, sheet: str) -> None:

@@ -3,6 +3,7 @@
 import csv
 import json
 import os
+import re
 import shutil
 import signal
 import sqlite3
@@ -154,6 +155,9 @@ def test_exit_codes(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     assert run(scans, "--ledger", tmp_path / "no" / "l.sqlite") == 4
     assert run(scans, "--ledger", ledger, "--csv", tmp_path / "no" / "t.csv") == 4
     assert run(scans, "--ledger", ledger, "--csv", ledger) == 4
+    assert run(scans, "--ledger", ledger, "--csv", scans / "market-flyer.png") == 4
+    assert run(scans, "--ledger", ledger, "--report", tmp_path) == 4
+    assert run(scans, "--ledger", ledger, "--jobs", 1, "--cluster", "tcp://here:1") == 2
     assert run(scans, "--jobs", 0) == 2
     capsys.readouterr()
     assert run(scans, "--ledger", ledger, "--json") == 0
@@ -238,6 +242,33 @@ def test_ctrl_c_keeps_what_is_done(tmp_path: Path) -> None:
     assert "Traceback" not in err
     assert 5 <= kept(tmp_path / "l.sqlite") <= 300
     wait_for(lambda: not _members(process.pid))
+
+
+def test_a_terminal_shows_rate_time_left_and_counts(tmp_path: Path) -> None:
+    pty = pytest.importorskip("pty")
+    tiny_folder(tmp_path / "scans", 60, broken_every=20)
+    ours, theirs = pty.openpty()
+    process = subprocess.Popen(
+        [a for a in command(tmp_path / "scans", tmp_path) if a != "--quiet"],
+        stdout=subprocess.DEVNULL, stderr=theirs, env=os.environ | {"TERM": "xterm", "COLUMNS": "100"},
+    )  # fmt: skip
+    os.close(theirs)
+    shown = b""
+    while True:
+        try:
+            piece = os.read(ours, 65536)
+        except OSError:  # the other end is closed
+            break
+        if not piece:
+            break
+        shown += piece
+    os.close(ours)
+    assert process.wait(20) == 5
+    text = shown.decode()
+    assert re.search(r"\d+/60", text)
+    assert re.search(r"\d+/min", text)
+    assert re.search(r"\d:\d\d", text)
+    assert re.search(r"3 unreadable, \d+ refer", text)
 
 
 def test_terms_of_a_material_change_the_verdict() -> None:

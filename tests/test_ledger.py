@@ -120,3 +120,24 @@ def test_it_is_a_wal_database(tmp_path: Path) -> None:
         assert db.execute("PRAGMA journal_mode").fetchone() == ("wal",)
         assert db.execute("PRAGMA integrity_check").fetchone() == ("ok",)
         db.close()
+
+
+def test_one_run_at_a_time_holds_a_ledger(tmp_path: Path) -> None:
+    path = tmp_path / "l.sqlite"
+    with Ledger(path), pytest.raises(OutputRefused, match="in use by another run"):
+        Ledger(path)
+    with Ledger(path):
+        pass
+
+
+def test_a_ledger_that_cannot_be_written_is_told_of(tmp_path: Path) -> None:
+    path = tmp_path / "l.sqlite"
+    with Ledger(path) as ledger:
+        run = ledger.begin("/a", at="")
+        ledger.record(run, outcome("/a/1.png", "c1"), HERE, Terms())
+        # As a full disk would: SQLite may not grow the file any more.
+        ledger._db.execute("PRAGMA max_page_count = 1")
+        large = outcome("/a/2.png", "c2", advice=("x" * 200_000,))
+        with pytest.raises(OutputRefused, match=r"database or disk is full.*run again"):
+            ledger.record(run, large, HERE, Terms())
+        assert [o.file for o in ledger.outcomes(run)] == ["1.png"]

@@ -19,10 +19,11 @@ import pytest
 import moire
 from moire.contact import CROP_PX, has_pictures, worst_box
 from moire.crew import processes
+from moire.errors import OutputRefused
 from moire.model import Screen
 from moire.outcome import Outcome, Terms, failed
 from moire.scanfile import read
-from moire.sheet import render_sheet, write_sheet
+from moire.sheet import check_sheet, render_sheet, write_sheet
 
 BROWSER = shutil.which("chromium")
 FLAGS = ["--headless", "--no-sandbox", "--disable-gpu", "--disable-quic", "--no-first-run",
@@ -96,6 +97,24 @@ def test_hostile_names_stay_text(batch: tuple[Path, Path, list[Outcome]]) -> Non
     assert "<script>alert" not in page
     rows = json.loads(re.search(r'id="rows">(.*?)</script>', page, re.S)[1])  # type: ignore[index]
     assert rows[0][0] == HOSTILE.replace("/", "_")
+
+
+def test_a_sheet_goes_where_it_harms_nothing(tmp_path: Path) -> None:
+    scans = tmp_path / "scans"
+    scans.mkdir()
+    for place in (scans, tmp_path):
+        with pytest.raises(OutputRefused, match="nothing is written"):
+            check_sheet(str(place), str(scans))
+    check_sheet(str(scans / "sheet"), str(scans))
+    other = tmp_path / "web"
+    other.mkdir()
+    check_sheet(str(other), str(scans))
+    (other / "index.html").write_text("<h1>Our house</h1>")
+    with pytest.raises(OutputRefused, match="is not a contact sheet"):
+        check_sheet(str(other), str(scans))
+    (other / "index.html").unlink()
+    write_sheet(render_sheet([], folder="/s", sheet=str(other)), str(other))
+    check_sheet(str(other), str(scans))
 
 
 def test_nothing_moves_by_itself(batch: tuple[Path, Path, list[Outcome]]) -> None:

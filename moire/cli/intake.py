@@ -93,7 +93,9 @@ def command(folder: str, **flags: Any) -> int:
 def _check(folder: str, flags: dict[str, Any]) -> None:
     """Refuse what cannot work before any file is examined."""
     from moire.errors import OutputRefused, ScanUnreadable
+    from moire.intake import SUFFIXES
     from moire.scanfile import check_target
+    from moire.sheet import check_sheet
 
     if not os.path.isdir(folder):
         raise ScanUnreadable(folder, "is not a folder: give the folder that holds the scans")
@@ -103,7 +105,10 @@ def _check(folder: str, flags: dict[str, Any]) -> None:
     for target in (flags["csv"], flags["jsonl"]):
         if target:
             check_target(target, force=True, inputs=inputs)
+            if os.path.splitext(target)[1].lower() in SUFFIXES:
+                raise OutputRefused(target, "is named like a scan: give a name that ends in .csv or .jsonl")
     if flags["report"]:
+        check_sheet(flags["report"], folder)
         try:
             os.makedirs(flags["report"], exist_ok=True)
         except OSError as error:

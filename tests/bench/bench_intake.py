@@ -106,9 +106,9 @@ def pace(top: Path) -> None:
             busy[job is read] = (time.process_time() - began) / 2
         each = {jobs: took / len(paths) for jobs, took in cores.items()}
         print(
-            f"{kind}: {busy[False]:.2f} s of processor a page, {60 / busy[False]:.0f} pages a minute and core, "
-            f"{busy[False] / busy[True]:.1f} times decoding ({busy[True]:.2f} s); by the clock {each[1]:.2f} s a "
-            f"page with one process, two do {each[1] / each[2]:.2f} times as much",
+            f"{kind}: {busy[False]:.2f} s of processor a page, {60 / busy[False]:.0f} pages a minute and "
+            f"core, {busy[False] / busy[True]:.1f} times decoding ({busy[True]:.2f} s); by the clock "
+            f"{each[1]:.2f} s a page with one process, two do {each[1] / each[2]:.2f} times as much",
             flush=True,
         )
 
