@@ -26,6 +26,7 @@ LIMIT_S = 600.0
 # A station ends a file at its limit; past this many limits nobody will answer for it any more.
 _PATIENCE = 3.0
 _TICK_S = 0.5
+_START_S = 120.0
 
 
 def examine_many(
@@ -185,6 +186,11 @@ class _Crew:
             raise EngineLost("the executor broke and cannot be replaced: run again to go on")
         self.close(whole=False)
         self.executor = self.make()
+        try:
+            # Where not even nothing can be done, the files are not to blame.
+            self.executor.submit(os.getpid).result(_START_S)
+        except (BrokenExecutor, TimeoutError) as error:
+            raise EngineLost(f"what examines the files cannot be started ({error})") from error
 
     def close(self, *, whole: bool) -> None:
         if self.make is None:

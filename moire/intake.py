@@ -100,10 +100,13 @@ def take_in(
         for path in paths:
             name, under = path_text(path), terms(path)
             try:
-                stamp = Stamp.of(path)
+                stamp, reason = Stamp.of(path), ""
+                if os.path.isdir(path):
+                    reason = "is a folder that cannot be listed: check its permissions"
             except OSError as error:
                 stamp = Stamp(size=-1, modified_ns=0)
                 reason = f"cannot be opened ({error.strerror}): check its permissions"
+            if reason:
                 unread.append(failed(name, reason, under))
                 pending[name] = (stamp, under)
                 continue

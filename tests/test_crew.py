@@ -1,19 +1,25 @@
 """Many files through any executor: whatever one file does, the others come through."""
 
+import os
 from collections import Counter
 from concurrent.futures import BrokenExecutor, Executor, Future, ThreadPoolExecutor
 from functools import partial
 from pathlib import Path
 from typing import Any
 
+import cv2
 import msgspec
+import numpy as np
 import pytest
+import tifffile
 from leaves import sabotaged, tiny_folder
 
 import moire
 from moire.crew import processes
 from moire.errors import EngineLost
 from moire.outcome import Terms
+
+DEMOS = Path(__file__).resolve().parents[1] / "demo_images"
 
 
 def test_any_executor_gives_the_same_outcomes(tmp_path: Path) -> None:
@@ -94,6 +100,37 @@ class _Broken(Executor):
 def test_an_executor_that_cannot_be_replaced_is_told_of(tmp_path: Path) -> None:
     with pytest.raises(EngineLost, match="run again"):
         list(moire.examine_many(tiny_folder(tmp_path, 2), executor=_Broken()))
+
+
+def _unable() -> None:
+    raise RuntimeError("no licence for this processor")
+
+
+def test_where_nothing_can_start_no_file_is_blamed(tmp_path: Path) -> None:
+    outcomes = moire.examine_many(
+        tiny_folder(tmp_path, 3), executor=lambda: ThreadPoolExecutor(1, initializer=_unable)
+    )
+    with pytest.raises(EngineLost, match="cannot be started"):
+        list(outcomes)
+
+
+def test_a_process_has_one_thread_inside() -> None:
+    with processes(1) as pool:
+        assert pool.submit(cv2.getNumThreads).result() == 1
+        assert pool.submit(os.getenv, "OMP_NUM_THREADS").result() == "1"
+
+
+def test_the_worst_page_of_a_file_is_told(tmp_path: Path) -> None:
+    plain, screened = (moire.read(DEMOS / f"courier-leaf{part}.png") for part in (".unscreened", ""))
+    path = tmp_path / "volume.tif"
+    tifffile.imwrite(path, np.stack([plain.pixels, screened.pixels, plain.pixels]), resolution=(300, 300),
+                     resolutionunit=2, photometric="rgb")  # fmt: skip
+    with ThreadPoolExecutor(1) as threads:
+        (outcome,) = moire.examine_many([path], executor=threads, sheet=str(tmp_path / "sheet"))
+    assert (outcome.page, outcome.pages, outcome.verdict) == (2, 3, "mendable")
+    thumb = cv2.imread(str(next((tmp_path / "sheet").rglob("*.png"))))
+    # The piece is of that page: its screen is in it, as it is not in the others.
+    assert np.asarray(thumb).std() > 30
 
 
 def test_terms_are_asked_for_each_file(tmp_path: Path) -> None:

@@ -145,6 +145,24 @@ def test_what_cannot_be_opened_or_named_is_told_of(tmp_path: Path, name: Any) ->
     assert len(lines(log)) == 1
 
 
+def test_a_folder_that_cannot_be_listed_is_told_of(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    tiny_folder(tmp_path / "s", 1)
+    (tmp_path / "s" / "shut").mkdir()
+    whole = os.scandir
+
+    def scandir(path: Any) -> Any:
+        if str(path).endswith("shut"):
+            raise PermissionError(13, "Permission denied")
+        return whole(path)
+
+    monkeypatch.setattr(os, "scandir", scandir)
+    log = tmp_path / "t.jsonl"
+    assert run(tmp_path / "s", "--ledger", tmp_path / "l.sqlite", "--jsonl", log, "--jobs", 1, "--quiet") == 5
+    told = {d["file"]: d["error"] for d in lines(log)}
+    assert told["shut"] == "is a folder that cannot be listed: check its permissions"
+    assert len(told) == 2
+
+
 def test_exit_codes(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     scans, ledger = tmp_path / "scans", tmp_path / "l.sqlite"
     scans.mkdir()
