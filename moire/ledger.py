@@ -219,10 +219,10 @@ class Ledger:
         )
         return {(material, verdict): count for material, verdict, count in rows}
 
-    def failures(self, run: int) -> int:
-        """Number of files of a run that could not be examined."""
-        query = f"SELECT count(*) FROM {_JOINED} WHERE run = ? AND error <> ''"
-        return int(self._db.execute(query, (run,)).fetchone()[0])
+    def failures(self, run: int) -> Iterator[tuple[str, str]]:
+        """Path and reason of each file of a run that could not be examined, by path."""
+        query = f"SELECT path, error FROM {_JOINED} WHERE run = ? AND error <> '' ORDER BY path"
+        yield from self._db.execute(query, (run,))
 
     def _read(self, where: str, values: tuple[int, ...]) -> Iterator[Outcome]:
         for path, outcome in self._db.execute(f"SELECT path, outcome FROM {_JOINED} {where}", values):

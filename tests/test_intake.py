@@ -180,7 +180,7 @@ def test_exit_codes(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     capsys.readouterr()
     assert run(scans, "--ledger", ledger, "--json") == 0
     document = json.loads(capsys.readouterr().out)
-    assert (document["format"], document["files"]) == ("moire.intake", 1)
+    assert (document["format"], document["files"]) == ("moire.batch", 1)
     assert document["verdicts"]["rescan"] == 1
 
 

@@ -58,7 +58,7 @@ def command(folder: str, **flags: Any) -> int:
     from moire.cli.console import console, print_json
     from moire.cli.main import EXIT_PARTIAL, EXIT_VERDICT
     from moire.cli.shift import Shift
-    from moire.cli.tally import Progress, show_batch, show_notes, summary
+    from moire.cli.tally import SHOWN, Progress, show_batch
     from moire.ledger import Ledger
     from moire.profile import Profile, read_profile
 
@@ -78,16 +78,15 @@ def command(folder: str, **flags: Any) -> int:
                         f"Stopped. What is done is kept in {flags['ledger']}: the same command goes on."
                     )
                     return 130
-        insight = shift.export()
-        show_batch(out, ledger, shift.run)
-        show_notes(out, insight.notes())
+        batch = shift.export()
+        show_batch(out, batch, ledger.worst(shift.run, SHOWN))
         if flags["report"]:
             out.print(f"Contact sheet: {os.path.join(flags['report'], 'index.html')}")
         if flags["as_json"]:
-            print_json(summary(ledger, shift.run, os.path.abspath(folder), insight))
+            print_json(batch)
         if shift.stopped():
             return EXIT_VERDICT
-        return EXIT_PARTIAL if ledger.failures(shift.run) else 0
+        return EXIT_PARTIAL if batch.failed else 0
 
 
 def _check(folder: str, flags: dict[str, Any]) -> None:

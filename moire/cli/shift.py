@@ -6,34 +6,17 @@ import datetime
 import os
 from collections.abc import Iterable, Iterator
 from contextlib import contextmanager
-from dataclasses import dataclass
 from functools import partial
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from rich.console import Console
 
+    from moire.batch import Batch
     from moire.cli.tally import Progress
     from moire.ledger import Ledger
     from moire.outcome import Outcome, Terms
     from moire.profile import Profile
-    from moire.trend import Trend
-    from moire.volume import Volume
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Insight:
-    """What many scans show together and one does not."""
-
-    volumes: tuple[Volume, ...]
-    trends: tuple[Trend, ...]
-
-    def notes(self) -> list[str]:
-        """One sentence for each, trends first."""
-        from moire.trend import trend_note
-        from moire.volume import volume_note
-
-        return [*map(trend_note, self.trends), *map(volume_note, self.volumes)]
 
 
 class Shift:
@@ -71,40 +54,50 @@ class Shift:
                 if self.stopped():
                     return
 
-    def insight(self) -> Insight:
-        """What the batch shows as a whole."""
+    def batch(self) -> Batch:
+        """What became of the folder by now."""
+        import moire
+        from moire.batch import Batch, Failure
+        from moire.outcome import SEVERITY, path_text
         from moire.trend import find_trends
         from moire.volume import find_volumes
 
-        return Insight(
+        counts = dict.fromkeys(SEVERITY, 0)
+        for (_, verdict), number in self.ledger.tally(self.run).items():
+            counts[verdict] += number
+        return Batch(
+            software=f"moire {moire.__version__}",
+            folder=path_text(self.folder),
+            files=sum(counts.values()),
+            verdicts=counts,
+            failed=tuple(Failure(path=p, error=e) for p, e in self.ledger.failures(self.run)),
             volumes=tuple(find_volumes(self.ledger.outcomes(self.run))),
             trends=find_trends(self.ledger.with_banding()),
         )
 
-    def export(self) -> Insight:
+    def export(self) -> Batch:
         """Write what the flags ask for, each whole or not at all."""
         from moire.intake import write_csv, write_jsonl
 
-        insight = self.insight()
+        batch = self.batch()
 
         if self.flags["csv"]:
             write_csv(self.ledger.outcomes(self.run), self.flags["csv"])
         if self.flags["jsonl"]:
             write_jsonl(self.ledger.outcomes(self.run), self.flags["jsonl"])
         if self.sheet:
-            from moire.outcome import path_text
             from moire.sheet import render_sheet, write_recipes, write_sheet
 
-            notes = [*insight.notes(), *write_recipes(insight.volumes, self.sheet)]
+            notes = [*batch.notes(), *write_recipes(batch.volumes, self.sheet)]
             page = render_sheet(
                 self.ledger.outcomes(self.run),
-                folder=path_text(self.folder),
+                folder=batch.folder,
                 sheet=self.sheet,
                 notes=notes,
                 made_at=now(),
             )
             write_sheet(page, self.sheet)
-        return insight
+        return batch
 
     def stopped(self) -> bool:
         """Whether a verdict occurred that the command line or the profile names."""

@@ -4,17 +4,18 @@ from __future__ import annotations
 
 import sys
 from collections import Counter
-from typing import TYPE_CHECKING, Any
+from collections.abc import Sequence
+from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
     from rich.console import Console
+    from rich.table import Table
 
-    from moire.cli.shift import Insight
-    from moire.ledger import Ledger
+    from moire.batch import Batch
     from moire.outcome import Outcome
 
 _ORDER = ("unreadable", "rescan", "refer", "mendable", "sound")
-_SHOWN = 20
+SHOWN = 20
 _NOTES = 8
 
 
@@ -75,19 +76,31 @@ class Progress:
             )
 
 
-def show_batch(out: Console, ledger: Ledger, run: int) -> None:
-    """Counts, and the worst files first."""
+def show_batch(out: Console, batch: Batch, worst: Sequence[Outcome]) -> None:
+    """Counts, the worst files first, and what the batch shows as a whole."""
+    from rich.markup import escape
+
+    said = ", ".join(f"{number} {verdict}" for verdict, number in batch.verdicts.items() if number)
+    files = f"{batch.files} file{'' if batch.files == 1 else 's'}"
+    out.print(f"[bold]{files}[/bold]: {said or 'nothing to examine'}.")
+    shown = [o for o in worst if o.verdict != "sound"]
+    if shown:
+        out.print(_worst_table(shown))
+    rest = batch.files - batch.verdicts["sound"] - len(shown)
+    if rest > 0:
+        out.print(f"and {rest} more: see --csv, --jsonl or --report.")
+    notes = batch.notes()
+    for note in notes[:_NOTES]:
+        out.print(escape(note))
+    if len(notes) > _NOTES:
+        out.print(f"and {len(notes) - _NOTES} more such notes: see --json or --report.")
+
+
+def _worst_table(worst: Sequence[Outcome]) -> Table:
     from rich import box
     from rich.markup import escape
     from rich.table import Table
 
-    counts = _counts(ledger, run)
-    total = sum(counts.values())
-    said = ", ".join(f"{n} {v}" for v, n in counts.items() if n)
-    out.print(f"[bold]{total} file{'' if total == 1 else 's'}[/bold]: {said or 'nothing to examine'}.")
-    worst = [o for o in ledger.worst(run, _SHOWN) if o.verdict != "sound"]
-    if not worst:
-        return
     table = Table(box=box.SIMPLE_HEAD, pad_edge=False, padding=(0, 1))
     table.add_column("verdict")
     table.add_column("file", overflow="ellipsis", no_wrap=True, max_width=30)
@@ -96,43 +109,7 @@ def show_batch(out: Console, ledger: Ledger, run: int) -> None:
     for outcome in worst:
         seen = f"{outcome.visibility:.1f}" if outcome.visibility else ""
         table.add_row(outcome.verdict, escape(outcome.file), seen, escape(_what(outcome)))
-    out.print(table)
-    rest = total - counts["sound"] - len(worst)
-    if rest > 0:
-        out.print(f"and {rest} more: see --csv, --jsonl or --report.")
-
-
-def show_notes(out: Console, notes: list[str]) -> None:
-    """What the batch shows as a whole, the first few sentences."""
-    from rich.markup import escape
-
-    for note in notes[:_NOTES]:
-        out.print(escape(note))
-    if len(notes) > _NOTES:
-        out.print(f"and {len(notes) - _NOTES} more such notes: see --json or --report.")
-
-
-def summary(ledger: Ledger, run: int, folder: str, insight: Insight) -> dict[str, Any]:
-    """The batch as one JSON document."""
-    failures = [{"path": o.path, "error": o.error} for o in ledger.outcomes(run) if o.error]
-    counts = _counts(ledger, run)
-    return {
-        "format": "moire.intake",
-        "version": 1,
-        "folder": folder,
-        "files": sum(counts.values()),
-        "verdicts": counts,
-        "failed": failures,
-        "volumes": insight.volumes,
-        "trends": insight.trends,
-    }
-
-
-def _counts(ledger: Ledger, run: int) -> dict[str, int]:
-    counts = dict.fromkeys(_ORDER, 0)
-    for (_, verdict), number in ledger.tally(run).items():
-        counts[verdict] += number
-    return counts
+    return table
 
 
 def _what(outcome: Outcome) -> str:
