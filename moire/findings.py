@@ -35,7 +35,9 @@ def group_lines(survey: Survey, second: Survey | None = None) -> list[Group]:
     """Findings without visibility, screens first, then what remains."""
     inks = name_inks(survey.lattices, survey.chroma)
     folds = judge_folds(survey, inks, second)
-    groups = [_screen_group(survey, *each) for each in zip(survey.lattices, inks, folds, strict=True)]
+    groups = [
+        _screen_group(survey, *each) for each in zip(survey.lattices, survey.drifts, inks, folds, strict=True)
+    ]
     taken = {id(p) for g in survey.lattices for p in (g.first, g.second)}
     rest = []
     for peak in survey.peaks:
@@ -95,13 +97,18 @@ def _cloth_group(survey: Survey, threads: Threads) -> Group:
     return Group(finding=finding, lines=named)
 
 
-def _screen_group(survey: Survey, lattice: Lattice, ink: Ink, fold: Fold | None) -> Group:
+def _screen_group(survey: Survey, lattice: Lattice, drift: float, ink: Ink, fold: Fold | None) -> Group:
     coverage, regions = _extent(lattice.first.weight, lattice.second.weight, survey.size, survey.scan)
     ppi = survey.scan.ppi
     evidence = [
         f"two lines at right angles within {lattice.squareness_bins / survey.size:.5f} cycles per pixel, "
         f"in step over the page (coherence {lattice.first.coherence:.2f}, {lattice.second.coherence:.2f})"
     ]
+    if drift:
+        evidence = [
+            f"two lines at right angles followed from tile to tile; their frequency drifts by {drift:.1%} "
+            "over the page: a bent leaf, or a photograph taken by hand"
+        ]
     if survey.chroma:
         evidence.append(f"colour read where JPEG's halved chroma folds it: {ink}")
     elif len(lattice.first.colour) == 3:
@@ -125,6 +132,7 @@ def _screen_group(survey: Survey, lattice: Lattice, ink: Ink, fold: Fold | None)
         screen=None if fold is None else fold.screen,
         candidates=() if fold is None else fold.candidates,
         settled=fold is not None and fold.settled,
+        drift=round(drift, 4),
         evidence=tuple(evidence),
     )
     first = replace(lattice.first, f=lattice.k1)

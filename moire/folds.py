@@ -9,7 +9,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from moire.folding import Unfolded, agree, unfold
+from moire.folding import Unfolded, agree, temper, unfold
 from moire.lattice import Lattice
 from moire.model import Candidate, Ink, Kind, Screen
 from moire.patches import cut_patches, patch_phasors, strong_tiles
@@ -73,9 +73,10 @@ def judge_folds(survey: Survey, inks: Sequence[Ink], second: Survey | None = Non
 def _weigh(survey: Survey, ppi: tuple[float, float], inks: Sequence[Ink]) -> tuple[tuple[Unfolded, ...], ...]:
     alone = len(survey.lattices) == 1
     contrasts = [_contrast(survey, g, ink) for g, ink in zip(survey.lattices, inks, strict=True)]
-    return agree(
+    print_of = agree(
         [unfold(g.k1, ppi, contrast=c, alone=alone) for g, c in zip(survey.lattices, contrasts, strict=True)]
     )
+    return tuple(temper(options) for options in print_of)
 
 
 def _judge(

@@ -11,6 +11,8 @@ from numpy.typing import NDArray
 from moire.banding import Band, find_bands
 from moire.blocks import BlockGrid, find_block_grid
 from moire.chroma import ChromaReading, read_chroma
+from moire.drift import SIZE as DRIFT_TILE
+from moire.drift import DriftingLine, find_drifting_lines
 from moire.lattice import Lattice, wrap
 from moire.model import Scan
 from moire.pairing import find_lattices, half_orders, missing_partners
@@ -18,7 +20,7 @@ from moire.patches import Codes
 from moire.peaks import Peak, find_candidates, measure_bins
 from moire.refinement import polish, refine, with_colours
 from moire.samples import code_planes, mixed_plane, rate_aspect
-from moire.screens import is_halftone
+from moire.screens import is_halftone, on_axis
 from moire.spectrum import Spectrum, tile_spectrum
 
 _TILES_AT_MOST = 1200
@@ -26,6 +28,10 @@ _CALLED_Z = 3.0
 # Excess that is worth one robust standard deviation, for a profile's line beside a tile's.
 _NAT_OF_Z = 0.35
 _BANDS_AT_MOST = 3
+# A local map is good to about a tenth of a bin, and a bent page shears its squares.
+_FOLLOWED_COHERENCE, _DRIFT_SLACK = 0.92, 2.5
+_STEADY, _LEAST_DRIFT = 0.97, 0.008
+_BESIDE_AXIS_DEG, _COARSEST_CPP = 3.0, 0.08
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -43,6 +49,8 @@ class Survey:
         Lines that keep their phase.
     lattices : tuple of Lattice
         Those of printed screens.
+    drifts : tuple of float
+        Share by which each lattice's frequency changes over the page; 0 where one holds it all.
     chroma : tuple of (ChromaReading, ChromaReading)
         Of each lattice's two lines, where a block codec halved the chroma; else empty.
     blocks : BlockGrid or None
@@ -53,6 +61,7 @@ class Survey:
     size: int
     peaks: tuple[Peak, ...]
     lattices: tuple[Lattice, ...]
+    drifts: tuple[float, ...]
     chroma: tuple[tuple[ChromaReading, ChromaReading], ...]
     blocks: BlockGrid | None
 
@@ -84,13 +93,67 @@ def take_survey(scan: Scan, size: int) -> Survey:
     # Print or cloth is asked once, of the strongest: weak inks of a print cannot dominate it.
     if lattices and not is_halftone(lattices[0], lattices, seen, size):
         lattices = ()
+    drifts = (0.0,) * len(lattices)
+    if size == DRIFT_TILE and not _is_steady(lattices):
+        moving, moved = _follow_screens(mixed, codes, size, aspect, jpeg=jpeg)
+        if moving:
+            lattices, drifts = moving, moved
     chroma = _read_inks(lattices, codes, size) if halved else ()
     hop = size // 2
     grid = (mixed.shape[0] // hop - 1, mixed.shape[1] // hop - 1)
     peaks += _band_peaks(find_bands(mixed), peaks, blocks, size=size, grid=grid)
     return Survey(
-        scan=scan, codes=codes, size=size, peaks=peaks, lattices=lattices, chroma=chroma, blocks=blocks
+        scan=scan, codes=codes, size=size, peaks=peaks, lattices=lattices, drifts=drifts, chroma=chroma,
+        blocks=blocks,
     )  # fmt: skip
+
+
+def _is_steady(lattices: tuple[Lattice, ...]) -> bool:
+    """Whether one frequency for the whole page holds the strongest screen in step."""
+    return bool(lattices) and min(lattices[0].first.coherence, lattices[0].second.coherence) > _STEADY
+
+
+def _follow_screens(
+    mixed: NDArray[np.float32], codes: Codes, size: int, aspect: tuple[float, float], *, jpeg: bool
+) -> tuple[tuple[Lattice, ...], tuple[float, ...]]:
+    """Screens among lines followed from tile to tile, and how far each drifts."""
+    lines = find_drifting_lines(mixed)
+    peaks = tuple(_followed(line, size) for line in lines)
+    peaks = (
+        _with_chroma(peaks, codes, size)
+        if jpeg and codes.shape[2] == 3
+        else with_colours(codes, peaks, size=size)
+    )
+    lattices = find_lattices(peaks, size=size, aspect=aspect, jpeg=jpeg, slack=_DRIFT_SLACK)
+    if not lattices or not is_halftone(lattices[0], lattices, peaks, size):
+        return (), ()
+    # Tables, staves and threads lie along the axes and drift as well: there the map proves nothing.
+    strongest = lattices[0].k1
+    if on_axis(strongest, within_deg=_BESIDE_AXIS_DEG) or np.hypot(*strongest) < _COARSEST_CPP:
+        return (), ()
+    # A smaller drift leaves a print steady enough to be found in step.
+    drift_of = {id(p): line.drift for p, line in zip(peaks, lines, strict=True)}
+    drifts = tuple(max(drift_of[id(g.first)], drift_of[id(g.second)]) for g in lattices)
+    return (lattices, drifts) if max(drifts) > _LEAST_DRIFT else ((), ())
+
+
+def _followed(line: DriftingLine, size: int) -> Peak:
+    """A drifting line as a peak at its middle frequency."""
+    return Peak(
+        f=line.f,
+        sigma=line.sigma,
+        z=line.excess_nat / _NAT_OF_Z,
+        excess_nat=line.excess_nat,
+        amplitude=line.amplitude,
+        coherence=_FOLLOWED_COHERENCE,
+        local_coherence=_FOLLOWED_COHERENCE,
+        doubled=False,
+        tiles=float(line.weight.sum()),
+        bin_cpp=1 / size,
+        off_bin=0.0,
+        colour=np.ones(1),
+        weight=line.weight,
+    )
 
 
 def _band_peaks(

@@ -146,7 +146,8 @@ def _of_folder(folder: str, by_rate: dict[tuple[float, float], list[Outcome]]) -
 def _screens_of(leaf: int, outcome: Outcome) -> Iterator[_Seen]:
     for finding in outcome.findings:
         s = finding.screen
-        if s is not None and finding.settled and finding.kind == "halftone":
+        # A screen that drifts over its page has no one ruling to share.
+        if s is not None and finding.settled and finding.kind == "halftone" and not finding.drift:
             yield _Seen(
                 leaf=leaf, ink=s.ink, shape=s.shape, ruling=s.ruling_lpi, angle=s.angle_deg,
                 ruling_sigma=max(s.ruling_lpi_sigma, 1e-4), angle_sigma=max(s.angle_deg_sigma, 1e-4),
