@@ -1,7 +1,8 @@
 """Find, explain and mend periodic artifacts in scans.
 
 ``read(path) -> Scan``, ``examine(scan) -> Examination``,
-``mend(scan, examination) -> Mending``, ``write(scan, path)``.
+``mend(scan, examination) -> Mending``, ``write(scan, path)``,
+``examine_many(paths, executor=...)`` -> iterator of outcomes.
 """
 
 from __future__ import annotations
@@ -12,14 +13,21 @@ from types import ModuleType
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from moire.crew import examine_many
     from moire.examine import examine
     from moire.mend import mend
     from moire.scanfile import read, write
 
 __version__ = "0.1.0"
-__all__ = ["__version__", "examine", "mend", "read", "write"]
+__all__ = ["__version__", "examine", "examine_many", "mend", "read", "write"]
 
-_ROOMS = {"examine": "examine", "mend": "mend", "read": "scanfile", "write": "scanfile"}
+_ROOMS = {
+    "examine": "examine",
+    "examine_many": "crew",
+    "mend": "mend",
+    "read": "scanfile",
+    "write": "scanfile",
+}
 
 
 class _Package(ModuleType):

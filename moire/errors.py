@@ -6,7 +6,8 @@
     |-- ScanUnreadable (OSError)        a file cannot be read as a scan
     |-- OutputRefused (OSError)         an output cannot or must not be written
     |-- BadRequest (ValueError)         an argument has no meaning here
-    `-- RecipeMismatch (ValueError)     a saved recipe does not fit this scan
+    |-- RecipeMismatch (ValueError)     a saved recipe does not fit this scan
+    `-- EngineLost (RuntimeError)       what ran a batch stopped taking work
 
 The message says what, what was found, what was wanted and what to do next.
 Only the command line turns an error into an exit code.
@@ -59,3 +60,7 @@ class BadRequest(MoireError, ValueError):
 
 class RecipeMismatch(MoireError, ValueError):
     """A saved recipe does not fit this scan."""
+
+
+class EngineLost(MoireError, RuntimeError):
+    """What ran a batch stopped taking work and cannot be replaced; what was done is kept."""

@@ -80,8 +80,8 @@ def render_report(
         "rate_in_file": _rate(before.ppi_in_file),
         "rate_after": "" if mending is None else _rate(mending.scan.ppi),
         "advice": _advice(before, mending),
-        "css": _template_text("report.css"),
-        "script": _template_text("report.js"),
+        "css": template_text("report.css"),
+        "script": template_text("report.js"),
     }
     return environment.get_template("report.html").render(view)
 
@@ -150,7 +150,8 @@ def _advice(before: Examination, mending: Mending | None) -> tuple[str, ...]:
     return tuple(dict.fromkeys((*lines, *mending.after.advice)))
 
 
-def _template_text(name: str) -> str:
+def template_text(name: str) -> str:
+    """A style or script that goes into a page as it stands."""
     return (Path(__file__).parent / "templates" / name).read_text(encoding="utf-8")
 
 

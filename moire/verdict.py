@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 
 from moire.model import Finding, Kind, Verdict
 
@@ -15,8 +16,17 @@ USUAL_PPI = (300, 400, 600, 800, 1200, 2400)
 PICTURE_BAND_CPP = 0.25
 
 
-def judge(findings: tuple[Finding, ...]) -> tuple[Verdict, float, tuple[str, ...]]:
-    """Verdict, largest visibility among artifacts, and advice in words."""
+def judge(
+    findings: tuple[Finding, ...], *, rates: Sequence[float] = USUAL_PPI
+) -> tuple[Verdict, float, tuple[str, ...]]:
+    """Verdict, largest visibility among artifacts, and advice in words.
+
+    Parameters
+    ----------
+    findings : tuple of Finding
+    rates : sequence of float
+        Rates that the scanner has, ascending; advice names the coarsest that serves.
+    """
     artifacts = [f for f in findings if f.kind in ARTIFACTS]
     seen = [f for f in artifacts if f.visibility >= 1]
     visibility = max((f.visibility for f in artifacts), default=0.0)
@@ -24,7 +34,7 @@ def judge(findings: tuple[Finding, ...]) -> tuple[Verdict, float, tuple[str, ...
         return "sound", visibility, ("No artifact is visible at this viewing condition. Keep the scan.",)
     folded = [f for f in seen if f.kind == "alias" and _in_picture_band(f)]
     if folded:
-        return "rescan", visibility, (*_rescan_advice(folded), _KEEPER)
+        return "rescan", visibility, (*_rescan_advice(folded, rates), _KEEPER)
     if any(f.drift for f in seen):
         drift = max(f.drift for f in seen)
         words = f"A screen's frequency drifts by {drift:.1%} over the page, which no filter here follows: "
@@ -36,7 +46,7 @@ def judge(findings: tuple[Finding, ...]) -> tuple[Verdict, float, tuple[str, ...
     if "alias" in kinds:
         advice.append(
             "A screen is folded, but above picture detail: mend a derivative, or settle the cause with a "
-            f"second scan at {_better_ppi(seen)} ppi."
+            f"second scan at {_better_ppi(seen, rates)} ppi."
         )
     if kinds & {"banding", "block-grid"}:
         advice.append("Scanner or codec lines can be removed from a derivative with `moire mend`.")
@@ -58,22 +68,23 @@ def _in_picture_band(finding: Finding) -> bool:
     )
 
 
-def _rescan_advice(folded: list[Finding]) -> list[str]:
+def _rescan_advice(folded: list[Finding], rates: Sequence[float]) -> list[str]:
     out = []
     for finding in folded:
         if not finding.candidates:
-            out.append(f"Rescan at {_better_ppi([finding])} ppi or turn the sheet by 7 degrees.")
+            out.append(f"Rescan at {_better_ppi([finding], rates)} ppi or turn the sheet by 7 degrees.")
             continue
         best = finding.candidates[0]
         out.append(
             f"A screen of about {best.ruling_lpi:.0f} lpi at {best.angle_deg:.0f} degrees is folded into the "
-            f"picture: no filter can tell it from detail. Rescan at {_better_ppi([finding])} ppi or more."
+            f"picture: no filter can tell it from detail. Rescan at {_better_ppi([finding], rates)} ppi "
+            "or more."
         )
     return out
 
 
-def _better_ppi(findings: list[Finding]) -> int:
+def _better_ppi(findings: list[Finding], rates: Sequence[float]) -> str:
     rulings = [c.ruling_lpi for f in findings for c in f.candidates[:1]]
     # 2.83 f keeps the (1,1) order below half the rate at every angle; 10 % for scale and lens.
     wanted = 1.1 * 2.83 * max(rulings, default=200.0)
-    return next((rate for rate in USUAL_PPI if rate >= wanted), USUAL_PPI[-1])
+    return f"{next((rate for rate in rates if rate >= wanted), rates[-1]):g}"

@@ -157,7 +157,7 @@ def test_proof_is_repeatable(tmp_path: Path) -> None:
 
 
 def test_help_has_an_example_for_every_command(capsys: pytest.CaptureFixture[str]) -> None:
-    for command in ("examine", "mend", "proof"):
+    for command in ("examine", "mend", "intake", "proof"):
         assert run(command, "--help") == 0
         assert f"moire {command} " in capsys.readouterr().out
 

@@ -10,13 +10,16 @@ import msgspec
 import pytest
 from prints import FOUR_INKS, card_print, scanned
 
+from moire.batch import Batch, Failure
 from moire.examine import examine
 from moire.model import Examination, Recipe
+from moire.outcome import Outcome, Terms, failed, succeeded
 from moire.proof import Truth
 from moire.recipe import prescribe
+from moire.volume import find_volumes
 
 DOCS = Path(__file__).resolve().parents[1] / "docs"
-SCHEMAS = {"examination": Examination, "recipe": Recipe, "truth": Truth}
+SCHEMAS = {"batch": Batch, "examination": Examination, "outcome": Outcome, "recipe": Recipe, "truth": Truth}
 
 
 @pytest.mark.parametrize("name", sorted(SCHEMAS))
@@ -38,6 +41,26 @@ def test_examinations_and_recipes_fit(ppi: int) -> None:
     found = examine(scanned(card_print(*FOUR_INKS), ppi)[0])
     for name, record in (("examination", found), ("recipe", prescribe(found))):
         jsonschema.validate(document(record), json.loads((DOCS / f"{name}.schema.json").read_text()))
+
+
+def test_outcomes_fit() -> None:
+    schema = json.loads((DOCS / "outcome.schema.json").read_text())
+    found = examine(scanned(card_print(FOUR_INKS[0]), 300)[0])
+    for outcome in (succeeded(found, "/a/b.png", seconds=1.5), failed("/a/c.png", "is empty", Terms())):
+        jsonschema.validate(document(outcome), schema)
+
+
+def test_batches_fit() -> None:
+    schema = json.loads((DOCS / "batch.schema.json").read_text())
+    found = examine(scanned(card_print(FOUR_INKS[0]), 400)[0])
+    leaves = [succeeded(found, f"/a/{i}.png") for i in range(3)]
+    batch = Batch(
+        software="moire", folder="/a", files=4, failed=(Failure(path="/a/4.png", error="is empty"),),
+        verdicts={"unreadable": 1, "rescan": 0, "refer": 0, "mendable": 3, "sound": 0},
+        volumes=tuple(find_volumes(leaves)), trends=(),
+    )  # fmt: skip
+    assert batch.volumes
+    jsonschema.validate(document(batch), schema)
 
 
 def test_demo_truths_fit() -> None:

@@ -9,12 +9,13 @@ from typing import Any
 import click
 
 import moire
-from moire.errors import BadRequest, MoireError, OutputRefused, RecipeMismatch, ScanUnreadable
+from moire.errors import BadRequest, EngineLost, MoireError, OutputRefused, RecipeMismatch, ScanUnreadable
 
 EXIT_USAGE, EXIT_UNREADABLE, EXIT_OUTPUT, EXIT_PARTIAL, EXIT_VERDICT = 2, 3, 4, 5, 10
 _COMMANDS = {
     "examine": "find and explain every periodic pattern in one scan",
     "mend": "remove what is artifact, keep what is picture",
+    "intake": "triage a folder of scans, resumable",
     "proof": "make a test scan with known truth",
 }
 
@@ -74,4 +75,6 @@ def _exit_code(error: MoireError) -> int:
         return EXIT_OUTPUT
     if isinstance(error, BadRequest | RecipeMismatch):
         return EXIT_USAGE
+    if isinstance(error, EngineLost):
+        return EXIT_PARTIAL
     return EXIT_UNREADABLE if isinstance(error, ScanUnreadable) else 1

@@ -35,6 +35,15 @@ if TYPE_CHECKING:
 @click.option("--to-ppi", type=float, help="Also reduce the derivative to this sampling rate, without alias.")
 @click.option("--recipe", type=click.Path(dir_okay=False), metavar="FILE.json", help="Repeat a saved recipe.")
 @click.option("--save-recipe", type=click.Path(dir_okay=False), metavar="FILE.json", help="Save the recipe.")
+@click.option(
+    "--premis", type=click.Path(dir_okay=False), metavar="FILE.xml", help="Write a PREMIS 3 record of OUT."
+)
+@click.option(
+    "--manifest",
+    type=click.Path(dir_okay=False),
+    metavar="FILE.txt",
+    help="Add OUT to a bag's manifest (RFC 8493).",
+)
 @shared("ppi", "viewing", "page", "report", "force", "json", "quiet")
 def command(scan: str, **flags: Any) -> int:
     """Remove what is artifact from a copy of SCAN; the master is never touched.
@@ -49,8 +58,9 @@ def command(scan: str, **flags: Any) -> int:
     their beats, banding and display grids are removed; cloth and content stay.
     """
     from moire.cli.console import console, print_json, show_examination, show_mending
-    from moire.cli.reporting import check_report_path, save_report
+    from moire.cli.reporting import check_report_path, save_premis, save_report
     from moire.examine import examine
+    from moire.manifest import add_to_manifest, check_manifest
     from moire.mend import mend
     from moire.recipe import from_json, to_json
     from moire.scanfile import check_target, digest, read, write, write_bytes
@@ -64,6 +74,12 @@ def command(scan: str, **flags: Any) -> int:
     check_target(target, force=force, inputs=inputs)
     if flags["report"]:
         check_report_path(flags["report"], inputs=inputs, force=force)
+    if flags["premis"]:
+        check_target(flags["premis"], force=force, inputs=[*inputs, target])
+        if Path(flags["premis"]).absolute() == Path(target).absolute():
+            raise click.UsageError("--premis and --output name one file: give the record another name")
+    if flags["manifest"]:
+        check_manifest(flags["manifest"], target)
     saved = from_json(_read_bytes(flags["recipe"]), name=flags["recipe"]) if flags["recipe"] else None
     master = read(scan, ppi=flags["ppi"], page=flags["page"])
     before = examine(master, viewing=flags["viewing"])
@@ -85,6 +101,10 @@ def command(scan: str, **flags: Any) -> int:
     if flags["save_recipe"]:
         write_bytes(to_json(done.recipe), flags["save_recipe"], force=force, inputs=inputs)
     sha256 = digest(target)
+    if flags["premis"]:
+        save_premis(flags["premis"], done, master=scan, derivative=target, inputs=inputs, force=force)
+    if flags["manifest"]:
+        add_to_manifest(flags["manifest"], target)
     if flags["report"]:
         save_report(
             flags["report"],

@@ -1,4 +1,4 @@
-"""Reports as files, stamped with the time at which they were made."""
+"""Reports and preservation records as files, stamped with the time at which they were made."""
 
 from __future__ import annotations
 
@@ -39,6 +39,33 @@ def save_report(
         mending=mending,
         derivative_name=derivative[0],
         derivative_sha256=derivative[1],
-        made_at=datetime.datetime.now().astimezone().isoformat(timespec="seconds"),
+        made_at=_now(),
     )
     write_report(html, path, force=force)
+
+
+def save_premis(
+    path: str, mending: Mending, *, master: str, derivative: str, inputs: Sequence[str], force: bool
+) -> None:
+    """Write the PREMIS record of a derivative that is on disk.
+
+    Raises
+    ------
+    OutputRefused
+        If it may not be written, or the master is no longer the file that was mended.
+    """
+    from moire.preservation import StoredFile, premis
+    from moire.scanfile import digest, write_bytes
+
+    stored = [
+        StoredFile(name=os.path.basename(name), sha256=digest(name), size=os.path.getsize(name))
+        for name in (master, derivative)
+    ]
+    if stored[0].sha256 != mending.before.sha256:
+        raise OutputRefused(path, f"{master} changed while it was mended: mend it again")
+    record = premis(mending, master=stored[0], derivative=stored[1], at=_now())
+    write_bytes(record, path, force=force, inputs=[*inputs, derivative])
+
+
+def _now() -> str:
+    return datetime.datetime.now().astimezone().isoformat(timespec="seconds")
