@@ -1,7 +1,7 @@
 """Find, explain and mend periodic artifacts in scans.
 
 ``read(path) -> Scan``, ``examine(scan) -> Examination``,
-``mend(scan, examination) -> Mending``, ``write(scan, path)``.
+``mend(scan, examination) -> Mending``, ``plan(source, rates=...) -> Plan``, ``write(scan, path)``.
 """
 
 from __future__ import annotations
@@ -14,12 +14,13 @@ from typing import TYPE_CHECKING, Any
 if TYPE_CHECKING:
     from moire.examine import examine
     from moire.mend import mend
+    from moire.plan import plan
     from moire.scanfile import read, write
 
 __version__ = "0.1.0"
-__all__ = ["__version__", "examine", "mend", "read", "write"]
+__all__ = ["__version__", "examine", "mend", "plan", "read", "write"]
 
-_ROOMS = {"examine": "examine", "mend": "mend", "read": "scanfile", "write": "scanfile"}
+_ROOMS = {"examine": "examine", "mend": "mend", "plan": "plan", "read": "scanfile", "write": "scanfile"}
 
 
 class _Package(ModuleType):
