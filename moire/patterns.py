@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from moire.dots import Shape, dot_coefficients
 from moire.loom import Cloth, WeavePattern
 from moire.press import INKS, PAPER
-from moire.scanner import srgb_encode
+from moire.scanner import srgb_decode, srgb_encode
 
 Array = NDArray[np.float64]
 Spectra = NDArray[np.complex128]
@@ -154,24 +154,28 @@ def lines_of_lightness(light: Spectra, axes: tuple[int, ...]) -> tuple[Array, Ar
         Peak swing of the pair of lines at plus and minus each order.
     mean : ndarray, shape (...)
     """
-    field = np.fft.ifftn(light, axes=axes, norm="forward").real
+    from scipy import fft
+
+    field = fft.ifftn(light, axes=axes, norm="forward").real
     lightness = lightness_of_light(field)
-    swing = 2 * np.abs(np.fft.fftn(lightness, axes=axes, norm="forward"))
+    swing = 2 * np.abs(fft.fftn(lightness, axes=axes, norm="forward"))
     return np.asarray(swing), np.asarray(lightness.mean(axis=axes))
 
 
 def codes_of_light(light: Spectra, axes: tuple[int, ...]) -> Spectra:
     """Coefficients of sRGB code values 0..1 from coefficients of light."""
-    field = np.fft.ifftn(light, axes=axes, norm="forward").real
-    return np.asarray(np.fft.fftn(srgb_encode(field), axes=axes, norm="forward"))
+    from scipy import fft
+
+    field = fft.ifftn(light, axes=axes, norm="forward").real
+    return np.asarray(fft.fftn(srgb_encode(field), axes=axes, norm="forward"))
 
 
 def lines_of_codes(codes: Spectra, axes: tuple[int, ...]) -> tuple[Array, Array]:
     """As `lines_of_lightness`, from coefficients of sRGB code values."""
-    from moire.scanner import srgb_decode
+    from scipy import fft
 
-    field = np.clip(np.fft.ifftn(codes, axes=axes, norm="forward").real, 0, 1)
-    light = np.fft.fftn(srgb_decode(field), axes=axes, norm="forward")
+    field = np.clip(fft.ifftn(codes, axes=axes, norm="forward").real, 0, 1)
+    light = fft.fftn(srgb_decode(field), axes=axes, norm="forward")
     return lines_of_lightness(light, axes)
 
 

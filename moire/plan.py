@@ -10,17 +10,19 @@ import numpy as np
 from numpy.typing import NDArray
 
 import moire
-from moire.choices import SCALE_SIGMA, judge_lines, make_choices, name_beat, strongest
+from moire.choices import make_choices
 from moire.dots import Shape
 from moire.errors import BadRequest
+from moire.judging import SCALE_SIGMA, judge_lines, strongest
 from moire.kernels import Kernel
 from moire.model import Examination, Screen, Verdict, Viewing, Weave
+from moire.naming import name_beat
 from moire.originals import Original, measured_originals, printed_original, woven_original
 from moire.plans import Choice, Plan, Reading
 from moire.prediction import Capture, predict
 from moire.reasons import explain, settling_scan
 from moire.reprint import reprint_beats
-from moire.rules import weigh_rules
+from moire.rules import Curve, curve_rates, weigh_rules
 from moire.sampling import Optics
 from moire.vision import viewing_condition
 
@@ -29,8 +31,9 @@ KEEPER = (
     "Rescanning means handling and light: defer to the keeper of the original, "
     "and plan one scan rather than trials."
 )
+# Below this a beat stays unseen even where lens, ink or eye are a little better than assumed.
+_MARGIN = 0.5
 _SEVERITY: tuple[Verdict, ...] = ("sound", "mendable", "refer", "rescan", "unreadable")
-_SEARCH = (0.6, 6.0, 361)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -122,17 +125,17 @@ def plan(
         choices.append(replace(same[0], doubt=max((c.visibility for c in same[1:]), default=0.0)))
     order = sorted(range(len(choices)), key=lambda i: _rank(choices[i]))
     ranked = tuple(choices[i] for i in order)
-    direct = replace(captures[0], grid=None, derivative=False, turn_deg=ranked[0].turn_deg)
-    seen_at, free_from = _search(originals[0], direct, condition, scanning)
+    at_best = replace(captures[0], turn_deg=ranked[0].turn_deg)
+    curve = _curve(originals[0], at_best, condition, scanning)
     return Plan(
         software=f"moire {moire.__version__}",
         viewing=condition,
         patterns=originals[0].planned,
         choices=ranked,
         recommended=0,
-        why=explain(ranked, originals, free_from, derivative=scanning.master is not None),
-        rules=weigh_rules(originals[0], seen_at, free_from),
-        free_from_ppi=free_from,
+        why=explain(ranked, originals, curve.free_from, derivative=scanning.master is not None),
+        rules=weigh_rules(originals[0], curve),
+        free_from_ppi=curve.free_from,
         readings=tuple(
             _reading(o, [own[i] for i in order])
             for o, own in zip(originals[1:], per_reading[1:], strict=True)
@@ -221,44 +224,21 @@ def _choose(
 
 
 def _rank(choice: Choice) -> tuple[float, ...]:
-    """Beats first; among choices without a visible one the verdict, the least turn, the smallest file."""
+    """Beats first; without a visible one detail, margin, verdict, the least turn, the smallest file."""
     worst = max(choice.visibility, choice.doubt)
     severity = _SEVERITY.index(choice.verdict)
-    grade = 0 if worst < 0.5 else 1 if worst < 1 else 2
+    if worst >= 1:
+        return (1, severity, worst)
     size = choice.ppi[0] * choice.ppi[1]
-    if grade == 2:
-        return (grade, not choice.keeps_detail, severity, worst, abs(choice.turn_deg), size)
-    return (grade, not choice.keeps_detail, severity, abs(choice.turn_deg), size, worst)
+    return (0, not choice.keeps_detail, worst >= _MARGIN, severity, abs(choice.turn_deg), size, worst)
 
 
-def _search(
-    original: Original, capture: Capture, condition: Viewing, scanning: Scanning
-) -> tuple[_SeenAt, float | None]:
-    seen_at = _SeenAt(original, capture, condition, scanning)
-    low, high, count = _SEARCH
-    rates = np.geomspace(low, high, count) * original.finest_lpi
-    seen = np.flatnonzero(seen_at(rates) >= 1)
-    if len(seen) == 0:
-        return seen_at, float(rates[0])
-    return seen_at, float(rates[seen[-1] + 1]) if seen[-1] + 1 < len(rates) else None
-
-
-@dataclass(frozen=True, slots=True)
-class _SeenAt:
-    """Visibility of the strongest beat at any rates of direct scanning."""
-
-    original: Original
-    capture: Capture
-    condition: Viewing
-    scanning: Scanning
-
-    def __call__(self, ppi: NDArray[np.float64]) -> NDArray[np.float64]:
-        capture = replace(self.capture, rates=np.stack([ppi, ppi], axis=1))
-        lines = predict(self.original.patterns, capture)
-        judged = judge_lines(
-            lines, self.original, capture, self.condition, scale_sigma=self.scanning.scale_sigma
-        )
-        return strongest(judged)[0]
+def _curve(original: Original, capture: Capture, condition: Viewing, scanning: Scanning) -> Curve:
+    ppi = curve_rates(original)
+    capture = replace(capture, rates=np.stack([ppi, ppi], axis=1), grid=None, derivative=False)
+    lines = predict(original.patterns, capture)
+    judged = judge_lines(lines, original, capture, condition, scale_sigma=scanning.scale_sigma)
+    return Curve(ppi=ppi, visibility=strongest(judged)[0])
 
 
 def _reading(original: Original, choices: list[Choice]) -> Reading:

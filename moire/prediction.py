@@ -27,7 +27,7 @@ from moire.sampling import Optics, capture_mtf, fold_all, turned
 
 Array = NDArray[np.float64]
 
-_KNOTS = 48
+_KNOTS = 32
 _ONE_REACH, _THREAD_REACH, _PAIR_REACH = 8, 3, 2
 _LEAST_SWING = 0.03
 _PAIR_TONES = slice(None, None, 4)

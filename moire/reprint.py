@@ -7,9 +7,10 @@ from functools import lru_cache
 import numpy as np
 from numpy.typing import NDArray
 
-from moire.choices import Judged, name_beat
 from moire.dots import dot_coefficients
+from moire.judging import Judged
 from moire.model import Viewing
+from moire.naming import name_beat
 from moire.originals import Original
 from moire.plans import Beat
 from moire.prediction import Capture

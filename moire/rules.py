@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,40 +12,65 @@ from moire.plans import Rule
 from moire.units import angle_distance
 
 # Common practice, no source.
-_WITHIN = np.array([0.98, 1.0, 1.02])
+_MARGIN = 0.02
+_TIMES_ON, _TIMES_OFF = (2.0, 3.0, 4.0), (2.25, 2.75, 3.25)
+_TIMES_A_THREAD = 2.2
+_LOWEST, _HIGHEST, _STEPS = 0.6, 8.0, 361
 _NEAR_AXIS_DEG = 1.0
 _LOCKED = 0.5
 
-Curve = Callable[[NDArray[np.float64]], NDArray[np.float64]]
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Curve:
+    """Visibility of the strongest beat at rates of direct scanning, both shape (n,), rising in ppi."""
+
+    ppi: NDArray[np.float64]
+    visibility: NDArray[np.float64]
+
+    @property
+    def free_from(self) -> float | None:
+        """The rate from which no beat is seen any more, None if there is none."""
+        seen = np.flatnonzero(self.visibility >= 1)
+        first = seen[-1] + 1 if len(seen) else 0
+        return float(self.ppi[first]) if first < len(self.ppi) else None
+
+    def near(self, ppi: float, margin: float) -> float:
+        """The worst within a share `margin` of a rate."""
+        inside = np.abs(self.ppi / ppi - 1) <= margin + 1e-9
+        return float(self.visibility[inside].max(initial=0.0))
 
 
-def weigh_rules(original: Original, seen_at: Curve, free_from: float | None) -> tuple[Rule, ...]:
+def curve_rates(original: Original) -> NDArray[np.float64]:
+    """Rates from which the rules can be weighed, from below the finest lattice to far above it."""
+    times = (*np.geomspace(_LOWEST, _HIGHEST, _STEPS), *_TIMES_ON, *_TIMES_OFF)
+    return np.unique(times) * original.finest_lpi
+
+
+def weigh_rules(original: Original, curve: Curve) -> tuple[Rule, ...]:
     """Which rules hold here.
 
     Parameters
     ----------
     original : Original
-    seen_at : callable
-        Visibility of the strongest beat at rates, array to array.
-    free_from : float or None
-        Rate from which no beat is seen any more.
+    curve : Curve
+        At the rates of `curve_rates`.
     """
     f = original.finest_lpi
     if original.is_cloth:
-        at = float(seen_at(2.2 * f * _WITHIN).max())
+        at = curve.near(_TIMES_A_THREAD * f, _MARGIN)
         return (
             Rule(
                 rule="a little over two samples a thread",
                 agrees=at < 1,
-                words=f"at {2.2 * f:.0f} ppi the strongest beat is {at:.1f} x the eye's threshold: harmonics "
-                "and bindings of the threads fold too",
+                words=f"at {_TIMES_A_THREAD * f:.0f} ppi the strongest beat is {at:.1f} x the eye's "
+                "threshold: harmonics and bindings of the threads fold too",
             ),
         )
-    return (_twice(f, seen_at), _multiples(original, f, seen_at), _several_times(f, free_from))
+    return (_twice(f, curve), _multiples(original, f, curve), _several_times(f, curve.free_from))
 
 
-def _twice(f: float, seen_at: Curve) -> Rule:
-    at = float(seen_at(2 * f * _WITHIN).max())
+def _twice(f: float, curve: Curve) -> Rule:
+    at = curve.near(2 * f, _MARGIN)
     return Rule(
         rule="twice the ruling",
         agrees=at < 1,
@@ -54,8 +79,8 @@ def _twice(f: float, seen_at: Curve) -> Rule:
     )
 
 
-def _multiples(original: Original, f: float, seen_at: Curve) -> Rule:
-    on, off = (float(seen_at(k * f).max()) for k in (np.array([2.0, 3.0, 4.0]), np.array([2.25, 2.75, 3.25])))
+def _multiples(original: Original, f: float, curve: Curve) -> Rule:
+    on, off = (max(curve.near(k * f, 0.0) for k in times) for times in (_TIMES_ON, _TIMES_OFF))
     level = all(angle_distance(p.angle_deg, 0, 90) <= _NEAR_AXIS_DEG for p in original.planned)
     same = len({round(p.frequencies_lpi[0], 3) for p in original.planned}) == 1
     agrees = level and same and on < _LOCKED * off
@@ -73,7 +98,7 @@ def _multiples(original: Original, f: float, seen_at: Curve) -> Rule:
 
 def _several_times(f: float, free_from: float | None) -> Rule:
     if free_from is None:
-        words = "no rate up to six times the ruling is free of visible beats at this viewing condition"
+        words = "no rate up to eight times the ruling is free of visible beats at this viewing condition"
     else:
         words = f"no beat is seen from {free_from:.0f} ppi up, {free_from / f:.1f} times the ruling"
     return Rule(

@@ -1,0 +1,82 @@
+"""Judging: what the eye makes of predicted lines at a viewing condition."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from moire.model import Viewing
+from moire.originals import Original
+from moire.patterns import Pattern
+from moire.prediction import Capture, Lines
+from moire.units import MM_PER_INCH
+from moire.vision import contrast_sensitivities, cycles_per_degree
+
+# Scanners keep their scale to about a thousandth (common practice, no source).
+SCALE_SIGMA = 0.001
+# Lines closer than this are one line.
+SAME_CPI = 0.02
+_EYE_PEAK_CPD = 3.05
+
+Array = NDArray[np.float64]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Judged:
+    """Predicted lines with what the eye makes of them, arrays of shape (rates, lines)."""
+
+    lines: Lines
+    sigma_cpi: Array
+    visibility: Array
+    by_sampling: NDArray[np.bool_]
+
+
+def judge_lines(
+    lines: Lines, original: Original, capture: Capture, viewing: Viewing, *, scale_sigma: float = SCALE_SIGMA
+) -> Judged:
+    """Visibility of each line at each rate, the worst within two sigma of its frequency."""
+    folded = lines.true_cpi[None] - lines.seen_cpi
+    own = np.array([_sigma(part, original.patterns) for part in lines.parts])
+    sigma = np.hypot(own[None], scale_sigma * np.hypot(folded[..., 0], folded[..., 1]))
+    if viewing.condition == "print":
+        size = np.hypot(lines.seen_cpi[..., 0], lines.seen_cpi[..., 1])
+        per_mm, spread = size / MM_PER_INCH, sigma / MM_PER_INCH
+    else:
+        shown = viewing.monitor_ppi / capture.rates[:, None, :]
+        seen = lines.seen_cpi * shown
+        per_mm = np.hypot(seen[..., 0], seen[..., 1]) / MM_PER_INCH
+        spread = sigma * shown.max(axis=-1) / MM_PER_INCH
+    degree = cycles_per_degree(1.0, viewing.distance_mm)
+    low, high = (per_mm - 2 * spread) * degree, (per_mm + 2 * spread) * degree
+    sensitivity = contrast_sensitivities(np.clip(_EYE_PEAK_CPD, low, high))
+    # A line and its own mirror image may fold together: at the worst phase they add.
+    twice = 2 * lines.seen_cpi
+    off = twice - np.rint(twice / capture.rates[:, None, :]) * capture.rates[:, None, :]
+    swing = lines.amplitude * np.where(np.hypot(off[..., 0], off[..., 1]) < SAME_CPI, 2, 1)
+    modulation = np.minimum(1, 3 * swing / (lines.mean + 16))
+    by_sampling = (lines.order != 0).any(axis=-1) | (lines.capture_order != 0).any(axis=-1)
+    by_sampling |= (lines.image != 0).any(axis=-1)[None]
+    return Judged(
+        lines=replace(lines, amplitude=swing),
+        sigma_cpi=sigma,
+        visibility=modulation * sensitivity,
+        by_sampling=by_sampling,
+    )
+
+
+def strongest(judged: Judged) -> tuple[Array, NDArray[np.intp]]:
+    """Visibility of the strongest beat with the sampling grid at each rate, and which line it is."""
+    beats = np.where(judged.by_sampling, judged.visibility, 0)
+    at = beats.argmax(axis=1)
+    return beats[np.arange(len(beats)), at], at
+
+
+def _sigma(parts: Sequence[tuple[int, int, int]], patterns: Sequence[Pattern]) -> float:
+    """Standard uncertainty of a line's frequency from its patterns', cycles per inch."""
+    return math.sqrt(
+        sum((math.hypot(m, n) / patterns[p].repeat * patterns[p].sigma_cpi) ** 2 for p, m, n in parts)
+    )
