@@ -49,6 +49,7 @@ class Dot:
 
     x: float
     y: float
+    text_y: float
     free: bool
     best: bool
     text: str
@@ -131,8 +132,10 @@ def _steps(low: float, high: float) -> NDArray[np.float64]:
 def _dot(choice: Choice, x: object, y: object, *, best: bool) -> Dot:
     assert callable(x)
     assert callable(y)
+    at = y(choice.visibility)
+    below = at < HEIGHT - _BOTTOM - 24
     return Dot(
-        x=x(choice.ppi[0]), y=y(choice.visibility), free=choice.visibility < 1, best=best,
+        x=x(choice.ppi[0]), y=at, text_y=at + 19 if below else at - 11, free=choice.visibility < 1, best=best,
         text=f"{choice.ppi[0]:g} ppi",
     )  # fmt: skip
 
@@ -154,13 +157,15 @@ def _names(seen: Sweep, points: Sequence[tuple[float, float]]) -> list[Name]:
         text = seen.words[p]
         if len(out) == _NAMES:
             break
-        if text in said:
+        # Orders that differ by sign or place are one beat seen from several sides.
+        kind = "".join(sorted(text.replace("-", "")))
+        if kind in said:
             continue
         wide = _LETTER * len(text)
         spot = _spot(points[p][0], wide, taken)
         if spot is None:
             continue
-        said.add(text)
+        said.add(kind)
         taken.append((spot[0], spot[1], wide, _LINE))
         out.append(Name(x=points[p][0], y=points[p][1], text_x=spot[0], text_y=spot[1], text=text))
     return out

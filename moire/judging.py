@@ -68,11 +68,21 @@ def judge_lines(
     )
 
 
-def strongest(judged: Judged) -> tuple[Array, NDArray[np.intp]]:
-    """Visibility of the strongest beat with the sampling grid at each rate, and which line it is."""
+def strongest(judged: Judged, rates: Array) -> tuple[Array, NDArray[np.intp]]:
+    """Visibility of the strongest beat with the sampling grid at each rate, and which line it is.
+
+    Lines that fall together with it are added, as they do at the worst phase.
+    """
     beats = np.where(judged.by_sampling, judged.visibility, 0)
     at = beats.argmax(axis=1)
-    return beats[np.arange(len(beats)), at], at
+    seen = judged.lines.seen_cpi
+    lead = seen[np.arange(len(seen)), at][:, None]
+    same = np.zeros(beats.shape, bool)
+    for sign in (1, -1):
+        apart = seen - sign * lead
+        apart -= np.rint(apart / rates[:, None]) * rates[:, None]
+        same |= np.hypot(apart[..., 0], apart[..., 1]) < SAME_CPI
+    return np.asarray((beats * same).sum(axis=1)), at
 
 
 def _sigma(parts: Sequence[tuple[int, int, int]], patterns: Sequence[Pattern]) -> float:

@@ -171,7 +171,7 @@ def sweep(
     judged = judge_lines(
         lines, original, capture, viewing_condition(viewing), scale_sigma=scanning.scale_sigma
     )
-    seen, at = strongest(judged)
+    seen, at = strongest(judged, capture.rates)
     words = tuple(name_beat(judged, original, capture, i, int(line)).words for i, line in enumerate(at))
     return Sweep(ppi=ppi, visibility=seen, words=words)
 
@@ -238,7 +238,7 @@ def _curve(original: Original, capture: Capture, condition: Viewing, scanning: S
     capture = replace(capture, rates=np.stack([ppi, ppi], axis=1), grid=None, derivative=False)
     lines = predict(original.patterns, capture)
     judged = judge_lines(lines, original, capture, condition, scale_sigma=scanning.scale_sigma)
-    return Curve(ppi=ppi, visibility=strongest(judged)[0])
+    return Curve(ppi=ppi, visibility=strongest(judged, capture.rates)[0])
 
 
 def _reading(original: Original, choices: list[Choice]) -> Reading:

@@ -12,11 +12,13 @@ from prints import FOUR_INKS, card_print, scanned
 
 from moire.examine import examine
 from moire.model import Examination, Recipe
+from moire.plan import plan
+from moire.plans import Plan
 from moire.proof import Truth
 from moire.recipe import prescribe
 
 DOCS = Path(__file__).resolve().parents[1] / "docs"
-SCHEMAS = {"examination": Examination, "recipe": Recipe, "truth": Truth}
+SCHEMAS = {"examination": Examination, "plan": Plan, "recipe": Recipe, "truth": Truth}
 
 
 @pytest.mark.parametrize("name", sorted(SCHEMAS))
@@ -38,6 +40,12 @@ def test_examinations_and_recipes_fit(ppi: int) -> None:
     found = examine(scanned(card_print(*FOUR_INKS), ppi)[0])
     for name, record in (("examination", found), ("recipe", prescribe(found))):
         jsonschema.validate(document(record), json.loads((DOCS / f"{name}.schema.json").read_text()))
+
+
+def test_plans_fit() -> None:
+    found = examine(scanned(card_print(FOUR_INKS[0]), 200)[0])
+    made = plan(found, rates=[(200.0, 200.0), (300.0, 300.0)], turns=(0.0, 5.0), reprint=(150.0, 45.0))
+    jsonschema.validate(document(made), json.loads((DOCS / "plan.schema.json").read_text()))
 
 
 def test_demo_truths_fit() -> None:

@@ -96,4 +96,5 @@ def _pattern(p: PlannedPattern) -> str:
     sigma = f" +/- {p.sigma_lpi:.2g}" if p.sigma_lpi > 0 else ""
     if p.kind == "cloth":
         return f"{p.name}, {p.frequencies_lpcm[0]:.2f} ends by {p.frequencies_lpcm[1]:.2f} picks/cm"
-    return f"{p.name}, {p.frequencies_lpi[0]:.4g}{sigma} lpi ({p.frequencies_lpcm[0]:.2f}/cm) at {p.angle_deg:.1f} deg"
+    ruling = f"{p.frequencies_lpi[0]:.4g}{sigma} lpi ({p.frequencies_lpcm[0]:.2f}/cm)"
+    return f"{p.name}, {ruling} at {p.angle_deg:.1f} deg"
