@@ -28,9 +28,9 @@ from moire.sampling import Optics, capture_mtf, fold_all, turned
 Array = NDArray[np.float64]
 
 _KNOTS = 32
-_ONE_REACH, _THREAD_REACH, _PAIR_REACH = 8, 3, 2
+_ONE_REACH, _THREAD_REACH, _PAIR_REACH = 12, 4, 2
 _LEAST_SWING = 0.03
-_PAIR_TONES = slice(None, None, 4)
+_PAIR_TONES_APART = 3
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -92,7 +92,7 @@ def predict(patterns: Sequence[Pattern], capture: Capture) -> Lines:
     Returns
     -------
     Lines
-        Those that reach 0.03 L* at some rate.
+        Those that reach 0.03 L* at some rate, or the strongest where none does.
     """
     knots, low, weight = _knots(capture.rates)
     inks = [(i, p) for i, p in enumerate(patterns) if p.is_ink]
@@ -104,7 +104,8 @@ def predict(patterns: Sequence[Pattern], capture: Capture) -> Lines:
     image = np.concatenate([b.image for b in blocks])
     amplitude = np.concatenate([b.amplitude for b in blocks], axis=1)
     mean = np.concatenate([b.mean for b in blocks], axis=1)
-    kept = np.flatnonzero(amplitude.max(axis=0) > _LEAST_SWING)
+    highest = amplitude.max(axis=0)
+    kept = np.flatnonzero(highest >= min(_LEAST_SWING, float(highest.max())))
     true, image = true[kept], image[kept]
     first = np.zeros((len(kept), 2), np.int64)
     before = true
@@ -216,7 +217,9 @@ def _two(a: tuple[int, Pattern], b: tuple[int, Pattern], capture: Capture, knots
     first, second = (turned(p.basis_cpi, capture.turn_deg) for _, p in (a, b))
     low, high = (true_frequencies(basis, PAIR_CELLS) for basis in (first, second))
     f = high[:, :, None, None] + low[None, None]
-    swing, mean = _lines(light_of_two(a[1], b[1], _PAIR_TONES), f, (-4, -3, -2, -1), capture, knots)
+    count = len(a[1].amounts)
+    tones = slice(count // _PAIR_TONES_APART if count > 1 else 0, None, _PAIR_TONES_APART)
+    swing, mean = _lines(light_of_two(a[1], b[1], tones), f, (-4, -3, -2, -1), capture, knots)
     grid = order_grid(PAIR_CELLS)
     shape = (PAIR_CELLS,) * 4
     of_a = np.broadcast_to(grid[None, None], (*shape, 2))

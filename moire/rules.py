@@ -15,7 +15,7 @@ from moire.units import angle_distance
 _MARGIN = 0.02
 _TIMES_ON, _TIMES_OFF = (2.0, 3.0, 4.0), (2.25, 2.75, 3.25)
 _TIMES_A_THREAD = 2.2
-_LOWEST, _HIGHEST, _STEPS = 0.6, 8.0, 361
+_LOWEST, _HIGHEST, _STEPS = 0.6, 16.0, 481
 _NEAR_AXIS_DEG = 1.0
 _LOCKED = 0.5
 
@@ -98,7 +98,7 @@ def _multiples(original: Original, f: float, curve: Curve) -> Rule:
 
 def _several_times(f: float, free_from: float | None) -> Rule:
     if free_from is None:
-        words = "no rate up to eight times the ruling is free of visible beats at this viewing condition"
+        words = "no rate up to sixteen times the ruling is free of visible beats at this viewing condition"
     else:
         words = f"no beat is seen from {free_from:.0f} ppi up, {free_from / f:.1f} times the ruling"
     return Rule(
