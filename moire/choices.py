@@ -47,15 +47,14 @@ def _verdicts(judged: Judged, original: Original, capture: Capture) -> list[Verd
     """What an examination of each scan would say of these lines."""
     lines = judged.lines
     image = (lines.image != 0).any(axis=1)
-    alone = np.array([len(parts) == 1 for parts in lines.parts])
     owner = np.array([parts[0][0] for parts in lines.parts])
     groups: list[tuple[int | None, Kind, np.ndarray]] = [
         (None, "unexplained", np.flatnonzero(image)),
-        (None, "rosette", np.flatnonzero(~image & ~alone)),
+        (None, "rosette", np.flatnonzero(~image & ~judged.alone)),
     ]
     for index, pattern in enumerate(original.patterns):
         kind: Kind = "halftone" if pattern.is_ink else "weave"
-        groups.append((index, kind, np.flatnonzero(~image & alone & (owner == index))))
+        groups.append((index, kind, np.flatnonzero(~image & judged.alone & (owner == index))))
     worst = [judged.visibility[:, members].max(axis=1, initial=0.0).tolist() for _, _, members in groups]
     basic = [_fundamentals(judged, original, capture, index) for index, _, _ in groups]
     out = []

@@ -27,12 +27,16 @@ Array = NDArray[np.float64]
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Judged:
-    """Predicted lines with what the eye makes of them, arrays of shape (rates, lines)."""
+    """Predicted lines with what the eye makes of them, arrays of shape (rates, lines).
+
+    ``alone``, of shape (lines,), marks those of one pattern only.
+    """
 
     lines: Lines
     sigma_cpi: Array
     visibility: Array
     by_sampling: NDArray[np.bool_]
+    alone: NDArray[np.bool_]
 
 
 def judge_lines(
@@ -56,15 +60,18 @@ def judge_lines(
     # A line and its own mirror image may fold together: at the worst phase they add.
     twice = 2 * lines.seen_cpi
     off = twice - np.rint(twice / capture.rates[:, None, :]) * capture.rates[:, None, :]
-    swing = lines.amplitude * np.where(np.hypot(off[..., 0], off[..., 1]) < SAME_CPI, 2, 1)
+    on_edge = np.hypot(off[..., 0], off[..., 1]) < SAME_CPI
+    swing = lines.amplitude * np.where(on_edge, 2, 1)
     modulation = np.minimum(1, 3 * swing / (lines.mean + 16))
     by_sampling = (lines.order != 0).any(axis=-1) | (lines.capture_order != 0).any(axis=-1)
     by_sampling |= (lines.image != 0).any(axis=-1)[None]
+    by_sampling &= ~_locked(lines, sigma, by_sampling, on_edge, capture.rates)
     return Judged(
         lines=replace(lines, amplitude=swing),
         sigma_cpi=sigma,
         visibility=modulation * sensitivity,
         by_sampling=by_sampling,
+        alone=np.array([len(parts) == 1 for parts in lines.parts]),
     )
 
 
@@ -83,6 +90,30 @@ def strongest(judged: Judged, rates: Array) -> tuple[Array, NDArray[np.intp]]:
         apart -= np.rint(apart / rates[:, None]) * rates[:, None]
         same |= np.hypot(apart[..., 0], apart[..., 1]) < SAME_CPI
     return np.asarray((beats * same).sum(axis=1)), at
+
+
+def _locked(
+    lines: Lines, sigma: Array, folded: NDArray[np.bool_], on_edge: NDArray[np.bool_], rates: Array
+) -> NDArray[np.bool_]:
+    """Folded lines that surely fall onto an unfolded one of the same pattern, or onto themselves.
+
+    They add to what is there and make no beat; where the frequency is uncertain they would.
+    """
+    sure = folded & (sigma < SAME_CPI)
+    out = sure & on_edge
+    candidates = np.flatnonzero(sure.any(axis=0))
+    for host, parts in enumerate(lines.parts):
+        own = ~folded[:, host] | on_edge[:, host]
+        if len(parts) > 1 or not len(candidates) or not own.any():
+            continue
+        kin = [i for i in candidates if len(lines.parts[i]) == 1 and lines.parts[i][0][0] == parts[0][0]]
+        mine = np.array(kin, int)
+        for sign in (1, -1):
+            apart = lines.seen_cpi[:, mine] - sign * lines.seen_cpi[:, host][:, None]
+            apart -= np.rint(apart / rates[:, None]) * rates[:, None]
+            same = np.hypot(apart[..., 0], apart[..., 1]) < SAME_CPI
+            out[:, mine] |= same & sure[:, mine] & own[:, None]
+    return out
 
 
 def _sigma(parts: Sequence[tuple[int, int, int]], patterns: Sequence[Pattern]) -> float:

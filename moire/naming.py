@@ -27,11 +27,10 @@ def list_beats(
 
     `brief` lists the two strongest with the sampling grid alone.
     """
-    alone = np.array([len(part) == 1 for part in judged.lines.parts])
     sampling = judged.by_sampling[i]
     found = _strongest_of(judged, original, capture, i, sampling, _BRIEF if brief else _LISTED)
     if not brief:
-        found += _strongest_of(judged, original, capture, i, ~sampling & ~alone, _LISTED_ROSETTES)
+        found += _strongest_of(judged, original, capture, i, ~sampling & ~judged.alone, _LISTED_ROSETTES)
     return tuple(sorted(found, key=lambda b: -b.visibility))
 
 

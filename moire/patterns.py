@@ -71,7 +71,7 @@ def ink_pattern(
 ) -> Pattern:
     """A printed screen; ink spreads as a Gaussian of `spread_um`, unknown inks count as black."""
     amounts = dot_coefficients(shape, tones, INK_CELLS)
-    f = true_frequencies(basis_cpi, INK_CELLS)
+    f = whole_grid(INK_CELLS) @ basis_cpi
     spread = np.exp(-2 * np.pi**2 * (spread_um / 25400) ** 2 * (f**2).sum(axis=-1))
     absorbs = 1 - np.array(INKS.get(ink, INKS["black"]))
     return Pattern(
@@ -101,42 +101,48 @@ def cloth_pattern(
 
 
 def order_grid(cells: int) -> NDArray[np.int64]:
-    """Orders (m, n) on a cell grid, shape (cells, cells, 2), as `Pattern.amounts` lays them."""
+    """Orders (m, n) with m >= 0 on a cell grid, shape (cells, cells // 2 + 1, 2); m changes along columns.
+
+    The other half is the opposite of these, as for any real picture.
+    """
+    orders = np.rint(np.fft.fftfreq(cells) * cells).astype(np.int64)
+    half = np.arange(cells // 2 + 1)
+    return np.stack(np.broadcast_arrays(half[None, :], orders[:, None]), axis=-1)
+
+
+def whole_grid(cells: int) -> NDArray[np.int64]:
+    """All orders (m, n) of a cell grid, shape (cells, cells, 2), as `Pattern.amounts` lays them."""
     orders = np.rint(np.fft.fftfreq(cells) * cells).astype(np.int64)
     return np.stack(np.broadcast_arrays(orders[None, :], orders[:, None]), axis=-1)
 
 
-def true_frequencies(basis_cpi: Array, cells: int, repeat: int = 1) -> Array:
-    """Frequency of every order of a cell grid, cycles per inch, shape (cells, cells, 2)."""
-    return np.asarray(order_grid(cells) / repeat @ basis_cpi)
-
-
 def light_of_one(pattern: Pattern) -> Spectra:
-    """Coefficients of reflected light of one pattern on paper, shape (tones, cells, cells)."""
+    """Coefficients of reflected light of one pattern on paper, shape (tones, cells, cells // 2 + 1)."""
+    half = pattern.amounts.shape[-1] // 2 + 1
     if not pattern.is_ink:
-        return pattern.amounts
+        return pattern.amounts[..., :half]
     paper = LUMINANCE * np.array(PAPER)
-    light = -float(paper @ pattern.absorbs) * pattern.amounts
+    light = -float(paper @ pattern.absorbs) * pattern.amounts[..., :half]
     light[:, 0, 0] += paper.sum()
     return light
 
 
 def light_of_two(first: Pattern, second: Pattern, tones: slice) -> Spectra:
-    """Coefficients of light of two inks over each other, shape (tones, n2, m2, n1, m1)."""
+    """Coefficients of light of two inks over each other, shape (tones, n2, m2, n1, half of m1)."""
     paper = LUMINANCE * np.array(PAPER)
     keep = np.rint(np.fft.fftfreq(PAIR_CELLS) * PAIR_CELLS).astype(int)
     at = np.ix_(keep, keep)
-    a = np.stack([plane[at] for plane in first.amounts[tones]])
+    a = np.stack([plane[at] for plane in first.amounts[tones]])[..., : PAIR_CELLS // 2 + 1]
     b = np.stack([plane[at] for plane in second.amounts[tones]])
-    one = np.zeros_like(a)
-    one[:, 0, 0] = 1
+    none_a, none_b = np.zeros_like(a), np.zeros_like(b)
+    none_a[:, 0, 0] = none_b[:, 0, 0] = 1
 
     def outer(low: Spectra, high: Spectra) -> Spectra:
         return np.asarray(high[:, :, :, None, None] * low[:, None, None])
 
-    light = paper.sum() * outer(one, one)
-    light -= float(paper @ first.absorbs) * outer(a, one)
-    light -= float(paper @ second.absorbs) * outer(one, b)
+    light = paper.sum() * outer(none_a, none_b)
+    light -= float(paper @ first.absorbs) * outer(a, none_b)
+    light -= float(paper @ second.absorbs) * outer(none_a, b)
     return np.asarray(light + float(paper @ (first.absorbs * second.absorbs)) * outer(a, b))
 
 
@@ -145,8 +151,8 @@ def lines_of_lightness(light: Spectra, axes: tuple[int, ...]) -> tuple[Array, Ar
 
     Parameters
     ----------
-    light : ndarray, shape (..., cells, cells)
-        Coefficients over the cell axes `axes`.
+    light : ndarray, shape (..., cells, cells // 2 + 1)
+        Coefficients over the cell axes `axes`, half of the last.
 
     Returns
     -------
@@ -156,9 +162,8 @@ def lines_of_lightness(light: Spectra, axes: tuple[int, ...]) -> tuple[Array, Ar
     """
     from scipy import fft
 
-    field = fft.ifftn(light, axes=axes, norm="forward").real
-    lightness = lightness_of_light(field)
-    swing = 2 * np.abs(fft.fftn(lightness, axes=axes, norm="forward"))
+    lightness = lightness_of_light(_over_cell(light, axes))
+    swing = 2 * np.abs(fft.rfftn(lightness, axes=axes, norm="forward"))
     return np.asarray(swing), np.asarray(lightness.mean(axis=axes))
 
 
@@ -166,17 +171,23 @@ def codes_of_light(light: Spectra, axes: tuple[int, ...]) -> Spectra:
     """Coefficients of sRGB code values 0..1 from coefficients of light."""
     from scipy import fft
 
-    field = fft.ifftn(light, axes=axes, norm="forward").real
-    return np.asarray(fft.fftn(srgb_encode(field), axes=axes, norm="forward"))
+    return np.asarray(fft.rfftn(srgb_encode(_over_cell(light, axes)), axes=axes, norm="forward"))
 
 
 def lines_of_codes(codes: Spectra, axes: tuple[int, ...]) -> tuple[Array, Array]:
     """As `lines_of_lightness`, from coefficients of sRGB code values."""
     from scipy import fft
 
-    field = np.clip(fft.ifftn(codes, axes=axes, norm="forward").real, 0, 1)
-    light = fft.fftn(srgb_decode(field), axes=axes, norm="forward")
-    return lines_of_lightness(light, axes)
+    light = srgb_decode(np.clip(_over_cell(codes, axes), 0, 1))
+    return lines_of_lightness(fft.rfftn(light, axes=axes, norm="forward"), axes)
+
+
+def _over_cell(coefficients: Spectra, axes: tuple[int, ...]) -> Array:
+    """The field that coefficients describe, summed over one cell."""
+    from scipy import fft
+
+    cells = coefficients.shape[axes[0]]
+    return np.asarray(fft.irfftn(coefficients, s=(cells,) * len(axes), axes=axes, norm="forward"))
 
 
 def lightness_of_light(light: Array) -> Array:

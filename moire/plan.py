@@ -22,7 +22,7 @@ from moire.plans import Choice, Plan, Reading
 from moire.prediction import Capture, predict
 from moire.reasons import explain, settling_scan
 from moire.reprint import reprint_beats
-from moire.rules import Curve, curve_rates, weigh_rules
+from moire.rules import Curve, curve_rates, multiple_rates, weigh_rules
 from moire.sampling import Optics
 from moire.vision import viewing_condition
 
@@ -126,7 +126,8 @@ def plan(
     order = sorted(range(len(choices)), key=lambda i: _rank(choices[i]))
     ranked = tuple(choices[i] for i in order)
     at_best = replace(captures[0], turn_deg=ranked[0].turn_deg)
-    curve = _curve(originals[0], at_best, condition, scanning)
+    curve = _curve(originals[0], at_best, curve_rates(originals[0]), condition, scanning.scale_sigma)
+    exact = _curve(originals[0], at_best, multiple_rates(originals[0]), condition, 0.0)
     return Plan(
         software=f"moire {moire.__version__}",
         viewing=condition,
@@ -134,7 +135,7 @@ def plan(
         choices=ranked,
         recommended=0,
         why=explain(ranked, originals, curve.free_from, derivative=scanning.master is not None),
-        rules=weigh_rules(originals[0], curve),
+        rules=weigh_rules(originals[0], curve, exact),
         free_from_ppi=curve.free_from,
         readings=tuple(
             _reading(o, [own[i] for i in order])
@@ -233,11 +234,13 @@ def _rank(choice: Choice) -> tuple[float, ...]:
     return (0, not choice.keeps_detail, worst >= _MARGIN, severity, abs(choice.turn_deg), size, worst)
 
 
-def _curve(original: Original, capture: Capture, condition: Viewing, scanning: Scanning) -> Curve:
-    ppi = curve_rates(original)
+def _curve(
+    original: Original, capture: Capture, ppi: NDArray[np.float64], condition: Viewing, scale_sigma: float
+) -> Curve:
+    """Visibility of the strongest beat when sampled directly."""
     capture = replace(capture, rates=np.stack([ppi, ppi], axis=1), grid=None, derivative=False)
     lines = predict(original.patterns, capture)
-    judged = judge_lines(lines, original, capture, condition, scale_sigma=scanning.scale_sigma)
+    judged = judge_lines(lines, original, capture, condition, scale_sigma=scale_sigma)
     return Curve(ppi=ppi, visibility=strongest(judged, capture.rates)[0])
 
 

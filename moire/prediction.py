@@ -20,7 +20,7 @@ from moire.patterns import (
     lines_of_codes,
     lines_of_lightness,
     order_grid,
-    true_frequencies,
+    whole_grid,
 )
 from moire.press import PAPER
 from moire.sampling import Optics, capture_mtf, fold_all, turned
@@ -192,9 +192,9 @@ def _lines(
 def _one(index: int, pattern: Pattern, capture: Capture, knots: Array) -> _Block:
     cells = pattern.amounts.shape[-1]
     basis = turned(pattern.basis_cpi, capture.turn_deg)
-    f = true_frequencies(basis, cells, pattern.repeat)
-    swing, mean = _lines(light_of_one(pattern), f, (-2, -1), capture, knots)
     orders = order_grid(cells)
+    f = orders / pattern.repeat @ basis
+    swing, mean = _lines(light_of_one(pattern), f, (-2, -1), capture, knots)
     reach = _ONE_REACH if pattern.repeat == 1 else _THREAD_REACH * pattern.repeat
     half = _half_plane(orders) & (np.abs(orders).max(axis=-1) <= reach)
     amplitude, tone = _worst_tone(swing[..., half], mean)
@@ -215,15 +215,13 @@ def _one(index: int, pattern: Pattern, capture: Capture, knots: Array) -> _Block
 
 def _two(a: tuple[int, Pattern], b: tuple[int, Pattern], capture: Capture, knots: Array) -> _Block:
     first, second = (turned(p.basis_cpi, capture.turn_deg) for _, p in (a, b))
-    low, high = (true_frequencies(basis, PAIR_CELLS) for basis in (first, second))
+    low, high = order_grid(PAIR_CELLS) @ first, whole_grid(PAIR_CELLS) @ second
     f = high[:, :, None, None] + low[None, None]
     count = len(a[1].amounts)
     tones = slice(count // _PAIR_TONES_APART if count > 1 else 0, None, _PAIR_TONES_APART)
     swing, mean = _lines(light_of_two(a[1], b[1], tones), f, (-4, -3, -2, -1), capture, knots)
-    grid = order_grid(PAIR_CELLS)
-    shape = (PAIR_CELLS,) * 4
-    of_a = np.broadcast_to(grid[None, None], (*shape, 2))
-    of_b = np.broadcast_to(grid[:, :, None, None], (*shape, 2))
+    of_a = np.broadcast_to(order_grid(PAIR_CELLS)[None, None], f.shape)
+    of_b = np.broadcast_to(whole_grid(PAIR_CELLS)[:, :, None, None], f.shape)
     total_a, total_b = np.abs(of_a).sum(axis=-1), np.abs(of_b).sum(axis=-1)
     wanted = (total_a >= 1) & (total_b >= 1) & (np.maximum(total_a, total_b) <= _PAIR_REACH)
     wanted &= _half_plane(of_a)

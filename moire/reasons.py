@@ -53,7 +53,7 @@ def explain(
         )
     if worst >= 1 and not derivative and free_from is not None:
         out.append(f"From {free_from:.0f} ppi up, sampled directly, no beat would be seen.")
-    if worst >= 1 and derivative:
+    if derivative and (worst >= 1 or not best.keeps_detail):
         out.append("`moire mend --to-ppi` takes the screen out first and reduces then: no screen, no beat.")
     if len(originals) > 1:
         chance = originals[0].probability

@@ -17,7 +17,7 @@ _TIMES_ON, _TIMES_OFF = (2.0, 3.0, 4.0), (2.25, 2.75, 3.25)
 _TIMES_A_THREAD = 2.2
 _LOWEST, _HIGHEST, _STEPS = 0.6, 16.0, 481
 _NEAR_AXIS_DEG = 1.0
-_LOCKED = 0.5
+_LOCKED, _LOCK_MARGIN = 0.5, 0.01
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -42,18 +42,24 @@ class Curve:
 
 def curve_rates(original: Original) -> NDArray[np.float64]:
     """Rates from which the rules can be weighed, from below the finest lattice to far above it."""
-    times = (*np.geomspace(_LOWEST, _HIGHEST, _STEPS), *_TIMES_ON, *_TIMES_OFF)
-    return np.unique(times) * original.finest_lpi
+    return np.geomspace(_LOWEST, _HIGHEST, _STEPS) * original.finest_lpi
 
 
-def weigh_rules(original: Original, curve: Curve) -> tuple[Rule, ...]:
+def multiple_rates(original: Original) -> NDArray[np.float64]:
+    """Whole multiples of the ruling, and rates between them."""
+    return np.array(sorted((*_TIMES_ON, *_TIMES_OFF))) * original.finest_lpi
+
+
+def weigh_rules(original: Original, curve: Curve, exact: Curve) -> tuple[Rule, ...]:
     """Which rules hold here.
 
     Parameters
     ----------
     original : Original
     curve : Curve
-        At the rates of `curve_rates`.
+        At the rates of `curve_rates`, with the scanner's uncertainty of scale.
+    exact : Curve
+        At the rates of `multiple_rates`, at exact scale.
     """
     f = original.finest_lpi
     if original.is_cloth:
@@ -66,7 +72,7 @@ def weigh_rules(original: Original, curve: Curve) -> tuple[Rule, ...]:
                 "threshold: harmonics and bindings of the threads fold too",
             ),
         )
-    return (_twice(f, curve), _multiples(original, f, curve), _several_times(f, curve.free_from))
+    return (_twice(f, curve), _multiples(original, f, curve, exact), _several_times(f, curve.free_from))
 
 
 def _twice(f: float, curve: Curve) -> Rule:
@@ -79,19 +85,20 @@ def _twice(f: float, curve: Curve) -> Rule:
     )
 
 
-def _multiples(original: Original, f: float, curve: Curve) -> Rule:
-    on, off = (max(curve.near(k * f, 0.0) for k in times) for times in (_TIMES_ON, _TIMES_OFF))
+def _multiples(original: Original, f: float, curve: Curve, exact: Curve) -> Rule:
+    on, off = (max(exact.near(k * f, 0.0) for k in times) for times in (_TIMES_ON, _TIMES_OFF))
     level = all(angle_distance(p.angle_deg, 0, 90) <= _NEAR_AXIS_DEG for p in original.planned)
-    same = len({round(p.frequencies_lpi[0], 3) for p in original.planned}) == 1
-    agrees = level and same and on < _LOCKED * off
-    if level and same:
+    agrees = on < max(1.0, _LOCKED * off)
+    if level and agrees:
+        real = max(curve.near(k * f, _LOCK_MARGIN) for k in _TIMES_ON)
         words = (
-            "the screen lies along the grid, so a whole multiple locks them: only at exact scale and angle"
+            f"at 0 degrees and exact scale it locks grid and screen ({on:.1f} x the eye's threshold), "
+            f"1 % off scale it does not ({real:.1f} x)"
         )
     else:
         words = (
-            "it locks grid and screen only at 0 degrees: here whole multiples show "
-            f"{on:.1f} x the eye's threshold, rates between {off:.1f} x"
+            f"it helps only at 0 degrees and exact scale: here whole multiples show {on:.1f} x the eye's "
+            f"threshold, rates between {off:.1f} x"
         )
     return Rule(rule="a whole multiple of the ruling", agrees=agrees, words=words)
 

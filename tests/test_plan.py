@@ -88,12 +88,13 @@ def test_measured_uncertainty_is_carried_into_the_period() -> None:
 
 
 def test_an_uncertain_lock_is_not_trusted() -> None:
-    """At exactly three times a ruling at 0 degrees the third order stands still; 0.1 % off it does not."""
+    """At three times a ruling at 0 degrees every fold meets a line of the screen; off scale it does not."""
     sure, unsure = (
         plan([screen(60, 0)], rates=square(180), scanning=Scanning(scale_sigma=s)).choices[0]
         for s in (0.0, 0.001)
     )
-    assert unsure.visibility >= sure.visibility
+    assert sure.visibility == 0
+    assert unsure.visibility > 1
 
 
 def test_a_turn_is_a_choice() -> None:
@@ -154,6 +155,9 @@ def test_rules_of_the_trade_are_weighed_not_recited() -> None:
     assert not turned["twice the ruling"].agrees
     assert "continuous-tone" in turned["twice the ruling"].words
     assert not turned["a whole multiple of the ruling"].agrees
+    level = {r.rule: r for r in plan([screen(133, 0)], rates=square(600)).rules}
+    assert level["a whole multiple of the ruling"].agrees
+    assert "exact scale" in level["a whole multiple of the ruling"].words
 
 
 def test_every_rate_above_the_one_named_is_free() -> None:

@@ -103,7 +103,8 @@ def _range(text: str) -> tuple[float, float] | None:
     help="Choose a reduction of a master at --ppi instead.",
 )
 @click.option("--kernel", type=click.Choice(_KERNELS), default="opencv-area", show_default=True,
-              help="What resamples: library and interpolation.")  # fmt: skip
+              metavar="KERNEL",
+              help="What resamples: opencv-area, pillow-lanczos and others (docs/commands.md).")  # fmt: skip
 @click.option("--reprint", metavar="LPI@ANGLE", help="The scan will be printed through this screen.")
 @shared("viewing")
 @click.option(

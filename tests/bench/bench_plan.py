@@ -1,11 +1,11 @@
 """Predictions of `plan` against scans that were really rendered: remakes a table of docs/planning.md.
 
-    python tests/bench/bench_plan.py prints|half|cloth|uneven|reductions|followed [--cases N]
+    python tests/bench/bench_plan.py prints|half|cloth|uneven|reductions|followed|reduced [--cases N]
 
 ``prints``: flat tints screened by Ghostscript and scanned by the tests' own sampling model.
 ``half``: the same with cells of half pixels. ``cloth``, ``uneven``: swatches of the product's
-loom through its scanner. ``reductions``: prints reduced by
-OpenCV's and Pillow's own resizers. ``followed``: what is recommended, done, and examined.
+loom through its scanner. ``reductions``: prints reduced by OpenCV's and Pillow's own resizers.
+``followed``, ``reduced``: what is recommended, scanned or reduced, and examined.
 Cases are drawn from the seeds below.
 """
 
@@ -32,13 +32,16 @@ from moire.judging import judge_lines
 from moire.kernels import KERNELS, Kernel
 from moire.loom import Cloth
 from moire.mend import mend
-from moire.model import Screen, Weave
+from moire.model import Line, Scan, Screen, Weave
 from moire.originals import printed_original, woven_original
 from moire.plan import Scanning, plan
+from moire.plans import Choice
 from moire.prediction import Capture, Lines, predict
+from moire.reasons import rate_in_words
 from moire.sampling import Optics
 from moire.scanner import Scanner, digitise, sample
-from moire.units import lpi_to_lpcm
+from moire.units import lpi_to_lpcm, page_vector
+from moire.verdict import ARTIFACTS
 from moire.vision import viewing_condition
 
 SEED = 20
@@ -196,33 +199,86 @@ def cloth(number: int, *, uneven: float = 0.0) -> tuple[str, Fit]:
 
 @dataclass(frozen=True)
 class Followed:
-    """One recommendation, done: verdicts of the scan and of its mended derivative, and the worst choice."""
+    """One recommendation, done: what was foretold and what an examination says, and the worst choice."""
 
+    name: str
+    free: bool
     foretold: str
     verdict: str
+    beats_seen: int
     mended: str
     worst_shows: bool | None
 
+    @property
+    def line(self) -> str:
+        shows = {None: "-", True: "yes", False: "no"}[self.worst_shows]
+        free = "free" if self.free else "not free"
+        cells = (self.name, free, self.foretold, self.verdict, self.beats_seen, self.mended, shows)
+        return f"| {' | '.join(map(str, cells))} |"
 
-def follow(case: Case) -> Followed:
-    """Scan as recommended, mend if the plan says so, and scan as the worst choice says."""
+
+def follow(case: Case, *, kernel: Kernel | None = None) -> Followed:
+    """Scan (or reduce a 600 ppi master) as recommended, mend if need be; and as the worst choice says."""
+    if kernel is None:
+        rates, turns, master = (150, 200, 300, 400, 600, 1200), (0.0, 5.0), None
+    else:
+        rates, turns, master = (100, 110, 120, 133, 150, 170, 200, 240, 300), (case.turn,), (600.0, 600.0)
     made = plan(
-        [case.screen()], rates=[(float(r), float(r)) for r in (150, 200, 300, 400, 600, 1200)],
-        turns=(0.0, 5.0), scanning=Scanning(optics=Optics(lens_px=LENS_PX)), shape=case.spot,  # type: ignore[arg-type]
+        [case.screen()], rates=[(float(r), float(r)) for r in rates], turns=turns, shape=case.spot,  # type: ignore[arg-type]
+        scanning=Scanning(optics=Optics(lens_px=LENS_PX), master=master, kernel=kernel or "opencv-area"),
     )  # fmt: skip
     best, worst = made.choices[0], made.choices[-1]
-    scan = as_scan(case.scan(best.ppi[0], best.turn_deg), best.ppi[0])
+
+    def done(choice: Choice) -> Scan:
+        if kernel is None:
+            pixels = case.scan(choice.ppi[0], choice.turn_deg)
+            pixels = np.ascontiguousarray(pixels[:1100, :1100])
+        else:
+            pixels = case.scan(600.0, choice.turn_deg)
+            pixels = resize(pixels, round(len(pixels) * choice.ppi[0] / 600), kernel)
+        return as_scan(pixels, choice.ppi[0])
+
+    scan = done(best)
     found = examine(scan)
+    own = printed_places(case, best)
+    beats = [
+        f for f in found.findings if f.kind in ARTIFACTS and f.visibility >= 1 and not is_own(f.lines, own)
+    ]
     after = mend(scan, found).after.verdict if found.verdict == "mendable" else found.verdict
     shows = None
-    beats = [b for b in worst.beats if b.source == "sampling" and b.visibility >= 1]
-    if beats:
-        pixels = case.scan(worst.ppi[0], worst.turn_deg)
-        listed = examine(as_scan(pixels, worst.ppi[0]))
-        lines = [(np.array([li.fx_cpp, li.fy_cpp]), f) for f in listed.findings for li in f.lines]
-        place = beats[0].frequency_cpi / worst.ppi[0]
-        shows = any(abs(float(np.hypot(*f)) - place) < 0.004 and g.visibility >= 1 for f, g in lines)
-    return Followed(foretold=best.verdict, verdict=found.verdict, mended=after, worst_shows=shows)
+    foreseen = [b for b in worst.beats if b.source == "sampling" and b.visibility >= 1]
+    if foreseen:
+        listed = examine(done(worst))
+        place = foreseen[0].frequency_cpi / worst.ppi[0]
+        shows = any(
+            abs(math.hypot(li.fx_cpp, li.fy_cpp) - place) < 0.004 and f.visibility >= 1
+            for f in listed.findings
+            for li in f.lines
+        )
+    return Followed(
+        name=f"{case.name.rsplit(', ', 2)[0]}, {kernel or 'direct'}: {rate_in_words(best)}",
+        free=best.visibility < 1, foretold=best.verdict, verdict=found.verdict, beats_seen=len(beats),
+        mended=after, worst_shows=shows,
+    )  # fmt: skip
+
+
+def printed_places(case: Case, choice: Choice) -> list[NDArray[np.float64]]:
+    """Where the screen and its orders lie unfolded in the scan, cycles per pixel."""
+    basis = [
+        np.array(page_vector(case.printed.ruling_lpi, case.printed.angle_deg + choice.turn_deg + t))
+        for t in (0, 90)
+    ]
+    orders = [m * basis[0] + n * basis[1] for m in range(-12, 13) for n in range(-12, 13) if (m, n) != (0, 0)]
+    return [f / choice.ppi[0] for f in orders if np.abs(f / choice.ppi[0]).max() < 0.5]
+
+
+def is_own(lines: tuple[Line, ...], own: list[NDArray[np.float64]]) -> bool:
+    """Whether the strongest line of a finding is the screen as printed."""
+    if not lines:
+        return False
+    lead = max(lines, key=lambda li: li.amplitude)
+    at = np.array([lead.fx_cpp, lead.fy_cpp])
+    return any(float(np.hypot(*(at - f))) < 0.004 for f in own)
 
 
 def row(name: str, fit: Fit) -> str:
@@ -249,20 +305,35 @@ def table(rows: list[tuple[str, Fit]]) -> None:
     )
 
 
+def tell(what: str, cases: int) -> None:
+    """Recommendations followed, a row each and the counts."""
+    kernels: tuple[Kernel, ...] = ("pillow-lanczos", "pillow-bicubic", "pillow-hamming", "opencv-area")
+    print("| original: recommended | beats | foretold | examined | others seen | mended | worst shows |")
+    print("|---|---|---|---|---|---|---|")
+    done = []
+    for n in range(cases):
+        done.append(follow(draw_case(n), kernel=kernels[n % 4] if what == "reduced" else None))
+        print(done[-1].line, flush=True)
+    free = [d for d in done if d.free]
+    shown = [d.worst_shows for d in done if d.worst_shows is not None]
+    print(
+        f"\n{len(done)} plans, {len(free)} with a choice free of beats. Of these: verdict as foretold "
+        f"{sum(d.foretold == d.verdict for d in free)}, no other artifact seen "
+        f"{sum(d.beats_seen == 0 for d in free)}, sound at once {sum(d.verdict == 'sound' for d in free)}, "
+        f"sound once mended {sum(d.mended == 'sound' for d in free)}. The worst choice shows its beat in "
+        f"{sum(shown)} of {len(shown)}."
+    )
+
+
 def main() -> None:
     parser = argparse.ArgumentParser()
-    parser.add_argument("what", choices=["prints", "half", "cloth", "uneven", "reductions", "followed"])
+    parser.add_argument(
+        "what", choices=["prints", "half", "cloth", "uneven", "reductions", "followed", "reduced"]
+    )
     parser.add_argument("--cases", type=int, default=48)
     args = parser.parse_args()
-    if args.what == "followed":
-        done = [follow(draw_case(n)) for n in range(args.cases)]
-        shown = [d.worst_shows for d in done if d.worst_shows is not None]
-        print(f"{len(done)} plans. Verdict as foretold: {sum(d.foretold == d.verdict for d in done)}.")
-        print(f"Sound at once: {sum(d.verdict == 'sound' for d in done)}; ", end="")
-        print(f"sound when followed to the end: {sum(d.mended == 'sound' for d in done)}.")
-        print(f"Worst choice shows its beat: {sum(shown)} of {len(shown)}.")
-        for n, d in enumerate(done):
-            print(n, d)
+    if args.what in ("followed", "reduced"):
+        tell(args.what, args.cases)
         return
     rows: list[tuple[str, Fit]] = []
     for n in range(args.cases):
