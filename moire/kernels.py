@@ -11,6 +11,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable
 from fractions import Fraction
+from functools import lru_cache
 from typing import Literal, get_args
 
 import numpy as np
@@ -21,13 +22,15 @@ Kernel = Literal[
     "pillow-nearest", "pillow-box", "pillow-bilinear", "pillow-hamming", "pillow-bicubic", "pillow-lanczos",
 ]  # fmt: skip
 KERNELS: tuple[Kernel, ...] = get_args(Kernel)
-IMAGES = (-1, 0, 1)
+Responses = Callable[[NDArray[np.float64], int], NDArray[np.complex128]]
+IMAGES = (-2, -1, 0, 1, 2)
 _PHASES = 96
 _DENOMINATOR = 48
 _GRID = 129
 
 
-def image_responses(kernel: Kernel, ratio: float) -> Callable[[NDArray[np.float64]], NDArray[np.complex128]]:
+@lru_cache(maxsize=512)
+def image_responses(kernel: Kernel, ratio: float) -> Responses:
     """A_j(f) of a resizer along one axis.
 
     Parameters
@@ -40,8 +43,8 @@ def image_responses(kernel: Kernel, ratio: float) -> Callable[[NDArray[np.float6
     Returns
     -------
     callable
-        From frequencies in cycles per input pixel, each in [-1/2, 1/2], shape (...), to complex
-        amplitudes for the images j = -1, 0, 1, shape (3, ...). Images that coincide on the
+        From frequencies in cycles per input pixel, each in [-1/2, 1/2], and an image j of `IMAGES`
+        to complex amplitudes of the same shape. Images that coincide on the
         output grid with j = 0 are already in it.
     """
     step = Fraction(ratio).limit_denominator(_DENOMINATOR)
@@ -58,14 +61,13 @@ def image_responses(kernel: Kernel, ratio: float) -> Callable[[NDArray[np.float6
         response[row] = np.exp(2j * np.pi * f[:, None] * (taps - place)) @ weights
     table = np.zeros((len(IMAGES), _GRID), complex)
     for row, j in enumerate(IMAGES):
-        # With q phases only q images differ: for q = 1 all lie on the line itself.
-        if j == 0 or count > 2 or (count == 2 and j == 1):
+        # With q phases only q images differ; for q = 1 all lie on the line itself.
+        if -count / 2 < j <= count / 2:
             table[row] = (response * np.exp(-2j * np.pi * j * places)[:, None]).mean(axis=0)
 
-    def at(frequency: NDArray[np.float64]) -> NDArray[np.complex128]:
-        return np.stack(
-            [np.interp(frequency, f, t.real) + 1j * np.interp(frequency, f, t.imag) for t in table]
-        )
+    def at(frequency: NDArray[np.float64], image: int) -> NDArray[np.complex128]:
+        row = table[IMAGES.index(image)]
+        return np.asarray(np.interp(frequency, f, row.real) + 1j * np.interp(frequency, f, row.imag))
 
     return at
 

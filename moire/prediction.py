@@ -31,6 +31,7 @@ _KNOTS = 32
 _ONE_REACH, _THREAD_REACH, _PAIR_REACH = 12, 4, 2
 _LEAST_SWING = 0.03
 _PAIR_TONES_APART = 3
+_MOST_IMAGES = 2
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -159,16 +160,18 @@ def _transfer(f: Array, capture: Capture, rate: Array) -> NDArray[np.complex128]
         return capture_mtf(f / rate, capture.optics).astype(complex)
     grid = np.array(capture.grid)
     left = capture_mtf(f / grid, capture.optics).astype(complex)
-    return left if capture.derivative else left * _resampled(f, capture, rate)[1, 1]
+    return left if capture.derivative else left * _resampled(f, capture, rate)
 
 
-def _resampled(f: Array, capture: Capture, rate: Array) -> NDArray[np.complex128]:
-    """Responses of the kernel for its images, shape (3 in y, 3 in x, ...)."""
+def _resampled(
+    f: Array, capture: Capture, rate: Array, image: tuple[int, int] = (0, 0)
+) -> NDArray[np.complex128]:
+    """Response of the kernel for a line itself or one of its images, along x and y."""
     grid = np.array(capture.grid)
     at = fold_all(f, grid)[0] / grid
-    x = image_responses(capture.kernel, float(grid[0] / rate[0]))(at[..., 0])
-    y = image_responses(capture.kernel, float(grid[1] / rate[1]))(at[..., 1])
-    return np.asarray(y[:, None] * x[None])
+    x = image_responses(capture.kernel, float(grid[0] / rate[0]))(at[..., 0], image[0])
+    y = image_responses(capture.kernel, float(grid[1] / rate[1]))(at[..., 1], image[1])
+    return np.asarray(x * y)
 
 
 def _lines(
@@ -183,7 +186,7 @@ def _lines(
         if codes is None:
             swing, mean = lines_of_lightness(light * _transfer(f, capture, rate), axes)
         else:
-            swing, mean = lines_of_codes(codes * _resampled(f, capture, rate)[1, 1], axes)
+            swing, mean = lines_of_codes(codes * _resampled(f, capture, rate), axes)
         swings.append(swing)
         means.append(mean)
     return np.stack(swings), np.stack(means)
@@ -256,7 +259,7 @@ def _three(inks: Sequence[tuple[int, Pattern]], capture: Capture, knots: Array) 
     slope = 116 / 3 * y ** (-2 / 3)
     left = np.stack([np.abs(_transfer(f, capture, rate)) for rate in knots])
     if capture.derivative:
-        left *= np.stack([np.abs(_resampled(f, capture, rate)[1, 1]) for rate in knots])
+        left *= np.stack([np.abs(_resampled(f, capture, rate)) for rate in knots])
     return _Block(
         parts=[tuple((i, *o) for (i, _), o in zip(inks, c, strict=True)) for c in combos],
         true=f,
@@ -271,20 +274,17 @@ def _with_images(block: _Block, level: tuple[Array, Array], capture: Capture, kn
 
     `level` is amplitude and mean before resampling, each of shape (1, lines).
     """
-    left = np.stack([np.abs(_resampled(block.true, capture, rate)) for rate in knots])
     amplitude, mean = level
-    images = [(iy, ix) for iy, ix in product(range(3), repeat=2) if (iy, ix) != (1, 1)]
+    images = [(x, y) for x, y in product(IMAGES, IMAGES) if 0 < abs(x) + abs(y) <= _MOST_IMAGES]
+    left = [
+        np.stack([np.abs(_resampled(block.true, capture, rate, pair)) for rate in knots]) for pair in images
+    ]
     return _Block(
-        parts=block.parts * 9,
-        true=np.concatenate([block.true] * 9),
-        image=np.concatenate(
-            [block.image]
-            + [np.broadcast_to([IMAGES[ix], IMAGES[iy]], block.image.shape) for iy, ix in images]
-        ),
-        amplitude=np.concatenate(
-            [block.amplitude] + [amplitude * left[:, iy, ix] for iy, ix in images], axis=1
-        ),
-        mean=np.concatenate([block.mean] + [np.broadcast_to(mean, block.mean.shape)] * 8, axis=1),
+        parts=block.parts * (1 + len(images)),
+        true=np.concatenate([block.true] * (1 + len(images))),
+        image=np.concatenate([block.image] + [np.broadcast_to(pair, block.image.shape) for pair in images]),
+        amplitude=np.concatenate([block.amplitude] + [amplitude * share for share in left], axis=1),
+        mean=np.concatenate([block.mean] + [np.broadcast_to(mean, block.mean.shape)] * len(images), axis=1),
     )
 
 

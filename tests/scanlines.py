@@ -20,6 +20,8 @@ TILE = 128
 # What a prediction must reach.
 WITHIN_CPI, WITHIN_SHARE, WITHIN_SWING = 0.1, 0.2, 0.3
 _CLOSE_BINS = 2.5
+# A weaker line is there, but its place drowns in noise and its neighbours' skirts.
+_PLACED_FROM = 0.1
 
 
 @dataclass(frozen=True)
@@ -35,9 +37,9 @@ class Seen:
 class Fit:
     """Predictions against one scan.
 
-    ``gaps_cpi`` and ``swings`` (predicted, measured) are of predicted lines above visibility 1,
-    ``missed`` are lines of the scan above 1 that no prediction explains, ``invented`` predicted
-    ones above 1 that the scan does not show.
+    ``swings`` (predicted, measured) are of predicted lines above visibility 1, ``gaps_cpi`` of
+    those among them that measure 0.1 L* or more, ``missed`` are lines of the scan above 1 that no
+    prediction explains, ``invented`` predicted ones above 1 that the scan does not show.
     """
 
     gaps_cpi: tuple[float, ...]
@@ -108,24 +110,25 @@ def compare(pixels: NDArray[np.uint8], lines: Lines, ppi: float) -> Fit:
     found = find_lines(pixels)
     places = lines.seen_cpi[0] / ppi
     gaps, swings, invented = [], [], []
-    size = 2 * (min(plane.shape) // 4) if min(plane.shape) < 4 * TILE else 2 * TILE
+    close = _CLOSE_BINS / _size(channels)
     for place, swing, mean in zip(places, lines.amplitude[0], lines.mean[0], strict=True):
         seen = visible(place, float(swing), float(mean))
         near = [float(a) for p, a in zip(places, lines.amplitude[0], strict=True)
-                if 0 < gap_cpp(p, place) < _CLOSE_BINS / size or gap_cpp(p, place) == 0]  # fmt: skip
+                if 0 < gap_cpp(p, place) < close or gap_cpp(p, place) == 0]  # fmt: skip
         total = float(np.sum(near))
         if (
             seen < 1
-            or gap_cpp(2 * place, np.zeros(2)) < _CLOSE_BINS / size
+            or gap_cpp(2 * place, np.zeros(2)) < close
             or total > 1.2 * float(swing)
-            or np.hypot(*place) < _CLOSE_BINS / size
+            or np.hypot(*place) < close
         ):
             continue  # not seen, or too near its mirror image, a neighbour or tone to be measured alone
         measured, tone = level(plane, place)
         swings.append((float(swing), measured))
         if visible(place, measured, tone) < 1 and float(swing) - measured > WITHIN_SHARE * float(swing):
             invented.append(seen)
-        gaps.append(gap_cpp(measured_place(channels, place), place) * ppi)
+        if measured >= _PLACED_FROM:
+            gaps.append(gap_cpp(measured_place(channels, place), place) * ppi)
     missed = tuple(
         s for s in found
         if s.visibility > 1 and min(gap_cpp(s.f_cpp, p) * ppi for p in places) > WITHIN_CPI

@@ -3,9 +3,12 @@
 import sys
 from pathlib import Path
 
+import cv2
 import numpy as np
 import pytest
 from postscript import needs_ghostscript
+from prints import as_scan
+from scanlines import compare, gap_cpp, level
 
 sys.path.insert(0, str(Path(__file__).parent / "bench"))
 from bench_plan import cloth, direct, draw_case, reduced
@@ -13,7 +16,11 @@ from bench_plan import cloth, direct, draw_case, reduced
 from moire.model import Screen
 from moire.originals import printed_original
 from moire.prediction import Capture, Lines, predict
+from moire.press import InkLayer, Print
+from moire.samples import rgb_codes
+from moire.scanner import Scanner, digitise, sample
 from moire.units import lpi_to_lpcm, page_angle
+from moire.vision import lightness
 
 FINE = Capture(rates=np.array([[4800.0, 4800.0]]))
 
@@ -173,6 +180,53 @@ def test_prints_of_an_interpreter(number: int) -> None:
     assert fit.frequencies_hold
     assert fit.swings_hold
     assert not fit.invented
+
+
+def tint(*screens: Screen, tone: float, spot: str = "round") -> Print:
+    """A flat print of the product's own press."""
+    flat = np.full((4, 4), tone, np.float32)
+    layers = tuple(
+        InkLayer(ink=s.ink, coverage=flat, ruling_lpi=s.ruling_lpi, angle_deg=s.angle_deg, spot=spot)  # type: ignore[arg-type]
+        for s in screens
+    )
+    return Print(width_in=1.2, height_in=1.2, layers=layers, gain=0.0)
+
+
+def tinted(*screens: Screen, tone: float, capture: Capture) -> Lines:
+    return predict(printed_original(screens, tones=(tone,)).patterns, capture)
+
+
+@pytest.mark.parametrize("spot", ["square", "disc"])
+def test_a_scanner_that_interpolates(spot: str) -> None:
+    """Sampled at 300 ppi and made 450 in linear light: folded lines, and images of the kernel."""
+    one = screen(133, 20)
+    drawn = "round" if spot == "disc" else spot
+    sensor = sample(tint(one, tone=0.25, spot=drawn), Scanner(ppi=(300, 300)))
+    made = cv2.resize(sensor, (540, 540), interpolation=cv2.INTER_LINEAR)
+    pixels = digitise(made, Scanner(ppi=(450, 450), noise=0.002), np.random.default_rng(1))
+    capture = Capture(rates=np.array([[450.0, 450.0]]), grid=(300, 300), kernel="opencv-linear")
+    found = predict(printed_original([one], tones=(0.25,), shape=spot).patterns, capture)  # type: ignore[arg-type]
+    fit = compare(np.ascontiguousarray(pixels[4:-4, 4:-4]), found, 450)
+    assert len(fit.swings) > 4
+    assert found.image[found.amplitude[0].argsort()[-8:]].any()
+    assert fit.frequencies_hold
+    assert fit.swings_hold
+
+
+@pytest.mark.parametrize("ppi", [200, 300, 450])
+def test_rosettes_of_two_inks_and_their_folds(ppi: int) -> None:
+    inks = (screen(133, 15, "cyan"), screen(120, 48, "magenta"))
+    scanner = Scanner(ppi=(ppi, ppi), noise=0.002)
+    pixels = digitise(sample(tint(*inks, tone=0.4), scanner), scanner, np.random.default_rng(2))
+    found = tinted(*inks, tone=0.4, capture=Capture(rates=np.array([[ppi, ppi]], float)))
+    plane = lightness(rgb_codes(as_scan(pixels, None)))
+    pairs = [i for i, parts in enumerate(found.parts) if len(parts) == 2 and found.amplitude[0, i] > 0.4]
+    assert len(pairs) >= 2
+    for i in pairs:
+        near = [gap_cpp(found.seen_cpi[0, i] / ppi, f / ppi) for f in found.seen_cpi[0]]
+        if sorted(near)[1] > 0.02:
+            measured, _ = level(plane, found.seen_cpi[0, i] / ppi)
+            assert found.amplitude[0, i] == pytest.approx(measured, rel=0.2, abs=0.3)
 
 
 @pytest.mark.parametrize("number", [0, 1, 2])
