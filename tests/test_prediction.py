@@ -172,7 +172,7 @@ def test_many_rates_are_between_few() -> None:
 
 
 @needs_ghostscript
-@pytest.mark.parametrize("number", [1, 5, 9])
+@pytest.mark.parametrize("number", [1, 2])
 def test_prints_of_an_interpreter(number: int) -> None:
     """Within 0.1 cycles/inch, within 20 % or 0.3 L*; tests/bench/bench_plan.py has the whole table."""
     fit = direct(draw_case(number))
@@ -229,7 +229,7 @@ def test_rosettes_of_two_inks_and_their_folds(ppi: int) -> None:
             assert found.amplitude[0, i] == pytest.approx(measured, rel=0.2, abs=0.3)
 
 
-@pytest.mark.parametrize("number", [0, 1, 2])
+@pytest.mark.parametrize("number", [0, 2])
 def test_cloth(number: int) -> None:
     _, fit = cloth(number)
     assert fit.swings
@@ -238,9 +238,8 @@ def test_cloth(number: int) -> None:
 
 
 @needs_ghostscript
-@pytest.mark.parametrize("kernel", ["opencv-linear", "pillow-bicubic"])
-def test_reductions_by_the_libraries_themselves(kernel: str) -> None:
-    fit = reduced(draw_case(4), kernel, 220.0)  # type: ignore[arg-type]
+def test_a_reduction_by_a_library_itself() -> None:
+    fit = reduced(draw_case(4), "pillow-bicubic", 220.0)
     assert fit.swings
     assert fit.frequencies_hold
     assert fit.swings_hold
