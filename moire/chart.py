@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -15,6 +15,7 @@ from moire.plan import Scanning, Sweep, sweep
 from moire.plans import Choice, Plan
 
 Box = tuple[float, float, float, float]
+Scale = Callable[[float], float]
 
 # The drawing's frame and plot in its own units.
 WIDTH, HEIGHT = 960, 520
@@ -129,9 +130,7 @@ def _steps(low: float, high: float) -> NDArray[np.float64]:
     return np.arange(math.ceil(low / step) * step, high + 1e-6, step)
 
 
-def _dot(choice: Choice, x: object, y: object, *, best: bool) -> Dot:
-    assert callable(x)
-    assert callable(y)
+def _dot(choice: Choice, x: Scale, y: Scale, *, best: bool) -> Dot:
     at = y(choice.visibility)
     below = at < HEIGHT - _BOTTOM - 24
     return Dot(

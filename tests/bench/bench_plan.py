@@ -296,10 +296,11 @@ def table(rows: list[tuple[str, Fit]]) -> None:
         print(row(name, fit))
     fits = [fit for _, fit in rows]
     lines = sum(len(f.swings) for f in fits)
-    close = sum(g < 0.1 for f in fits for g in f.gaps_cpi)
+    gaps = [g for f in fits for g in f.gaps_cpi]
     fair = sum(abs(p - m) <= max(0.2 * m, 0.3) for f in fits for p, m in f.swings)
     print(
-        f"\n{len(rows)} cases, {lines} predicted lines above visibility 1: {close} within 0.1 cycles/inch, "
+        f"\n{len(rows)} cases, {lines} predicted lines above visibility 1. Of {len(gaps)} of at least 0.1 L* "
+        f"{sum(g < 0.1 for g in gaps)} lie within 0.1 cycles/inch; "
         f"{fair} within 20 % or 0.3 L*; {sum(len(f.missed) for f in fits)} lines missed in "
         f"{sum(bool(f.missed) for f in fits)} cases, {sum(len(f.invented) for f in fits)} invented."
     )
