@@ -38,7 +38,7 @@ def image_responses(kernel: Kernel, ratio: float) -> Responses:
     kernel : str
         One of `KERNELS`: the library and the name of its interpolation.
     ratio : float
-        Input pixels per output pixel, >= 1 for a reduction.
+        Input pixels per output pixel, >= 1 for a reduction; below 1 ``opencv-area`` is taken as linear.
 
     Returns
     -------
@@ -84,6 +84,9 @@ def _weights(kernel: Kernel, ratio: float, place: float) -> tuple[NDArray[np.flo
     if name == "nearest":
         tap = math.floor(place + 1e-9) if library == "opencv" else math.floor(place + 0.5 + 1e-9)
         return np.array([float(tap)]), np.ones(1)
+    if name == "area" and ratio < 1:
+        # An area below one pixel is no average: such a rate is made by straight lines between samples.
+        kernel, name = "opencv-linear", "linear"
     if name == "area":
         low, high = place - ratio / 2, place + ratio / 2
         taps = np.arange(math.floor(low + 0.5), math.ceil(high + 0.5)).astype(float)
