@@ -14,7 +14,7 @@ from functools import lru_cache
 import numpy as np
 from numpy.typing import NDArray
 
-from moire.spectrum import tile_means, tile_phasors
+from moire.patches import Codes, cut_patches, patch_phasors, strong_tiles
 
 _LEAST_GAIN = 0.15
 _TONE_FLOOR = 20.0
@@ -68,17 +68,13 @@ def _shares() -> NDArray[np.float64]:
 
 
 def read_chroma(
-    channels: NDArray[np.float32],
-    frequencies: NDArray[np.float64],
-    weights: NDArray[np.float32],
-    *,
-    size: int,
+    codes: Codes, frequencies: NDArray[np.float64], weights: NDArray[np.float32], *, size: int
 ) -> tuple[ChromaReading, ...]:
     """Chroma of each line, read where halved chroma resolution folds it.
 
     Parameters
     ----------
-    channels : ndarray, shape (rows, columns, 3)
+    codes : ndarray, shape (rows, columns, 3)
         RGB code values on a 0..255 scale.
     frequencies : ndarray, shape (n, 2)
         ``(fx, fy)`` in cycles per pixel, within half a cycle.
@@ -87,20 +83,22 @@ def read_chroma(
     size : int
         Tile side of the weights.
     """
-    ycc = (channels @ _TO_YCC.T.astype(np.float32)).astype(np.float32)
     beyond = np.abs(frequencies) > 0.25
     shift = -0.5 * np.sign(frequencies) * beyond
-    luma = tile_phasors(ycc[..., :1], frequencies, size=size)[0][..., 0]
-    chroma = tile_phasors(ycc[..., 1:], frequencies + shift, size=size)[0]
     # The chroma grid lies half a pixel off: a quarter turn of phase for each folded axis.
     turn = np.prod(np.where(beyond, -1j * np.sign(frequencies), 1), axis=1)
     gain = np.maximum(np.abs(np.cos(np.pi * frequencies)).prod(axis=1), _LEAST_GAIN)
-    tone = tile_means(channels, size=size)
     out = []
-    for y, c, back, weight in zip(luma, chroma, turn / gain, weights, strict=True):
-        reference = weight * np.conj(y) / np.maximum(np.abs(y), 1e-9)
-        strength = max(float((np.abs(y) * weight).sum()), 1e-9)
-        seen = np.real((c * back * reference[..., None]).sum(axis=(0, 1))) / strength
-        mean = (tone * weight[..., None]).sum(axis=(0, 1)) / max(float(weight.sum()), 1e-9)
+    for f, moved, back, weight in zip(frequencies, frequencies + shift, turn / gain, weights, strict=True):
+        tiles = strong_tiles(weight)
+        patches = cut_patches(codes, tiles, size=size)
+        v, tone = patch_phasors(patches, np.stack([f, moved]))
+        luma, chroma = v[0] @ _TO_YCC[0], v[1] @ _TO_YCC[1:].T
+        # Patches start on even pixels, so the folding keeps its phase from one to the next.
+        share = weight[tuple(tiles.T)]
+        reference = share * np.conj(luma) / np.maximum(np.abs(luma), 1e-9)
+        strength = max(float((np.abs(luma) * share).sum()), 1e-9)
+        seen = np.real((chroma * back * reference[:, None]).sum(axis=0)) / strength
+        mean = (tone * share[:, None]).sum(axis=0) / max(float(share.sum()), 1e-9)
         out.append(ChromaReading(chroma=seen, tone=mean))
     return tuple(out)

@@ -77,10 +77,9 @@ def prepare(image: NDArray[np.float32], lattices: Sequence[ScreenLattice]) -> Pr
     shares = np.zeros((channels, len(kept)))
     if kept and min(image.shape[:2]) >= 2 * _TILE:
         at = np.array([k for g in kept for k in (g.k1, g.k2)])
-        phasors, _, _ = tile_phasors(image, at, size=_TILE)
-        level = (
-            np.sqrt((np.abs(phasors) ** 2).mean(axis=(1, 2))).reshape(len(kept), 2, channels).max(axis=1).T
-        )
+        planes = [np.ascontiguousarray(image[..., c]) for c in range(channels)]
+        phasors = np.stack([tile_phasors(plane, at, size=_TILE)[0] for plane in planes])
+        level = np.sqrt((np.abs(phasors) ** 2).mean(axis=(2, 3))).reshape(channels, len(kept), 2).max(axis=2)
         loudest = level.max(axis=1, keepdims=True)
         strong = level > np.maximum(_STRONG[0], _STRONG[1] * loudest)
         faint = level > np.maximum(_FAINT[0], _FAINT[1] * loudest)

@@ -6,17 +6,15 @@ import math
 from dataclasses import replace
 from typing import Literal
 
-import numpy as np
-
 import moire
 from moire.findings import group_lines
-from moire.measures import line_levels
+from moire.measures import levels_where_strong
 from moire.model import Examination, Finding, Line, Scan, Viewing
 from moire.peaks import Peak
-from moire.samples import rgb_codes, tile_size
+from moire.samples import tile_size
 from moire.survey import Survey, take_survey
 from moire.verdict import judge
-from moire.vision import lightness, viewing_condition, visibility
+from moire.vision import viewing_condition, visibility
 
 
 def examine(
@@ -71,7 +69,7 @@ def examine(
 def _survey(scan: Scan) -> Survey | None:
     """What a scan holds; None where it is too small to hold a tile."""
     size = tile_size(scan)
-    return take_survey(scan, rgb_codes(scan), size) if size else None
+    return take_survey(scan, size) if size else None
 
 
 def _weigh(survey: Survey, second: Survey | None, condition: Viewing) -> tuple[Finding, ...]:
@@ -80,12 +78,7 @@ def _weigh(survey: Survey, second: Survey | None, condition: Viewing) -> tuple[F
     used = [peak for group in groups for peak, _ in group.lines]
     levels = {}
     if used:
-        amplitude, _, mean, _ = line_levels(
-            lightness(survey.channels),
-            np.array([p.f for p in used]),
-            np.stack([p.weight for p in used]),
-            size=survey.size,
-        )
+        amplitude, mean = levels_where_strong(survey.codes, used, size=survey.size)
         levels = {id(p): (float(a), float(m)) for p, a, m in zip(used, amplitude, mean, strict=True)}
     out = []
     for group in groups:

@@ -9,12 +9,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from moire.beats import rosette_parents
+from moire.blocks import BlockGrid
 from moire.folds import Fold, judge_folds
-from moire.grids import BlockGrid, sort_line
+from moire.grids import find_line_screen, sort_line
 from moire.lattice import Lattice
 from moire.model import Finding, Ink, Kind, Scan
 from moire.peaks import Peak
-from moire.screens import name_inks, on_axis, order_of
+from moire.screens import measure_line_screen, name_inks, name_line_ink, on_axis, order_of
 from moire.survey import Survey
 from moire.weaves import Threads, find_threads, measure_weave
 
@@ -34,7 +35,9 @@ def group_lines(survey: Survey, second: Survey | None = None) -> list[Group]:
     """Findings without visibility, screens first, then what remains."""
     inks = name_inks(survey.lattices, survey.chroma)
     folds = judge_folds(survey, inks, second)
-    groups = [_screen_group(survey, *each) for each in zip(survey.lattices, inks, folds, strict=True)]
+    groups = [
+        _screen_group(survey, *each) for each in zip(survey.lattices, survey.drifts, inks, folds, strict=True)
+    ]
     taken = {id(p) for g in survey.lattices for p in (g.first, g.second)}
     rest = []
     for peak in survey.peaks:
@@ -51,6 +54,12 @@ def group_lines(survey: Survey, second: Survey | None = None) -> list[Group]:
     if threads is not None:
         groups.append(_cloth_group(survey, threads))
         rest = [p for p in rest if not any(p is m for m in threads.members)]
+    ruled = (
+        () if survey.lattices or threads is not None else find_line_screen(tuple(rest), ppi=survey.scan.ppi)
+    )
+    if ruled:
+        groups.append(_line_screen_group(survey, ruled))
+        rest = [p for p in rest if not any(p is m for m, _ in ruled)]
     merged: dict[tuple[Kind, tuple[int, ...]], Group] = {}
     woven = 0.0 if threads is None else max(p.amplitude for p in threads.members)
     textured = not survey.lattices and _is_texture(rest)
@@ -88,13 +97,18 @@ def _cloth_group(survey: Survey, threads: Threads) -> Group:
     return Group(finding=finding, lines=named)
 
 
-def _screen_group(survey: Survey, lattice: Lattice, ink: Ink, fold: Fold | None) -> Group:
+def _screen_group(survey: Survey, lattice: Lattice, drift: float, ink: Ink, fold: Fold | None) -> Group:
     coverage, regions = _extent(lattice.first.weight, lattice.second.weight, survey.size, survey.scan)
     ppi = survey.scan.ppi
     evidence = [
         f"two lines at right angles within {lattice.squareness_bins / survey.size:.5f} cycles per pixel, "
         f"in step over the page (coherence {lattice.first.coherence:.2f}, {lattice.second.coherence:.2f})"
     ]
+    if drift:
+        evidence = [
+            f"two lines at right angles followed from tile to tile; their frequency drifts by {drift:.1%} "
+            "over the page: a bent leaf, or a photograph taken by hand"
+        ]
     if survey.chroma:
         evidence.append(f"colour read where JPEG's halved chroma folds it: {ink}")
     elif len(lattice.first.colour) == 3:
@@ -118,11 +132,36 @@ def _screen_group(survey: Survey, lattice: Lattice, ink: Ink, fold: Fold | None)
         screen=None if fold is None else fold.screen,
         candidates=() if fold is None else fold.candidates,
         settled=fold is not None and fold.settled,
+        drift=round(drift, 4),
         evidence=tuple(evidence),
     )
     first = replace(lattice.first, f=lattice.k1)
     second = replace(lattice.second, f=lattice.k2)
     return Group(finding=finding, lines=[(first, (1, 0)), (second, (0, 1))])
+
+
+def _line_screen_group(survey: Survey, members: tuple[tuple[Peak, int], ...]) -> Group:
+    peak = members[0][0]
+    coverage, regions = _extent(peak.weight, peak.weight, survey.size, survey.scan)
+    rate = np.array(survey.scan.ppi)
+    ink = name_line_ink(peak.colour)
+    finding = Finding(
+        kind="halftone",
+        confidence=round(float(1 - math.exp(-(peak.z - 4) / 2)), 3),
+        visibility=0.0,
+        coverage=coverage,
+        regions=regions,
+        lines=(),
+        period_px=float(1 / np.hypot(*peak.f)),
+        period_mm=_period_mm(peak.f, survey.scan.ppi),
+        screen=measure_line_screen(peak.f * rate, float(np.max(peak.sigma * rate)), ink=ink),
+        settled=False,
+        evidence=(
+            f"one line and {len(members) - 1} of its multiples, in step (coherence {peak.coherence:.2f}), "
+            "with no partner at right angles: a screen of lines; one scan does not show a fold",
+        ),
+    )
+    return Group(finding=finding, lines=[(p, (order, 0)) for p, order in members])
 
 
 def _leftover(survey: Survey, peak: Peak, rest: tuple[Peak, ...], *, woven: float, textured: bool) -> Group:
@@ -173,9 +212,14 @@ def _block_group(blocks: BlockGrid) -> Group:
         regions=(),
         lines=(),
         period_px=float(blocks.period_px),
-        evidence=(f"steps at every {blocks.period_px} px stand out by {blocks.score:.0f} standard errors",),
+        evidence=(_block_words(blocks),),
     )
     return Group(finding=finding, lines=[])
+
+
+def _block_words(blocks: BlockGrid) -> str:
+    words = f"steps at every {blocks.period_px} px stand out by {blocks.score:.0f} standard errors"
+    return words if blocks.period_px == 8 else words + ": blocks of 8 px, coded before an enlargement by two"
 
 
 def _extent(

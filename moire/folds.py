@@ -9,17 +9,18 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from moire.folding import Unfolded, agree, unfold
+from moire.folding import Unfolded, agree, temper, unfold
 from moire.lattice import Lattice
 from moire.model import Candidate, Ink, Kind, Screen
+from moire.patches import cut_patches, patch_phasors, strong_tiles
 from moire.scanner import srgb_decode
 from moire.screens import SIGNATURES, measure_screen, name_inks
 from moire.settling import settle
-from moire.spectrum import tile_means, tile_phasors
 from moire.survey import Survey
 
 _SETTLED = 0.9
 _EDGE_CPP = 0.005
+_STRIDE = 5
 _MIDDLE_TONES = (0.08, 0.92)
 _NEXT = "a second scan at another ppi, or with the sheet turned by 5 degrees, settles it (--second)"
 
@@ -72,9 +73,10 @@ def judge_folds(survey: Survey, inks: Sequence[Ink], second: Survey | None = Non
 def _weigh(survey: Survey, ppi: tuple[float, float], inks: Sequence[Ink]) -> tuple[tuple[Unfolded, ...], ...]:
     alone = len(survey.lattices) == 1
     contrasts = [_contrast(survey, g, ink) for g, ink in zip(survey.lattices, inks, strict=True)]
-    return agree(
+    print_of = agree(
         [unfold(g.k1, ppi, contrast=c, alone=alone) for g, c in zip(survey.lattices, contrasts, strict=True)]
     )
+    return tuple(temper(options) for options in print_of)
 
 
 def _judge(
@@ -126,30 +128,29 @@ def _contrast(survey: Survey, lattice: Lattice, ink: Ink) -> float | None:
     In the channel that the ink takes most of, or in luma with the ink's share of it. None where
     the tone is so light or dark that the expected modulation is itself uncertain.
     """
-    channels, size = survey.channels, survey.size
+    codes = survey.codes
+    weight = np.minimum(lattice.first.weight, lattice.second.weight)
+    tiles = strong_tiles(np.where(weight >= 0.5 * weight.max(), weight, 0))
+    patches = srgb_decode(cut_patches(codes, tiles, size=survey.size) / 255).astype(np.float32)
+    sample = srgb_decode(codes[::_STRIDE, ::_STRIDE].astype(np.float32) / 255).astype(np.float32)
     # A codec that halved the chroma leaves a coloured ink only its luma to be judged by.
     if survey.chroma:
         if ink == "unknown":
             return None
         luma = np.array([0.2126, 0.7152, 0.0722], np.float32)
         taken = float(luma @ np.array(SIGNATURES[ink], np.float32))
-        plane = srgb_decode(channels / 255).astype(np.float32) @ luma
     else:
-        channel, taken = int(np.argmax(lattice.first.colour)), 1.0
-        plane = srgb_decode(channels[..., channel] / 255).astype(np.float32)
-    plane = plane[..., None]
-    phasors, _, _ = tile_phasors(plane, np.stack([lattice.k1, lattice.k2]), size=size)
-    tone = tile_means(plane, size=size)[..., 0]
-    white = max(float(np.percentile(plane, 99)), 1e-6)
+        luma = np.eye(codes.shape[2], dtype=np.float32)[int(np.argmax(lattice.first.colour))]
+        taken = 1.0
+    white = max(float(np.percentile(sample @ luma, 99)), 1e-6)
+    phasors, tone = patch_phasors((patches @ luma)[..., None], np.stack([lattice.k1, lattice.k2]))
     swing = np.abs(phasors[..., 0]).max(axis=0)
-    weight = np.minimum(lattice.first.weight, lattice.second.weight)
-    strong = weight >= max(0.5 * float(weight.max()), 1e-6)
-    share = (1 - tone[strong] / white) / taken
+    share = (1 - tone[:, 0] / white) / taken
     middle = (share > _MIDDLE_TONES[0]) & (share < _MIDDLE_TONES[1])
     if middle.sum() < 3:
         return None
     expected = 2 * _disc_coefficient(share[middle]) * white * taken
-    return float(np.median(swing[strong][middle] / np.maximum(expected, 1e-6)))
+    return float(np.median(swing[middle] / np.maximum(expected, 1e-6)))
 
 
 def _disc_coefficient(share: NDArray[np.floating]) -> NDArray[np.float64]:

@@ -1,81 +1,22 @@
-"""Grids that are not screens: JPEG blocks, scanner banding, printed content on the axes."""
+"""Lines that are of no screen: block codecs, scanner banding, printed content on the axes."""
 
 from __future__ import annotations
-
-import math
-from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
+from moire.blocks import BlockGrid
 from moire.lattice import grid_distance
 from moire.model import Kind
 from moire.peaks import Peak
 from moire.screens import on_axis
 
-BLOCK_SCORE = 8.0
-_STEP_LIMIT = 12.0
 _TEXT_CPI = 14.0
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class BlockGrid:
-    """Evidence of a block transform's grid.
-
-    Attributes
-    ----------
-    period_px : int
-    phase : (int, int)
-        First block edge along x and y.
-    score : float
-        Robust standard errors by which block edges stand out, the smaller of the two axes.
-    step : float
-        Excess step at the block edges, code values.
-    """
-
-    period_px: int
-    phase: tuple[int, int]
-    score: float
-    step: float
-
-
-def find_block_grid(image: NDArray[np.float32], period: int = 8) -> BlockGrid:
-    """Step between neighbouring columns and rows, folded by the block size.
-
-    The second difference of the column-to-column step, clipped, is averaged down the page;
-    block edges raise it at one phase of the period (ISO/IEC 10918-1 codes 8 x 8 blocks).
-    """
-    axes = [_edge_profile(image, axis=axis) for axis in (1, 0)]
-    results = [_fold_profile(profile, period) for profile in axes]
-    score = min(r[0] for r in results)
-    step = float(np.mean([r[2] for r in results]))
-    return BlockGrid(period_px=period, phase=(results[0][1], results[1][1]), score=score, step=step)
-
-
-def _edge_profile(image: NDArray[np.float32], *, axis: int) -> NDArray[np.float64]:
-    from scipy import ndimage
-
-    step = np.diff(image, axis=axis)
-    if axis == 0:
-        step = step.T
-    middle = np.abs(step[:, 1:-1] - 0.5 * (step[:, :-2] + step[:, 2:]))
-    profile = np.minimum(middle, _STEP_LIMIT).mean(axis=0, dtype=np.float64)
-    return np.asarray(profile - ndimage.uniform_filter1d(profile, 17, mode="reflect"))
-
-
-def _fold_profile(profile: NDArray[np.float64], period: int) -> tuple[float, int, float]:
-    whole = len(profile) // period
-    if whole < 4:
-        return 0.0, 0, 0.0
-    folded = profile[: whole * period].reshape(whole, period)
-    level = np.median(folded, axis=0)
-    best = int(np.argmax(level))
-    others = np.delete(level, best)
-    spread = 1.4826 * np.median(np.abs(folded - level))
-    error = max(float(spread) * math.sqrt(1.57 / whole), 1e-6)
-    # Profile entry j lies between columns j + 1 and j + 2.
-    rise = float(level[best] - np.median(others))
-    return rise / error, (best + 2) % period, rise
+# Laid lines of papers, 7 to 14 per cm (codicology handbooks, value from memory).
+_LAID_CPI = (7 * 2.54, 14 * 2.54)
+_IN_STEP = 0.97
+_FAINT = 8.0
+_USUAL_LPI = (40.0, 320.0)
 
 
 def sort_line(
@@ -95,22 +36,63 @@ def sort_line(
     f = peak.f
     if blocks is not None and _on_multiples(f, 1 / blocks.period_px, peak.bin_cpp):
         return "block-grid", f"lies on a multiple of 1/{blocks.period_px} cycles per pixel"
+    along = 0 if abs(f[0]) > abs(f[1]) else 1
+    frequency = float(np.hypot(*f))
+    cpi = frequency * ppi[along] if ppi else None
     spread_over = float((peak.weight > 0.3).mean())
+    laid = cpi is not None and _LAID_CPI[0] <= cpi <= _LAID_CPI[1] and peak.coherence < _IN_STEP
+    harmonic = any(
+        on_axis(o.f) and _is_multiple(float(f[along]), float(o.f[along]), peak.bin_cpp) for o in others
+    )
+    laid = laid and not harmonic and spread_over > 0.5 and peak.amplitude < _FAINT
+    if laid and cpi is not None and on_axis(f, within_deg=4):
+        return "laid-lines", f"a faint line of {cpi / 2.54:.1f} per cm that wanders: a paper mould's wires"
     if on_axis(f):
-        frequency = float(np.hypot(*f))
-        along = 0 if abs(f[0]) > abs(f[1]) else 1
-        cpi = frequency * ppi[along] if ppi else None
         comb = sum(
             1 for o in others if on_axis(o.f) and _is_multiple(float(o.f[along]), float(f[along]), o.bin_cpp)
         )
-        if comb >= 2 or (cpi is not None and cpi < _TEXT_CPI) or peak.amplitude > 8:
+        if comb >= 2 or (cpi is not None and cpi < _TEXT_CPI) or peak.amplitude > _FAINT:
             return "content", "on an axis with its own harmonics or at the pitch of text lines or rules"
-        if peak.coherence > 0.97 and spread_over > 0.6 and not peak.doubled:
-            return "banding", "a single line on a scanner axis, in step over the whole page"
+        if peak.coherence > _IN_STEP and spread_over > 0.6 and not peak.doubled:
+            period = f" ({25.4 / cpi:.3f} mm)" if cpi else ""
+            way = "columns" if along == 0 else "scan lines"
+            return "banding", f"a line every {1 / frequency:.2f} {way}{period}, in step over the whole page"
         return "content", "on an axis but not in step over the page"
     if peak.coherence > 0.95 and peak.z > 8 and not peak.doubled:
         return "unexplained", "a coherent line that no screen, beat or grid explains"
     return "content", "textured subject matter: the phase wanders over the page"
+
+
+def find_line_screen(
+    peaks: tuple[Peak, ...], *, ppi: tuple[float, float] | None
+) -> tuple[tuple[Peak, int], ...]:
+    """A screen of lines among lines that no lattice explains: its fundamental and harmonics.
+
+    The strongest line off the axes, in step over the page, of a usual ruling, if it and its
+    multiples hold most of the energy; each with its order. Empty if there is none.
+    """
+    oblique = [p for p in peaks if not on_axis(p.f, within_deg=2) and p.coherence > _IN_STEP]
+    if ppi is None or not oblique:
+        return ()
+    first = max(oblique, key=lambda p: p.amplitude)
+    ruling = float(np.hypot(first.f[0] * ppi[0], first.f[1] * ppi[1]))
+    if first.doubled or not _USUAL_LPI[0] <= ruling <= _USUAL_LPI[1] or first.amplitude < _FAINT / 4:
+        return ()
+    members = [(first, 1)]
+    for peak in peaks:
+        order = next((m for m in range(2, 7) if _is_at(peak, m * first.f)), None)
+        if peak is not first and order is not None:
+            members.append((peak, order))
+    # Text and rules on the axes may lie beside it on the page.
+    energy = sum(p.amplitude**2 for p in peaks if not on_axis(p.f))
+    mine = sum(p.amplitude**2 for p, _ in members if not on_axis(p.f))
+    harmonics = len(members) > 1 or first.amplitude > _FAINT
+    return tuple(members) if harmonics and mine > 0.8 * energy else ()
+
+
+def _is_at(peak: Peak, place: NDArray[np.float64]) -> bool:
+    slack = 1.0 if peak.doubled else 0.2
+    return bool(grid_distance(peak.f, place) < slack * peak.bin_cpp)
 
 
 def _on_multiples(f: NDArray[np.float64], unit: float, bin_cpp: float) -> bool:

@@ -48,9 +48,9 @@ def wrap(f: NDArray[np.float64]) -> NDArray[np.float64]:
 
 def grid_distance(a: NDArray[np.float64], b: NDArray[np.float64]) -> NDArray[np.float64]:
     """Distance of two frequencies modulo the sampling grid and sign, cycles per pixel."""
-    same = np.linalg.norm(wrap(a - b), axis=-1)
-    opposite = np.linalg.norm(wrap(a + b), axis=-1)
-    return np.asarray(np.minimum(same, opposite))
+    same, opposite = wrap(a - b), wrap(a + b)
+    least = np.minimum(same[..., 0] ** 2 + same[..., 1] ** 2, opposite[..., 0] ** 2 + opposite[..., 1] ** 2)
+    return np.asarray(np.sqrt(least))
 
 
 def quarter_turn(f: NDArray[np.float64], aspect: tuple[float, float] = (1.0, 1.0)) -> NDArray[np.float64]:

@@ -2,10 +2,15 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import numpy as np
 from numpy.typing import NDArray
 
+from moire.patches import Codes, cut_patches, patch_phasors, strong_tiles
+from moire.peaks import Peak
 from moire.spectrum import tile_means, tile_phasors
+from moire.vision import lightness
 
 _EDGES = 300
 
@@ -40,8 +45,7 @@ def line_levels(
     weights : ndarray
         The weights used.
     """
-    image = plane[..., None]
-    v = np.abs(tile_phasors(image, frequencies, size=size)[0][..., 0])
+    v = np.abs(tile_phasors(plane, frequencies, size=size)[0])
     if weights is None:
         sought = v if inside is None else np.where(inside, v, np.nan)
         strong = np.nanquantile(sought, 0.95, axis=(1, 2), keepdims=True)
@@ -52,11 +56,41 @@ def line_levels(
     ring = 4 / size * np.array([(np.cos(a), np.sin(a)) for a in np.pi * np.arange(8) / 4])
     around = np.zeros(len(frequencies))
     for offset in ring:
-        side = np.abs(tile_phasors(image, frequencies + offset, size=size)[0][..., 0])
+        side = np.abs(tile_phasors(plane, frequencies + offset, size=size)[0])
         around += (side**2 * weights).sum(axis=(1, 2)) / total
-    tone = tile_means(image, size=size)[..., 0]
+    tone = tile_means(plane, size=size)
     mean = (tone[None] * weights).sum(axis=(1, 2)) / total
     return amplitude, np.sqrt(around / 8), mean, weights
+
+
+def levels_where_strong(
+    codes: Codes, peaks: Sequence[Peak], *, size: int
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """L* swing of each line, and the mean L* under it, in tiles that carry it well.
+
+    A line in step over the page is added up in step, so that picture detail at its frequency
+    does not count.
+
+    Parameters
+    ----------
+    codes : ndarray, shape (rows, columns, channels)
+        Code values on a 0..255 scale.
+    peaks : sequence of Peak
+    size : int
+        Tile side of the peaks' weights.
+    """
+    swing, tone = np.zeros(len(peaks)), np.zeros(len(peaks))
+    for i, peak in enumerate(peaks):
+        tiles = strong_tiles(peak.weight)
+        patches = cut_patches(codes, tiles, size=size)
+        light = lightness(patches.reshape(-1, size, codes.shape[2])).reshape(-1, size, size, 1)
+        v, means = patch_phasors(light, peak.f[None])
+        turn = np.exp(-2j * np.pi * (size // 2) * (tiles[:, 1] * peak.f[0] + tiles[:, 0] * peak.f[1]))
+        in_step = abs((v[0, :, 0] * turn).mean())
+        apart = np.abs(v[0, :, 0]).mean()
+        swing[i] = in_step / peak.coherence if peak.coherence > 0.97 and not peak.doubled else apart
+        tone[i] = means.mean()
+    return swing, tone
 
 
 def edge_energy(before: NDArray[np.float32], after: NDArray[np.float32]) -> float | None:

@@ -151,7 +151,8 @@ class Finding:
 
     Fields that do not apply are None or empty. ``visibility`` is contrast over the eye's
     threshold at the stated viewing condition, ``coverage`` the share of the page that
-    carries the pattern, ``regions`` boxes ``(x, y, width, height)`` in pixels.
+    carries the pattern, ``regions`` boxes ``(x, y, width, height)`` in pixels, ``drift`` the
+    share by which its frequency changes over the page (0 where one frequency holds it all).
     """
 
     kind: Kind
@@ -166,6 +167,7 @@ class Finding:
     weave: Weave | None = None
     candidates: tuple[Candidate, ...] = ()
     settled: bool = True
+    drift: float = 0.0
     parents: tuple[int, ...] = ()
     evidence: tuple[str, ...] = ()
 

@@ -27,7 +27,12 @@ _LEAST_SWING, _LEAST_SWING_JPEG = 0.1, 0.25
 
 
 def find_lattices(
-    peaks: tuple[Peak, ...], *, size: int, aspect: tuple[float, float] = (1.0, 1.0), jpeg: bool = False
+    peaks: tuple[Peak, ...],
+    *,
+    size: int,
+    aspect: tuple[float, float] = (1.0, 1.0),
+    jpeg: bool = False,
+    slack: float = 1.0,
 ) -> tuple[Lattice, ...]:
     """Screens' lattices that no combination of the others explains, strongest first.
 
@@ -41,8 +46,10 @@ def find_lattices(
         ppi of each axis over a common rate; (1, 1) when unknown.
     jpeg : bool
         Whether images of the 8-px block grid are to be expected.
+    slack : float
+        How much further from a square than usual a pair may be.
     """
-    pairs = _pairs(peaks, size, aspect)
+    pairs = _pairs(peaks, size, aspect, slack)
     if not pairs:
         return ()
     # As printed, before the scanner's blur: a faint low line is not a screen beside a blurred one.
@@ -104,7 +111,7 @@ def missing_partners(
     return tuple(out)
 
 
-def _pairs(peaks: tuple[Peak, ...], size: int, aspect: tuple[float, float]) -> list[Lattice]:
+def _pairs(peaks: tuple[Peak, ...], size: int, aspect: tuple[float, float], slack: float) -> list[Lattice]:
     found = []
     for a, b in combinations(range(len(peaks)), 2):
         p, q = peaks[a], peaks[b]
@@ -115,7 +122,7 @@ def _pairs(peaks: tuple[Peak, ...], size: int, aspect: tuple[float, float]) -> l
         bins = error * size
         ratio = max(p.amplitude, q.amplitude) / max(min(p.amplitude, q.amplitude), 1e-9)
         cosine = alike(p.colour, q.colour)
-        allowed = max(_PAIR_BINS, _PAIR_SHARE * size * float(np.hypot(*k1)))
+        allowed = slack * max(_PAIR_BINS, _PAIR_SHARE * size * float(np.hypot(*k1)))
         plain = bins <= allowed and ratio <= 3 and cosine > 0.90
         elliptic = bins <= allowed / 3.5 and ratio <= 9 and cosine > 0.97
         if not (plain or elliptic) or overlap(p.weight, q.weight) < 0.3:

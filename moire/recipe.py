@@ -78,7 +78,10 @@ def prescribe(
 
 def _removals(finding: Finding) -> list[Removal]:
     by_order = {line.order: (line.fx_cpp, line.fy_cpp) for line in finding.lines}
-    if finding.kind in _SCREENS:
+    if finding.drift:
+        # One lattice for the whole page would miss a drifting screen.
+        return []
+    if finding.kind in _SCREENS and (0, 1) in by_order:
         ink = finding.screen.ink if finding.screen else "unknown"
         vectors = (by_order[(1, 0)], by_order[(0, 1)])
         return [Removal(kind=finding.kind, method="descreen", vectors_cpp=vectors, ink=ink)]

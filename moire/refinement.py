@@ -11,21 +11,20 @@ from dataclasses import replace
 import numpy as np
 from numpy.typing import NDArray
 
+from moire.patches import Codes, cut_patches, patch_phasors, strong_tiles
 from moire.peaks import Candidate, Peak
-from moire.spectrum import tile_means, tile_phasors
+from moire.spectrum import tile_phasors
 
 _TONE_FLOOR = 20.0
 
 
-def refine(
-    channels: NDArray[np.float32], candidates: tuple[Candidate, ...], *, size: int
-) -> tuple[Peak, ...]:
+def refine(image: NDArray[np.float32], candidates: tuple[Candidate, ...], *, size: int) -> tuple[Peak, ...]:
     """Peaks of the candidate bins, refined by the phases of half-overlapped tiles.
 
     Parameters
     ----------
-    channels : ndarray, shape (rows, columns, channels)
-        Code values on a 0..255 scale.
+    image : ndarray, shape (rows, columns)
+        Code values on a 0..255 scale, mean of channels.
     candidates : tuple of Candidate
         Bins of a spectrum of tiles of `size`.
     size : int
@@ -34,15 +33,14 @@ def refine(
     if not candidates:
         return ()
     bins = np.array([(c.kx / size, c.ky / size) for c in candidates])
-    phasors, x, y = tile_phasors(channels, bins, size=size)
-    tone = tile_means(channels, size=size)
+    phasors, x, y = tile_phasors(image, bins, size=size)
     return tuple(
-        _refine_one(candidate, f0, v, tone, x, y, size)
+        _refine_one(candidate, f0, v, x, y, size)
         for candidate, f0, v in zip(candidates, bins, phasors, strict=True)
     )
 
 
-def polish(channels: NDArray[np.float32], peaks: tuple[Peak, ...], *, size: int) -> tuple[Peak, ...]:
+def polish(image: NDArray[np.float32], peaks: tuple[Peak, ...], *, size: int) -> tuple[Peak, ...]:
     """Peaks with frequencies refined once more on tiles of another `size` (finer is better).
 
     On true prints the tone under the screen limits the phase, and a smaller aperture sees
@@ -51,14 +49,36 @@ def polish(channels: NDArray[np.float32], peaks: tuple[Peak, ...], *, size: int)
     if not peaks:
         return ()
     at = np.array([p.f for p in peaks])
-    phasors, x, y = tile_phasors(channels, at, size=size)
+    phasors, x, y = tile_phasors(image, at, size=size)
     out = []
     for peak, f0, v in zip(peaks, at, phasors, strict=True):
-        mixed = v.mean(axis=2)
-        weighted, _ = _soft_clip(mixed)
+        weighted, _ = _soft_clip(v)
         step, sigma, _ = _climb(weighted**2 if peak.doubled else weighted, x, y)
         scale = 2 if peak.doubled else 1
         out.append(replace(peak, f=f0 + step / scale, sigma=sigma / scale))
+    return tuple(out)
+
+
+def with_colours(codes: Codes, peaks: tuple[Peak, ...], *, size: int) -> tuple[Peak, ...]:
+    """Peaks with the modulation of each channel, measured where each is strong.
+
+    Parameters
+    ----------
+    codes : ndarray, shape (rows, columns, channels)
+        Code values on a 0..255 scale.
+    peaks : tuple of Peak
+    size : int
+        Tile side of the peaks' weights.
+    """
+    out = []
+    for peak in peaks:
+        tiles = strong_tiles(peak.weight)
+        (v,), tone = patch_phasors(cut_patches(codes, tiles, size=size), peak.f[None])
+        reference = v.mean(axis=1, keepdims=True)
+        unit = peak.weight[tuple(tiles.T)][:, None] * np.conj(reference) / np.maximum(np.abs(reference), 1e-9)
+        # Ink absorbs a share of the light, so the swing is taken over the local tone.
+        colour = np.real(v * unit / (tone + _TONE_FLOOR)).sum(axis=0)
+        out.append(replace(peak, colour=colour / max(float(np.abs(colour).mean()), 1e-9)))
     return tuple(out)
 
 
@@ -66,13 +86,11 @@ def _refine_one(
     candidate: Candidate,
     f0: NDArray[np.float64],
     v: NDArray[np.complex64],
-    tone: NDArray[np.float32],
     x: NDArray[np.float64],
     y: NDArray[np.float64],
     size: int,
 ) -> Peak:
-    mixed = v.mean(axis=2)
-    weighted, weight = _soft_clip(mixed)
+    weighted, weight = _soft_clip(v)
     step, sigma, coherence = _climb(weighted, x, y)
     doubled = False
     if coherence < 0.9:
@@ -80,14 +98,7 @@ def _refine_one(
         twice, twice_sigma, twice_coherence = _climb(np.abs(weighted) * unit**2, x, y)
         if twice_coherence > max(0.9, coherence + 0.1):
             doubled, step, sigma, coherence = True, twice / 2, twice_sigma / 2, twice_coherence
-    demodulated = v * np.exp(-2j * np.pi * (step[0] * x[None, :] + step[1] * y[:, None]))[..., None]
-    reference = demodulated.mean(axis=2)
-    unit_reference = weight * np.conj(reference) / np.maximum(np.abs(reference), 1e-9)
-    # Ink absorbs a share of the light, so the swing is taken over the local tone.
-    relative = demodulated * unit_reference[..., None] / (tone + _TONE_FLOOR)
-    colour = np.real(relative.sum(axis=(0, 1)))
-    strong = np.abs(mixed)
-    amplitude = float((strong * weight).sum() / max(weight.sum(), 1e-9))
+    amplitude = float((np.abs(v) * weight).sum() / max(weight.sum(), 1e-9))
     return Peak(
         f=f0 + step,
         sigma=sigma,
@@ -100,7 +111,7 @@ def _refine_one(
         tiles=float((weight > 0.4).sum()),
         bin_cpp=1 / size,
         off_bin=float(np.hypot(*step) * size),
-        colour=colour / max(float(np.abs(colour).mean()), 1e-9),
+        colour=np.ones(1),
         weight=weight.astype(np.float32),
     )
 

@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from moire.model import Scan
+from moire.patches import Codes
 
 
 def rgb_codes(scan: Scan) -> NDArray[np.float32]:
@@ -17,6 +18,24 @@ def rgb_codes(scan: Scan) -> NDArray[np.float32]:
         # Without its profile a CMYK file is shown as ink amounts that multiply.
         values = (255 - values[..., :3]) * (1 - values[..., 3:4] / 255)
     return np.ascontiguousarray(values[..., None] if values.ndim == 2 else values)
+
+
+def code_planes(scan: Scan) -> Codes:
+    """The same codes as `rgb_codes`, left in bytes where the scan has them so."""
+    if scan.mode == "cmyk" or scan.pixels.dtype != np.uint8:
+        return rgb_codes(scan)
+    return scan.pixels[..., None] if scan.pixels.ndim == 2 else scan.pixels
+
+
+def mixed_plane(codes: Codes) -> NDArray[np.float32]:
+    """Mean of the channels, shape (rows, columns): one plane that sees every ink."""
+    count = codes.shape[2]
+    if codes.dtype != np.uint8:
+        return np.asarray(codes.mean(axis=2), np.float32)
+    total = codes[..., 0].astype(np.uint16)
+    for c in range(1, count):
+        total += codes[..., c].astype(np.uint16)
+    return total.astype(np.float32) * np.float32(1 / count)
 
 
 def tile_size(scan: Scan) -> int:

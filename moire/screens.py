@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from functools import lru_cache
 from itertools import permutations
 
 import numpy as np
@@ -16,6 +17,9 @@ from moire.units import fold_angle, lpi_to_lpcm, page_angle
 
 _ALIKE = 0.85
 _COLOUR_NOISE = 0.1
+# Tone under a screen disturbs neighbouring tiles alike, which their scatter shows too little of; and
+# no sampling grid is known better than to a few millionths (both from prints used for tuning).
+_SIGMA_SCALE, _GRID_SIGMA = 1.25, 4e-6
 _NAMED_ODDS = 0.4
 # One reading spoilt by another pattern must not force the names of the rest.
 _MISFIT_LIMIT = 30.0
@@ -116,17 +120,39 @@ def measure_screen(
     angle = fold_angle(a1 + gap * w2 / (w1 + w2), 90)
     noise = 1 / math.sqrt(w1 + w2)
     # Two vectors that disagree beyond their noise show a stretch that neither alone reveals.
-    ruling_sigma = max(noise, abs(r1 - r2) / 2 / math.sqrt(2))
-    angle_sigma = max(math.degrees(noise / ruling), abs(gap) / 2 / math.sqrt(2))
+    ruling_sigma = max(noise, abs(r1 - r2) / 2 / math.sqrt(2)) * _SIGMA_SCALE
+    angle_sigma = max(math.degrees(noise / ruling), abs(gap) / 2 / math.sqrt(2)) * _SIGMA_SCALE
     return Screen(
         ruling_lpi=ruling,
-        ruling_lpi_sigma=ruling_sigma,
+        ruling_lpi_sigma=math.hypot(ruling_sigma, _GRID_SIGMA * ruling),
         ruling_lpcm=lpi_to_lpcm(ruling),
         angle_deg=angle,
-        angle_deg_sigma=angle_sigma,
+        angle_deg_sigma=math.hypot(angle_sigma, math.degrees(_GRID_SIGMA)),
         ink=ink,
         shape="dot",
     )
+
+
+def measure_line_screen(k_cpi: NDArray[np.float64], sigma_cpi: float, *, ink: Ink) -> Screen:
+    """Ruling and angle of a screen of lines; the angle is the direction across the lines, [0, 180)."""
+    ruling = float(np.hypot(*k_cpi))
+    return Screen(
+        ruling_lpi=ruling,
+        ruling_lpi_sigma=math.hypot(sigma_cpi * _SIGMA_SCALE, _GRID_SIGMA * ruling),
+        ruling_lpcm=lpi_to_lpcm(ruling),
+        angle_deg=fold_angle(page_angle(*k_cpi), 180),
+        angle_deg_sigma=math.degrees(math.hypot(sigma_cpi * _SIGMA_SCALE / ruling, _GRID_SIGMA)),
+        ink=ink,
+        shape="line",
+    )
+
+
+def name_line_ink(colour: NDArray[np.float64]) -> Ink:
+    """Nearest ink by colour of a single line; black in a grey scan."""
+    if len(colour) != 3:
+        return "black"
+    best = max(SIGNATURES, key=lambda ink: _cosine(colour, SIGNATURES[ink]))
+    return best if _cosine(colour, SIGNATURES[best]) > _ALIKE else "unknown"
 
 
 def is_halftone(lattice: Lattice, lattices: tuple[Lattice, ...], peaks: tuple[Peak, ...], size: int) -> bool:
@@ -177,10 +203,18 @@ def order_of(
     f: NDArray[np.float64], lattice: Lattice, tolerance: float, *, limit: int
 ) -> tuple[int, int] | None:
     """Integer order (m, n) of a line on a lattice, folded on the sampling grid, lowest first."""
-    for total in range(1, limit + 1):
-        for m in range(-total, total + 1):
-            for n in {total - abs(m), abs(m) - total}:
-                place = wrap(m * lattice.k1 + n * lattice.k2)
-                if grid_distance(f, place) < tolerance * (1 + total / 4):
-                    return (m, n)
-    return None
+    orders, total = _orders_up_to(limit)
+    place = wrap(orders[:, :1] * lattice.k1 + orders[:, 1:] * lattice.k2)
+    near = np.flatnonzero(grid_distance(f, place) < tolerance * (1 + total / 4))
+    return (int(orders[near[0], 0]), int(orders[near[0], 1])) if near.size else None
+
+
+@lru_cache(maxsize=8)
+def _orders_up_to(limit: int) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+    """Orders (m, n) with 1 <= |m| + |n| <= limit, lowest first, and their sums."""
+    at = np.arange(-limit, limit + 1)
+    orders = np.stack(np.meshgrid(at, at, indexing="ij"), axis=-1).reshape(-1, 2)
+    total = np.abs(orders).sum(axis=1)
+    kept = np.flatnonzero((total >= 1) & (total <= limit))
+    kept = kept[np.argsort(total[kept], kind="stable")]
+    return orders[kept], total[kept]

@@ -94,13 +94,13 @@ def tile_spectrum(image: NDArray[np.float32], *, size: int, pitch: int) -> Spect
 
 
 def tile_phasors(
-    channels: NDArray[np.float32], frequencies: NDArray[np.float64], *, size: int
+    image: NDArray[np.float32], frequencies: NDArray[np.float64], *, size: int
 ) -> tuple[NDArray[np.complex64], NDArray[np.float64], NDArray[np.float64]]:
     """Complex amplitudes of given frequencies in half-overlapped Hann tiles.
 
     Parameters
     ----------
-    channels : ndarray, shape (rows, columns, channels)
+    image : ndarray, shape (rows, columns)
     frequencies : ndarray, shape (n, 2)
         ``(fx, fy)`` in cycles per pixel.
     size : int
@@ -108,42 +108,37 @@ def tile_phasors(
 
     Returns
     -------
-    phasors : ndarray, shape (n, tile rows, tile columns, channels)
+    phasors : ndarray, shape (n, tile rows, tile columns)
         ``A exp(i phi)`` of ``A cos(2 pi f.r + phi)``, phase referred to pixel (0, 0).
     x, y : ndarray
         Tile centres in pixels.
     """
     hop = size // 2
-    rows, columns, _ = channels.shape
-    ny, nx = rows // hop, columns // hop
+    ny, nx = image.shape[0] // hop, image.shape[1] // hop
     window = hann(size) / hann(size).sum()
-    ex = _half_windows(frequencies[:, 0], window, hop, nx)
-    ey = _half_windows(frequencies[:, 1], window, hop, ny)
-    out = np.empty((len(frequencies), ny - 1, nx - 1, channels.shape[2]), np.complex64)
-    for c in range(channels.shape[2]):
-        plane = channels[: ny * hop, : nx * hop, c]
-        plane = plane - plane.mean()
-        segments = plane.reshape(ny * hop * nx, hop)
-        for p in range(len(frequencies)):
-            first, second, shift = ex[0][p], ex[1][p], ex[2][p]
-            parts = segments @ np.column_stack([first.real, first.imag, second.real, second.imag])
-            parts = parts.reshape(ny, hop, nx, 4)
-            along = (parts[:, :, :-1, 0] + 1j * parts[:, :, :-1, 1]) * shift[:-1]
-            along += (parts[:, :, 1:, 2] + 1j * parts[:, :, 1:, 3]) * shift[1:]
-            first, second, shift = ey[0][p], ey[1][p], ey[2][p]
-            upper = np.tensordot(along[:-1], first, axes=(1, 0)) * shift[:-1, None]
-            lower = np.tensordot(along[1:], second, axes=(1, 0)) * shift[1:, None]
-            out[p, :, :, c] = 2 * (upper + lower)
+    first_x, second_x, shift_x = _half_windows(frequencies[:, 0], window, hop, nx)
+    first_y, second_y, shift_y = _half_windows(frequencies[:, 1], window, hop, ny)
+    waves = np.concatenate([first_x.real, first_x.imag, second_x.real, second_x.imag]).T
+    n = len(frequencies)
+    level = image.mean()
+    upper, lower = (np.empty((ny, nx - 1, n), np.complex64) for _ in range(2))
+    for j in range(ny):
+        strip = (image[j * hop : (j + 1) * hop, : nx * hop] - level).reshape(hop * nx, hop)
+        parts = (strip @ waves).reshape(hop, nx, 4 * n)
+        along = (parts[:, :-1, :n] + 1j * parts[:, :-1, n : 2 * n]) * shift_x.T[:-1]
+        along += (parts[:, 1:, 2 * n : 3 * n] + 1j * parts[:, 1:, 3 * n :]) * shift_x.T[1:]
+        upper[j] = np.einsum("yxf,fy->xf", along, first_y) * shift_y[:, j]
+        lower[j] = np.einsum("yxf,fy->xf", along, second_y) * shift_y[:, j]
     x = np.arange(1, nx) * hop - 0.5
     y = np.arange(1, ny) * hop - 0.5
-    return out, x, y
+    return np.ascontiguousarray(2 * (upper[:-1] + lower[1:]).transpose(2, 0, 1)), x, y
 
 
-def tile_means(channels: NDArray[np.float32], *, size: int) -> NDArray[np.float32]:
-    """Mean of each channel in the tiles of `tile_phasors`, shape (tile rows, tile columns, channels)."""
+def tile_means(image: NDArray[np.float32], *, size: int) -> NDArray[np.float32]:
+    """Mean in the tiles of `tile_phasors`, shape (tile rows, tile columns)."""
     hop = size // 2
-    ny, nx = channels.shape[0] // hop, channels.shape[1] // hop
-    cells = channels[: ny * hop, : nx * hop].reshape(ny, hop, nx, hop, -1).mean(axis=(1, 3))
+    ny, nx = image.shape[0] // hop, image.shape[1] // hop
+    cells = image[: ny * hop, : nx * hop].reshape(ny, hop, nx, hop).mean(axis=(1, 3))
     return np.asarray((cells[:-1, :-1] + cells[1:, :-1] + cells[:-1, 1:] + cells[1:, 1:]) / 4)
 
 

@@ -8,19 +8,30 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
+from moire.banding import Band, find_bands
+from moire.blocks import BlockGrid, find_block_grid
 from moire.chroma import ChromaReading, read_chroma
-from moire.grids import BLOCK_SCORE, BlockGrid, find_block_grid
+from moire.drift import SIZE as DRIFT_TILE
+from moire.drift import DriftingLine, find_drifting_lines
 from moire.lattice import Lattice, wrap
 from moire.model import Scan
 from moire.pairing import find_lattices, half_orders, missing_partners
+from moire.patches import Codes
 from moire.peaks import Peak, find_candidates, measure_bins
-from moire.refinement import polish, refine
-from moire.samples import rate_aspect
-from moire.screens import is_halftone
+from moire.refinement import polish, refine, with_colours
+from moire.samples import code_planes, mixed_plane, rate_aspect
+from moire.screens import is_halftone, on_axis
 from moire.spectrum import Spectrum, tile_spectrum
 
 _TILES_AT_MOST = 1200
 _CALLED_Z = 3.0
+# Excess that is worth one robust standard deviation, for a profile's line beside a tile's.
+_NAT_OF_Z = 0.35
+_BANDS_AT_MOST = 3
+# A local map is good to about a tenth of a bin, and a bent page shears its squares.
+_FOLLOWED_COHERENCE, _DRIFT_SLACK = 0.92, 2.5
+_STEADY, _LEAST_DRIFT = 0.97, 0.008
+_BESIDE_AXIS_DEG, _COARSEST_CPP = 3.0, 0.08
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -30,7 +41,7 @@ class Survey:
     Attributes
     ----------
     scan : Scan
-    channels : ndarray, shape (rows, columns, 1 or 3)
+    codes : ndarray, shape (rows, columns, 1 or 3)
         Code values on a 0..255 scale.
     size : int
         Tile side that weights and bins refer to.
@@ -38,84 +49,188 @@ class Survey:
         Lines that keep their phase.
     lattices : tuple of Lattice
         Those of printed screens.
+    drifts : tuple of float
+        Share by which each lattice's frequency changes over the page; 0 where one holds it all.
     chroma : tuple of (ChromaReading, ChromaReading)
         Of each lattice's two lines, where a block codec halved the chroma; else empty.
     blocks : BlockGrid or None
     """
 
     scan: Scan
-    channels: NDArray[np.float32]
+    codes: Codes
     size: int
     peaks: tuple[Peak, ...]
     lattices: tuple[Lattice, ...]
+    drifts: tuple[float, ...]
     chroma: tuple[tuple[ChromaReading, ChromaReading], ...]
     blocks: BlockGrid | None
 
     @property
     def jpeg(self) -> bool:
-        """Whether the pixels went through a block codec."""
-        return self.scan.jpeg or self.blocks is not None
+        """Whether the pixels lie as a block codec left them."""
+        return self.scan.jpeg or _in_place(self.blocks)
 
 
-def take_survey(scan: Scan, channels: NDArray[np.float32], size: int) -> Survey:
-    """Measure a scan: lines, then the lattices that they form."""
-    mixed = channels.mean(axis=2)
-    grid = find_block_grid(mixed)
-    blocks = grid if grid.score > BLOCK_SCORE else None
-    area = channels.shape[0] * channels.shape[1]
-    pitch = max(size // 2, math.isqrt(area // _TILES_AT_MOST))
+def take_survey(scan: Scan, size: int) -> Survey:
+    """Measure a scan in tiles of `size`: lines, then the lattices that they form."""
+    codes = code_planes(scan)
+    mixed = mixed_plane(codes)
+    blocks = find_block_grid(mixed)
+    pitch = max(size // 2, math.isqrt(mixed.size // _TILES_AT_MOST))
     spectrum = tile_spectrum(mixed, size=size, pitch=pitch)
-    seen = refine(channels, find_candidates(spectrum), size=size)
+    seen = refine(mixed, find_candidates(spectrum), size=size)
     peaks = tuple(p for p in seen if _credible(p))
     # A partner too weak to stand out by itself counts where a coherent line calls for it, and a
     # screen whose (1, 1) order was seen where its own lines are.
-    aspect, jpeg = rate_aspect(scan), scan.jpeg or blocks is not None
-    peaks += _called(missing_partners(peaks, size=size, aspect=aspect), channels, spectrum)
+    aspect, jpeg = rate_aspect(scan), scan.jpeg or _in_place(blocks)
+    peaks += _called(missing_partners(peaks, size=size, aspect=aspect), mixed, spectrum)
     seen_lattices = find_lattices(peaks, size=size, aspect=aspect, jpeg=jpeg)
-    peaks += _called(half_orders(seen_lattices, peaks, size=size), channels, spectrum)
-    peaks = polish(channels, peaks, size=min(size, 64))
-    halved = jpeg and channels.shape[2] == 3
-    if halved:
-        peaks = _with_chroma(peaks, channels, size)
+    peaks += _called(half_orders(seen_lattices, peaks, size=size), mixed, spectrum)
+    peaks = polish(mixed, peaks, size=min(size, 64))
+    halved = jpeg and codes.shape[2] == 3
+    peaks = _with_chroma(peaks, codes, size) if halved else with_colours(codes, peaks, size=size)
     lattices = find_lattices(peaks, size=size, aspect=aspect, jpeg=jpeg)
     # Print or cloth is asked once, of the strongest: weak inks of a print cannot dominate it.
     if lattices and not is_halftone(lattices[0], lattices, seen, size):
         lattices = ()
-    chroma: tuple[tuple[ChromaReading, ChromaReading], ...] = ()
-    if halved:
-        chroma = _read_inks(lattices, channels, size)
+    drifts = (0.0,) * len(lattices)
+    if size == DRIFT_TILE and not _is_steady(lattices):
+        moving, moved = _follow_screens(mixed, codes, size, aspect, jpeg=jpeg)
+        if moving:
+            lattices, drifts = moving, moved
+    chroma = _read_inks(lattices, codes, size) if halved else ()
+    hop = size // 2
+    grid = (mixed.shape[0] // hop - 1, mixed.shape[1] // hop - 1)
+    peaks += _band_peaks(find_bands(mixed), peaks, blocks, size=size, grid=grid)
     return Survey(
-        scan=scan, channels=channels, size=size, peaks=peaks, lattices=lattices, chroma=chroma, blocks=blocks
+        scan=scan, codes=codes, size=size, peaks=peaks, lattices=lattices, drifts=drifts, chroma=chroma,
+        blocks=blocks,
     )  # fmt: skip
 
 
-def _with_chroma(peaks: tuple[Peak, ...], channels: NDArray[np.float32], size: int) -> tuple[Peak, ...]:
+def _is_steady(lattices: tuple[Lattice, ...]) -> bool:
+    """Whether one frequency for the whole page holds the strongest screen in step."""
+    return bool(lattices) and min(lattices[0].first.coherence, lattices[0].second.coherence) > _STEADY
+
+
+def _follow_screens(
+    mixed: NDArray[np.float32], codes: Codes, size: int, aspect: tuple[float, float], *, jpeg: bool
+) -> tuple[tuple[Lattice, ...], tuple[float, ...]]:
+    """Screens among lines followed from tile to tile, and how far each drifts."""
+    lines = find_drifting_lines(mixed)
+    peaks = tuple(_followed(line, size) for line in lines)
+    peaks = (
+        _with_chroma(peaks, codes, size)
+        if jpeg and codes.shape[2] == 3
+        else with_colours(codes, peaks, size=size)
+    )
+    lattices = find_lattices(peaks, size=size, aspect=aspect, jpeg=jpeg, slack=_DRIFT_SLACK)
+    if not lattices or not is_halftone(lattices[0], lattices, peaks, size):
+        return (), ()
+    # Tables, staves and threads lie along the axes and drift as well: there the map proves nothing.
+    strongest = lattices[0].k1
+    if on_axis(strongest, within_deg=_BESIDE_AXIS_DEG) or np.hypot(*strongest) < _COARSEST_CPP:
+        return (), ()
+    # A smaller drift leaves a print steady enough to be found in step.
+    drift_of = {id(p): line.drift for p, line in zip(peaks, lines, strict=True)}
+    drifts = tuple(max(drift_of[id(g.first)], drift_of[id(g.second)]) for g in lattices)
+    return (lattices, drifts) if max(drifts) > _LEAST_DRIFT else ((), ())
+
+
+def _followed(line: DriftingLine, size: int) -> Peak:
+    """A drifting line as a peak at its middle frequency."""
+    return Peak(
+        f=line.f,
+        sigma=line.sigma,
+        z=line.excess_nat / _NAT_OF_Z,
+        excess_nat=line.excess_nat,
+        amplitude=line.amplitude,
+        coherence=_FOLLOWED_COHERENCE,
+        local_coherence=_FOLLOWED_COHERENCE,
+        doubled=False,
+        tiles=float(line.weight.sum()),
+        bin_cpp=1 / size,
+        off_bin=0.0,
+        colour=np.ones(1),
+        weight=line.weight,
+    )
+
+
+def _band_peaks(
+    bands: tuple[Band, ...],
+    peaks: tuple[Peak, ...],
+    blocks: BlockGrid | None,
+    *,
+    size: int,
+    grid: tuple[int, int],
+) -> tuple[Peak, ...]:
+    """Faint lines of the whole page as peaks, less those that tiles saw too."""
+    weight = np.ones(grid, np.float32)
+    out = []
+    for band in _sparse(bands):
+        f, sigma = np.zeros(2), np.full(2, band.sigma_cpp)
+        f[band.axis] = band.f_cpp
+        # Where tiles saw lines on this axis already (text, rules, threads), fainter ones are theirs.
+        if any(abs(p.f[1 - band.axis]) < 1 / size for p in peaks):
+            continue
+        if blocks is not None and abs(band.f_cpp * blocks.period_px % 1 - 0.5) > 0.45:
+            continue
+        out.append(
+            Peak(
+                f=f,
+                sigma=sigma,
+                z=band.excess_nat / _NAT_OF_Z,
+                excess_nat=band.excess_nat,
+                amplitude=band.amplitude,
+                coherence=1.0,
+                local_coherence=1.0,
+                doubled=False,
+                tiles=float(weight.size),
+                bin_cpp=1 / size,
+                off_bin=0.0,
+                colour=np.ones(1),
+                weight=weight,
+            )
+        )
+    return tuple(out)
+
+
+def _sparse(bands: tuple[Band, ...]) -> tuple[Band, ...]:
+    """Bands of axes that show only a few: a scanner has one or two periods, a comb is content."""
+    return tuple(b for b in bands if sum(o.axis == b.axis for o in bands) <= _BANDS_AT_MOST)
+
+
+def _in_place(blocks: BlockGrid | None) -> bool:
+    return blocks is not None and blocks.period_px == 8
+
+
+def _with_chroma(peaks: tuple[Peak, ...], codes: Codes, size: int) -> tuple[Peak, ...]:
     """Peaks with the colours that a codec's halved chroma moved elsewhere."""
     if not peaks:
         return ()
     places, weights = np.array([wrap(p.f) for p in peaks]), np.stack([p.weight for p in peaks])
-    readings = read_chroma(channels, places, weights, size=size)
+    readings = read_chroma(codes, places, weights, size=size)
     return tuple(replace(p, colour=r.colour) for p, r in zip(peaks, readings, strict=True))
 
 
 def _called(
-    bins: tuple[tuple[int, int], ...], channels: NDArray[np.float32], spectrum: Spectrum
+    bins: tuple[tuple[int, int], ...], mixed: NDArray[np.float32], spectrum: Spectrum
 ) -> tuple[Peak, ...]:
     """Coherent lines at bins that others call for."""
     called = tuple(c for c in measure_bins(spectrum, bins) if c.z > _CALLED_Z)
-    found = refine(channels, called, size=spectrum.size)
+    found = refine(mixed, called, size=spectrum.size)
     return tuple(p for p in found if _credible(p) and p.coherence > 0.9)
 
 
 def _read_inks(
-    lattices: tuple[Lattice, ...], channels: NDArray[np.float32], size: int
+    lattices: tuple[Lattice, ...], codes: Codes, size: int
 ) -> tuple[tuple[ChromaReading, ChromaReading], ...]:
     """Chroma of both lines of each lattice, read where JPEG's chroma sampling moved it."""
     if not lattices:
         return ()
     vectors = np.array([k for g in lattices for k in (g.k1, g.k2)])
     weights = np.stack([p.weight for g in lattices for p in (g.first, g.second)])
-    readings = read_chroma(channels, vectors, weights, size=size)
+    readings = read_chroma(codes, vectors, weights, size=size)
     return tuple(zip(readings[::2], readings[1::2], strict=True))
 
 

@@ -25,6 +25,10 @@ def judge(findings: tuple[Finding, ...]) -> tuple[Verdict, float, tuple[str, ...
     folded = [f for f in seen if f.kind == "alias" and _in_picture_band(f)]
     if folded:
         return "rescan", visibility, (*_rescan_advice(folded), _KEEPER)
+    if any(f.drift for f in seen):
+        drift = max(f.drift for f in seen)
+        words = f"A screen's frequency drifts by {drift:.1%} over the page, which no filter here follows: "
+        return "rescan", visibility, (words + "rescan it lying flat, or photograph it square on.", _KEEPER)
     kinds = {f.kind for f in seen}
     advice = []
     if "halftone" in kinds:

@@ -154,5 +154,5 @@ def test_screen_weighs_its_vectors_by_their_sigmas() -> None:
     even = measure_screen(k1, k2, (0.01, 0.01), ink="black")
     assert first.ruling_lpi == pytest.approx(100, abs=1e-4)
     assert even.ruling_lpi == pytest.approx(100.5)
-    assert even.ruling_lpi_sigma == pytest.approx(0.35, abs=0.01)
+    assert even.ruling_lpi_sigma == pytest.approx(1.25 * 0.35, abs=0.01)
     assert isinstance(find_lattices(screen(0.2, 1), size=SIZE)[0], Lattice)

@@ -5,7 +5,7 @@ import pytest
 from numpy.typing import NDArray
 
 from moire.peaks import Candidate, find_candidates
-from moire.refinement import polish, refine
+from moire.refinement import polish, refine, with_colours
 from moire.spectrum import tile_spectrum
 
 SIZE = 128
@@ -33,7 +33,7 @@ def measured(
     image: NDArray[np.float32], f: NDArray[np.float64]
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     at = Candidate(kx=round(f[0] * SIZE), ky=round(f[1] * SIZE), z=10, excess_nat=1)
-    peak = polish(image[..., None], refine(image[..., None], (at,), size=SIZE), size=64)[0]
+    peak = polish(image, refine(image, (at,), size=SIZE), size=64)[0]
     return peak.f, peak.sigma
 
 
@@ -77,7 +77,7 @@ def test_an_edge_is_a_streak_not_a_peak() -> None:
     y, x = np.mgrid[0:512, 0:512]
     page[x + 0.37 * y > 300] = 40
     page += np.random.default_rng(0).normal(0, 1, page.shape).astype(np.float32)
-    peaks = refine(page[..., None], find_candidates(tile_spectrum(page, size=SIZE, pitch=64)), size=SIZE)
+    peaks = refine(page, find_candidates(tile_spectrum(page, size=SIZE, pitch=64)), size=SIZE)
     assert not [p for p in peaks if p.tiles >= 6 and p.coherence > 0.85]
 
 
@@ -85,5 +85,7 @@ def test_colour_of_a_line_is_kept_per_channel() -> None:
     y, x = np.mgrid[0:256, 0:256]
     wave = np.cos(2 * np.pi * (0.25 * x + 0.125 * y))
     picture = 120 + wave[..., None] * np.array([30.0, 10.0, 4.0])
-    peak = refine(picture.astype(np.float32), (Candidate(kx=32, ky=16, z=9, excess_nat=1),), size=SIZE)[0]
+    picture = picture.astype(np.float32)
+    seen = refine(picture.mean(axis=2), (Candidate(kx=32, ky=16, z=9, excess_nat=1),), size=SIZE)
+    (peak,) = with_colours(picture, seen, size=SIZE)
     assert peak.colour / peak.colour[0] == pytest.approx([1, 1 / 3, 4 / 30], rel=0.02)

@@ -40,8 +40,8 @@ def test_blank_page_has_no_tiles() -> None:
 def test_phasor_is_amplitude_and_phase(f: tuple[float, float]) -> None:
     y, x = np.mgrid[0:320, 0:256]
     wave = 100 + 7 * np.cos(2 * np.pi * (f[0] * x + f[1] * y) + 0.6)
-    v, cx, cy = tile_phasors(wave[..., None].astype(np.float32), np.array([f]), size=64)
-    assert v.shape == (1, 9, 7, 1)
+    v, cx, cy = tile_phasors(wave.astype(np.float32), np.array([f]), size=64)
+    assert v.shape == (1, 9, 7)
     assert (len(cy), len(cx)) == (9, 7)
     if f[0] != 0.5:
         assert np.abs(v) == pytest.approx(7, rel=2e-3)
@@ -49,6 +49,6 @@ def test_phasor_is_amplitude_and_phase(f: tuple[float, float]) -> None:
 
 
 def test_tile_means_are_local() -> None:
-    page = np.zeros((128, 128, 1), np.float32)
+    page = np.zeros((128, 128), np.float32)
     page[:, 64:] = 10
-    assert tile_means(page, size=64)[..., 0] == pytest.approx(np.array([[0, 5, 10]] * 3))
+    assert tile_means(page, size=64) == pytest.approx(np.array([[0, 5, 10]] * 3))
