@@ -1,7 +1,7 @@
 """Find, explain and mend periodic artifacts in scans.
 
 ``read(path) -> Scan``, ``examine(scan) -> Examination``,
-``mend(scan, examination) -> Mending``, ``write(scan, path)``,
+``mend(scan, examination) -> Mending``, ``plan(source, rates=...) -> Plan``, ``write(scan, path)``,
 ``examine_many(paths, executor=...)`` -> iterator of outcomes.
 """
 
@@ -16,15 +16,17 @@ if TYPE_CHECKING:
     from moire.crew import examine_many
     from moire.examine import examine
     from moire.mend import mend
+    from moire.plan import plan
     from moire.scanfile import read, write
 
 __version__ = "0.1.0"
-__all__ = ["__version__", "examine", "examine_many", "mend", "read", "write"]
+__all__ = ["__version__", "examine", "examine_many", "mend", "plan", "read", "write"]
 
 _ROOMS = {
     "examine": "examine",
     "examine_many": "crew",
     "mend": "mend",
+    "plan": "plan",
     "read": "scanfile",
     "write": "scanfile",
 }

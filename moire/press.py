@@ -135,6 +135,11 @@ def _cell_index(
     return (cycles * _CELL).astype(np.int32) % _CELL
 
 
+def threshold_cell(spot: Spot) -> Array:
+    """Thresholds over one cell, shape (256, 256): ink lies where a tone is above its threshold."""
+    return _threshold_tables(spot)[0]
+
+
 @lru_cache(maxsize=len(SPOTS))
 def _threshold_tables(spot: Spot) -> tuple[Array, Array]:
     """Thresholds over one cell, ranked so that a share `a` lies below `a`, and their slope per cell."""

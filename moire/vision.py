@@ -7,6 +7,7 @@ and must not be mixed in one threshold.
 from __future__ import annotations
 
 import math
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -61,6 +62,18 @@ def contrast_sensitivity(
     photon_noise = 1 / (0.03 * 1.2274e6 * retinal_td)
     neural_noise = 3e-8 / (1 - math.exp(-((u / 7) ** 2)))
     return optics / (3 * math.sqrt(2 / 0.1 * integration * (photon_noise + neural_noise)))
+
+
+@lru_cache(maxsize=1)
+def _sensitivity_table() -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    u = np.geomspace(0.1, 120, 600)
+    return np.log(u), np.log([max(contrast_sensitivity(float(v)), 1e-12) for v in u])
+
+
+def contrast_sensitivities(u: NDArray[np.float64]) -> NDArray[np.float64]:
+    """`contrast_sensitivity` of many frequencies, from 0.1 cycles per degree up, to 0.01 %."""
+    at, value = _sensitivity_table()
+    return np.asarray(np.exp(np.interp(np.log(np.maximum(u, 0.1)), at, value)))
 
 
 def cycles_per_degree(frequency_per_mm: float, distance_mm: float) -> float:

@@ -82,7 +82,7 @@ def truth(ruling: float, angle: float, spot: str) -> tuple[float, float]:
             bend = low - 2 * mid + high
             k = k + axis * float(np.clip(0.5 * (low - high) / bend if bend < 0 else 0, -1, 1)) * step
         step *= 0.6
-    measured = np.degrees(np.arctan2(-k[1], k[0])) % (180 if spot == "line" else 90)
+    measured = np.degrees(np.arctan2(-k[1], k[0])) % (180 if spot in ("line", "ellipse") else 90)
     return float(np.hypot(*k) * DEVICE_DPI), float(measured)
 
 
@@ -123,7 +123,7 @@ def scan_plates(
         page,
         at_x.astype(np.float32),
         at_y.astype(np.float32),
-        cv2.INTER_CUBIC,
+        cv2.INTER_LANCZOS4,
         borderMode=cv2.BORDER_REPLICATE,
     )
     linear = np.clip(linear, 0, 1)

@@ -14,12 +14,21 @@ from moire.batch import Batch, Failure
 from moire.examine import examine
 from moire.model import Examination, Recipe
 from moire.outcome import Outcome, Terms, failed, succeeded
+from moire.plan import plan
+from moire.plans import Plan
 from moire.proof import Truth
 from moire.recipe import prescribe
 from moire.volume import find_volumes
 
 DOCS = Path(__file__).resolve().parents[1] / "docs"
-SCHEMAS = {"batch": Batch, "examination": Examination, "outcome": Outcome, "recipe": Recipe, "truth": Truth}
+SCHEMAS = {
+    "batch": Batch,
+    "examination": Examination,
+    "outcome": Outcome,
+    "plan": Plan,
+    "recipe": Recipe,
+    "truth": Truth,
+}
 
 
 @pytest.mark.parametrize("name", sorted(SCHEMAS))
@@ -61,6 +70,12 @@ def test_batches_fit() -> None:
     )  # fmt: skip
     assert batch.volumes
     jsonschema.validate(document(batch), schema)
+
+
+def test_plans_fit() -> None:
+    found = examine(scanned(card_print(FOUR_INKS[0]), 200)[0])
+    made = plan(found, rates=[(200.0, 200.0), (300.0, 300.0)], turns=(0.0, 5.0), reprint=(150.0, 45.0))
+    jsonschema.validate(document(made), json.loads((DOCS / "plan.schema.json").read_text()))
 
 
 def test_demo_truths_fit() -> None:

@@ -15,6 +15,7 @@ EXIT_USAGE, EXIT_UNREADABLE, EXIT_OUTPUT, EXIT_PARTIAL, EXIT_VERDICT = 2, 3, 4, 
 _COMMANDS = {
     "examine": "find and explain every periodic pattern in one scan",
     "mend": "remove what is artifact, keep what is picture",
+    "plan": "which ppi, turn or derivative size shows no beat",
     "intake": "triage a folder of scans, resumable",
     "proof": "make a test scan with known truth",
 }
