@@ -22,6 +22,7 @@ from moire.weaves import cloth_finding, find_threads, thread_beat, thread_lines
 
 _TEXTURE_LINES, _TEXTURE_OBLIQUE = 4, 2
 _OF_THE_CLOTH, _BEAT_SHARE = 0.15, 0.03
+_LATTICES_OF_CLOTH = 2
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -34,6 +35,15 @@ class Group:
 
 def group_lines(survey: Survey) -> list[Group]:
     """Findings without visibility, screens first, then what remains."""
+    threads = None
+    if len(survey.lattices) <= _LATTICES_OF_CLOTH:
+        threads = find_threads(lightness(survey.channels))
+    if survey.lattices and threads is not None:
+        # Cloth of equal setts is as square as a screen, but a press keeps step and threads do not.
+        if threads.surely_cloth:
+            survey = replace(survey, lattices=())
+        else:
+            threads = None
     inks = name_inks(survey.lattices)
     folds: tuple[Fold | None, ...] = (None,) * len(survey.lattices)
     if survey.scan.ppi is not None:
@@ -53,7 +63,6 @@ def group_lines(survey: Survey) -> list[Group]:
                 break
         else:
             rest.append(peak)
-    threads = None if survey.lattices else find_threads(lightness(survey.channels))
     members: list[tuple[Peak, tuple[int, int] | None]] = []
     if threads is not None:
         members, taken_up = thread_lines(threads, survey.channels, tuple(rest), size=survey.size)
