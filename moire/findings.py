@@ -22,6 +22,7 @@ from moire.weaves import cloth_finding, find_threads, thread_beat, thread_lines
 
 _TEXTURE_LINES, _TEXTURE_OBLIQUE = 4, 2
 _OF_THE_CLOTH, _BEAT_SHARE = 0.15, 0.03
+_LATTICES_OF_CLOTH = 2
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -34,6 +35,13 @@ class Group:
 
 def group_lines(survey: Survey, second: Survey | None = None) -> list[Group]:
     """Findings without visibility, screens first, then what remains."""
+    threads = find_threads(survey.mixed) if len(survey.lattices) <= _LATTICES_OF_CLOTH else None
+    if survey.lattices and threads is not None:
+        # Cloth of equal setts is as square as a screen, but a press keeps step and threads do not.
+        if threads.surely_cloth:
+            survey = replace(survey, lattices=(), drifts=(), chroma=())
+        else:
+            threads = None
     inks = name_inks(survey.lattices, survey.chroma)
     folds = judge_folds(survey, inks, second)
     groups = [
@@ -51,7 +59,6 @@ def group_lines(survey: Survey, second: Survey | None = None) -> list[Group]:
                 break
         else:
             rest.append(peak)
-    threads = None if survey.lattices else find_threads(survey.mixed)
     members: list[tuple[Peak, tuple[int, int] | None]] = []
     if threads is not None:
         members, taken_up = thread_lines(threads, survey.mixed, tuple(rest), size=survey.size)

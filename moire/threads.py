@@ -46,6 +46,8 @@ class ThreadCount:
         Thread frequencies around those places, over some fifteen threads.
     bow : float
         Depth of the weft's arc as a share of the width; positive: middle lower.
+    wander : (float, float)
+        How far either set strays from even straight threads, robust sd in threads.
     """
 
     warp: NDArray[np.float64]
@@ -58,6 +60,7 @@ class ThreadCount:
     warp_map: NDArray[np.float64]
     weft_map: NDArray[np.float64]
     bow: float
+    wander: tuple[float, float]
 
 
 def count_threads(
@@ -114,7 +117,16 @@ def count_threads(
         warp_map=near[..., 0, :],
         weft_map=near[..., 1, :],
         bow=float(drift[1, 2] / (np.hypot(*threads[1]) * image.shape[1])),
+        wander=(_wander(turns[0], fields, present), _wander(turns[1], fields, present)),
     )
+
+
+def _wander(turns: NDArray[np.float64], fields: RestingLines, present: NDArray[np.bool_]) -> float:
+    """Robust standard deviation of turns about a plane."""
+    x, y = np.meshgrid(fields.x, fields.y)
+    design = np.stack([np.ones(int(present.sum())), x[present], y[present]], axis=1)
+    rest = turns[present] - design @ np.linalg.lstsq(design, turns[present], rcond=None)[0]
+    return 1.4826 * float(np.median(np.abs(rest - np.median(rest))))
 
 
 def _basis(

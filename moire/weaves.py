@@ -28,6 +28,7 @@ _COUNTED_LINES = 8
 _MEMBER_BINS, _PATCH = 0.8, 0.005
 _KNIT_GAIN = 20.0
 _DRIFT = 0.05
+_SQUARE, _SURE_GAIN, _UNEVEN = 0.01, 24.0, 0.02
 _COARSER, _BEAT_BINS, _HIGHEST_BEAT = 0.75, 0.4, 3.0
 _JERSEY = Binding(pattern="knit", structure="single jersey", direction=None, matrix=np.zeros((1, 1), bool))
 
@@ -60,6 +61,17 @@ class Threads:
         """Thread frequency of the picks, cycles per pixel of the scan."""
         return self.count.weft / self.reduction
 
+    @property
+    def like_screen(self) -> bool:
+        """Whether the lines are those of a square screen at 45 degrees: an even weave of equal setts."""
+        ratio = float(np.hypot(*self.warp) / np.hypot(*self.weft))
+        return self.fit.binding.direction is None and abs(ratio - 1) < _SQUARE
+
+    @property
+    def surely_cloth(self) -> bool:
+        """Whether it is clearly bound and both sets' gaps vary as yarns do: a press keeps step."""
+        return self.fit.gain > _SURE_GAIN and min(self.count.jitter) > _UNEVEN
+
 
 def find_threads(image: NDArray[np.float32]) -> Threads | None:
     """The cloth in a picture, or None.
@@ -88,7 +100,10 @@ def find_threads(image: NDArray[np.float32]) -> Threads | None:
     fit, small, reduction = best
     orders = np.array([o for _, o in fit.lines if max(map(abs, o)) <= 2][:_COUNTED_LINES])
     count = count_threads(small, np.stack([fit.warp, fit.weft], axis=1), orders)
-    return None if count is None else Threads(fit=fit, count=count, reduction=reduction)
+    if count is None:
+        return None
+    threads = Threads(fit=fit, count=count, reduction=reduction)
+    return None if threads.like_screen and not threads.surely_cloth else threads
 
 
 def as_cloth(fits: tuple[BindingFit, ...]) -> BindingFit | None:

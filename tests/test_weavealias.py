@@ -5,8 +5,10 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 from PIL import Image
+from prints import as_scan
 
 from moire.loom import Cloth
+from moire.mend import mend
 from moire.scanner import Scanner, digitise, sample
 from moire.vision import lightness
 from moire.weavealias import Kernel, explain_alias, kernel_transfer, thread_aliases
@@ -76,3 +78,24 @@ def test_a_beat_over_reduced_cloth_is_explained_by_its_threads(kernel: Kernel, s
 def test_a_line_of_its_own_is_no_alias_of_the_threads() -> None:
     aliases = thread_aliases(np.array([0.31, 0.0]), np.array([0.0, 0.23]), reduction=(2.0, 2.0))
     assert explain_alias(np.array([0.111, 0.077]), aliases, tolerance=0.004) is None
+
+
+def test_beats_of_a_reduced_cloth_are_mended_and_its_weave_stays() -> None:
+    """Thread lines keep 95 % and more; the strongest beat loses 10 dB and more."""
+    cloth = Cloth(
+        width_in=2.2, height_in=2.2, ends_per_cm=22, picks_per_cm=16, unevenness=0.1, jitter=0.01, hair=0.2
+    )
+    scanner = Scanner(ppi=(600, 600))
+    pixels = digitise(sample(cloth, scanner), scanner, np.random.default_rng(0))
+    small = cv2.resize(pixels, (300, 300), interpolation=cv2.INTER_NEAREST)
+    mending = mend(as_scan(small, 300 / 2.2))
+    before, after = (lightness(p.astype(np.float32)) for p in (small, mending.scan.pixels))
+    found = {f.kind: f for f in mending.before.findings}
+    assert found["alias"].parents == (mending.before.findings.index(found["weave"]),)
+    assert "order" in found["alias"].evidence[0]
+    for line in found["weave"].lines:
+        f = (line.fx_cpp, line.fy_cpp)
+        assert amplitude(after, f) > 0.95 * amplitude(before, f)
+    beat = max(found["alias"].lines, key=lambda line: line.amplitude)
+    f = (beat.fx_cpp, beat.fy_cpp)
+    assert amplitude(after, f) < 10 ** (-10 / 20) * amplitude(before, f)
