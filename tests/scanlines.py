@@ -89,8 +89,8 @@ def measured_place(channels: NDArray[np.float32], place: NDArray[np.float64]) ->
 
 
 def _refined(channels: NDArray[np.float32], candidates: tuple[Candidate, ...]) -> list[NDArray[np.float64]]:
-    size = _size(channels)
-    return [p.f for p in polish(channels, refine(channels, candidates, size=size), size=size)]
+    size, mixed = _size(channels), channels.mean(axis=2)
+    return [p.f for p in polish(mixed, refine(mixed, candidates, size=size), size=size)]
 
 
 def _size(channels: NDArray[np.float32]) -> int:
