@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 _STRIPS = 6
 _CLIP = 4.0
 _ACTIVITY_FLOOR = 0.7
-_EXCESS_NAT = 2.9
+_EXCESS_NAT = 3.5
 _IN_STEP = 0.62
 _LOWEST_CYCLES = 6
 _LINES_AT_MOST = 700
