@@ -18,6 +18,8 @@ _EXCESS_NAT = 3.5
 _IN_STEP = 0.62
 _LOWEST_CYCLES = 6
 _LINES_AT_MOST = 700
+# Resampling leaves periods of its own, a few hundredths of a code value strong.
+_LEAST_CODES = 0.2
 _SHORTEST = 64
 # Long periods step little from line to line; over a longer lag flat places show them better.
 _LAGS = (1, 4, 12)
@@ -96,6 +98,8 @@ def _bands_down(plane: NDArray[np.float32], axis: int, lag: int) -> list[Band]:
         if gain < _LEAST_GAIN:
             continue
         amplitude = 2 * np.sqrt(total[k]) / len(spectra) / window.sum() / (gain * free)
+        if amplitude < _LEAST_CODES:
+            continue
         snr = np.exp(excess[k])
         out.append(
             Band(
