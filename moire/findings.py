@@ -23,6 +23,7 @@ from moire.weaves import cloth_finding, find_threads, thread_beat, thread_lines
 _TEXTURE_LINES, _TEXTURE_OBLIQUE = 4, 2
 _OF_THE_CLOTH, _BEAT_SHARE = 0.15, 0.03
 _LATTICES_OF_CLOTH = 2
+_WINDOW_PX = 1024
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -35,13 +36,14 @@ class Group:
 
 def group_lines(survey: Survey, second: Survey | None = None) -> list[Group]:
     """Findings without visibility, screens first, then what remains."""
-    threads = find_threads(survey.mixed) if len(survey.lattices) <= _LATTICES_OF_CLOTH else None
-    if survey.lattices and threads is not None:
+    threads = None
+    if survey.lattices and len(survey.lattices) <= _LATTICES_OF_CLOTH:
         # Cloth of equal setts is as square as a screen, but a press keeps step and threads do not.
-        if threads.surely_cloth:
+        sample = find_threads(_strong_window(survey))
+        if sample is not None and sample.surely_cloth:
             survey = replace(survey, lattices=(), drifts=(), chroma=())
-        else:
-            threads = None
+    if not survey.lattices:
+        threads = find_threads(survey.mixed)
     inks = name_inks(survey.lattices, survey.chroma)
     folds = judge_folds(survey, inks, second)
     groups = [
@@ -88,6 +90,18 @@ def group_lines(survey: Survey, second: Survey | None = None) -> list[Group]:
     if survey.blocks is not None and all(g.finding.kind != "block-grid" for g in groups):
         groups.append(_block_group(survey.blocks))
     return groups
+
+
+def _strong_window(survey: Survey) -> NDArray[np.float32]:
+    """A part of the page where its strongest lattice lies, enough to see whether it keeps step."""
+    hop = survey.size // 2
+    weight = survey.lattices[0].first.weight
+    y, x = (int(c) * hop for c in np.median(np.argwhere(weight >= 0.5 * weight.max()), axis=0))
+    rows, columns = survey.mixed.shape
+    top, left = (
+        max(0, min(at - _WINDOW_PX // 2, length - _WINDOW_PX)) for at, length in ((y, rows), (x, columns))
+    )
+    return survey.mixed[top : top + _WINDOW_PX, left : left + _WINDOW_PX]
 
 
 def _screen_group(survey: Survey, lattice: Lattice, drift: float, ink: Ink, fold: Fold | None) -> Group:

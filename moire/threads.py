@@ -24,6 +24,7 @@ _MAP_PERIODS = 6.0
 _EDGE_THREADS = 5.0
 _PHASE_FLOOR = 0.01
 _CHOICES, _REACH = 41, 0.35
+_DRIFT_PLACES = 64
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -148,7 +149,8 @@ def _basis(
 def _fit_drift(fields: RestingLines, shape: tuple[int, int]) -> NDArray[np.float64]:
     """Smooth drift of both thread sets, in turns: polynomial coefficients, shape (2, 9)."""
     _, along, down = _basis(fields, shape)
-    thin = max(1, int(2 * fields.period / min(fields.step)))
+    # A cubic needs no more places than these, however large the picture.
+    thin = max(1, int(2 * fields.period / min(fields.step)), max(fields.values.shape[1:]) // _DRIFT_PLACES)
     seen = np.s_[::thin, ::thin]
     design, target, weight = [], [], []
     for order, v, share in zip(fields.orders, fields.values, fields.shares, strict=True):
