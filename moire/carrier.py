@@ -15,7 +15,7 @@ _SUSPECT, _SURE = 1.8, 6.0
 
 
 def local_amplitude(
-    plane: NDArray[np.float32], f: NDArray[np.float64], *, sigma_px: float, origin: tuple[int, int] = (0, 0)
+    plane: NDArray[np.float32], f: NDArray[np.float64], *, sigma_px: float
 ) -> NDArray[np.float32]:
     """Amplitude of one line in a Gaussian neighbourhood, on a grid about a sigma apart.
 
@@ -26,8 +26,6 @@ def local_amplitude(
     f : ndarray, shape (2,)
         ``(fx, fy)`` cycles per pixel.
     sigma_px : float
-    origin : (int, int)
-        Page pixel (x, y) of the plane's corner; amplitudes do not depend on it.
 
     Returns
     -------
@@ -37,8 +35,8 @@ def local_amplitude(
     import cv2
 
     rows, columns = plane.shape
-    x = np.exp(-2j * np.pi * f[0] * (np.arange(columns) + origin[0])).astype(np.complex64)
-    y = np.exp(-2j * np.pi * f[1] * (np.arange(rows) + origin[1])).astype(np.complex64)
+    x = np.exp(-2j * np.pi * f[0] * np.arange(columns)).astype(np.complex64)
+    y = np.exp(-2j * np.pi * f[1] * np.arange(rows)).astype(np.complex64)
     product = plane * y[:, None] * x[None, :]
     step = grid_step(sigma_px)
     size = (max(1, columns // step), max(1, rows // step))

@@ -94,9 +94,7 @@ def margin_px(lattices: Sequence[ScreenLattice]) -> int:
     return int(np.ceil(12 * max((g.period_px for g in lattices), default=2.0))) + 8
 
 
-def apply(
-    tile: NDArray[np.float32], ready: Preparation, *, origin: tuple[int, int] = (0, 0), quick: bool = False
-) -> NDArray[np.float32]:
+def apply(tile: NDArray[np.float32], ready: Preparation, *, quick: bool = False) -> NDArray[np.float32]:
     """Descreen one tile of a picture; the margin around its part of interest is `margin_px`."""
     if not ready.lattices or not ready.shares.any():
         return tile

@@ -172,7 +172,6 @@ def _line_screen_group(survey: Survey, members: tuple[tuple[Peak, int], ...]) ->
 
 
 def _leftover(survey: Survey, peak: Peak, rest: tuple[Peak, ...], *, woven: float, textured: bool) -> Group:
-    coverage, regions = _extent(peak.weight, peak.weight, survey.size, survey.scan)
     parents = rosette_parents(peak.f, survey.lattices, 0.2 / survey.size)
     settled = True
     if parents is not None:
@@ -188,6 +187,20 @@ def _leftover(survey: Survey, peak: Peak, rest: tuple[Peak, ...], *, woven: floa
                 "one of many regular lines in several directions: a texture such as cloth",
             )
         settled = kind != "unexplained"
+    related = () if parents is None else parents[:2]
+    return _lone_line(survey, peak, kind, words, settled=settled, parents=related)
+
+
+def _beat_group(survey: Survey, peak: Peak, beat: WeaveAlias, *, parent: int) -> Group:
+    a, b = beat.order
+    words = f"a beat with the pixel grid: order ({a:g}, {b:g}) of the threads, folded by {beat.fold}"
+    return _lone_line(survey, peak, "alias", words, settled=True, parents=(parent,))
+
+
+def _lone_line(
+    survey: Survey, peak: Peak, kind: Kind, words: str, *, settled: bool, parents: tuple[int, ...]
+) -> Group:
+    coverage, regions = _extent(peak.weight, peak.weight, survey.size, survey.scan)
     finding = Finding(
         kind=kind,
         confidence=round(float(peak.coherence * (1 - math.exp(-(peak.z - 4) / 2))), 3),
@@ -198,26 +211,8 @@ def _leftover(survey: Survey, peak: Peak, rest: tuple[Peak, ...], *, woven: floa
         period_px=float(1 / np.hypot(*peak.f)),
         period_mm=_period_mm(peak.f, survey.scan.ppi),
         settled=settled,
-        parents=() if parents is None else parents[:2],
+        parents=parents,
         evidence=(words,),
-    )
-    return Group(finding=finding, lines=[(peak, None)])
-
-
-def _beat_group(survey: Survey, peak: Peak, beat: WeaveAlias, *, parent: int) -> Group:
-    coverage, regions = _extent(peak.weight, peak.weight, survey.size, survey.scan)
-    a, b = beat.order
-    finding = Finding(
-        kind="alias",
-        confidence=round(float(peak.coherence * (1 - math.exp(-(peak.z - 4) / 2))), 3),
-        visibility=0.0,
-        coverage=coverage,
-        regions=regions,
-        lines=(),
-        period_px=float(1 / np.hypot(*peak.f)),
-        period_mm=_period_mm(peak.f, survey.scan.ppi),
-        parents=(parent,),
-        evidence=(f"a beat with the pixel grid: order ({a:g}, {b:g}) of the threads, folded by {beat.fold}",),
     )
     return Group(finding=finding, lines=[(peak, None)])
 

@@ -2,13 +2,12 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
-from numpy.typing import NDArray
 
+from moire.dots import round_coefficient
 from moire.folding import Unfolded, agree, temper, unfold
 from moire.lattice import Lattice
 from moire.model import Candidate, Ink, Kind, Screen
@@ -21,6 +20,7 @@ from moire.survey import Survey
 _SETTLED = 0.9
 _EDGE_CPP = 0.005
 _STRIDE = 5
+_FIRST_ORDER = (np.array(1), np.array(0))
 _MIDDLE_TONES = (0.08, 0.92)
 _NEXT = "a second scan at another ppi, or with the sheet turned by 5 degrees, settles it (--second)"
 
@@ -57,16 +57,16 @@ def judge_folds(survey: Survey, inks: Sequence[Ink], second: Survey | None = Non
     if ppi is None:
         return (None,) * len(survey.lattices)
     options = _weigh(survey, ppi, inks)
-    words = ""
+    proofs = ("",) * len(options)
     if second is not None and second.scan.ppi is not None:
         others = _weigh(second, second.scan.ppi, name_inks(second.lattices, second.chroma))
-        options, turn = settle(options, others)
-        words = "no screen of the second scan is this one" if turn is None else (
-            f"settled with a second scan at {second.scan.ppi[0]:g} ppi, turned by {turn:.2f} degrees"
-        )  # fmt: skip
+        options, seen_again, turn = settle(options, others)
+        if turn is not None:
+            words = f"with a second scan at {second.scan.ppi[0]:g} ppi, turned by {turn:.2f} degrees"
+            proofs = tuple(words if seen else "" for seen in seen_again)
     return tuple(
-        _judge(o, g, ppi, ink, words) if o else None
-        for o, g, ink in zip(options, survey.lattices, inks, strict=True)
+        _judge(o, g, ppi, ink, proof, asked=second is not None) if o else None
+        for o, g, ink, proof in zip(options, survey.lattices, inks, proofs, strict=True)
     )
 
 
@@ -80,7 +80,13 @@ def _weigh(survey: Survey, ppi: tuple[float, float], inks: Sequence[Ink]) -> tup
 
 
 def _judge(
-    options: tuple[Unfolded, ...], lattice: Lattice, ppi: tuple[float, float], ink: Ink, second: str
+    options: tuple[Unfolded, ...],
+    lattice: Lattice,
+    ppi: tuple[float, float],
+    ink: Ink,
+    proof: str,
+    *,
+    asked: bool,
 ) -> Fold:
     best = options[0]
     listed = tuple(
@@ -92,11 +98,11 @@ def _judge(
     direct = sum(o.probability for o in options if o.order == (0, 0))
     # At the edge of the grid a line meets its own mirror image: only another scan can tell.
     edge = float(np.abs(np.abs(np.stack([lattice.k1, lattice.k2])) - 0.5).min()) <= _EDGE_CPP
-    settled = best.probability >= _SETTLED and (bool(second) or (best.order == (0, 0) and not edge))
+    settled = best.probability >= _SETTLED and (bool(proof) or (best.order == (0, 0) and not edge))
     kind: Kind = "halftone" if best.order == (0, 0) and (settled or direct > 0.6) else "alias"
-    if settled and second:
+    if settled and proof:
         order = "not folded" if best.order == (0, 0) else f"folded by order {best.order}"
-        words = f"{second}: {best.ruling_lpi:.1f} lpi at {best.angle_deg:.1f} degrees, {order}"
+        words = f"settled {proof}: {best.ruling_lpi:.1f} lpi at {best.angle_deg:.1f} degrees, {order}"
     elif settled:
         words = f"not folded: probability {direct:.3f} by ruling, angle and remaining contrast"
     elif best.order == (0, 0):
@@ -106,7 +112,9 @@ def _judge(
             f"folded: {best.ruling_lpi:.1f} lpi at {best.angle_deg:.1f} degrees by order {best.order} is "
             f"the most probable source ({best.probability:.2f}); {_NEXT}"
         )
-    if second and not settled:
+    if asked and not proof:
+        words += "; the second scan does not show this screen"
+    elif asked and not settled:
         words += "; the second scan given does not settle it"
     return Fold(kind=kind, settled=settled, screen=screen, candidates=listed, words=words)
 
@@ -149,13 +157,6 @@ def _contrast(survey: Survey, lattice: Lattice, ink: Ink) -> float | None:
     middle = (share > _MIDDLE_TONES[0]) & (share < _MIDDLE_TONES[1])
     if middle.sum() < 3:
         return None
-    expected = 2 * _disc_coefficient(share[middle]) * white * taken
+    first = [abs(float(round_coefficient(float(tone), *_FIRST_ORDER))) for tone in share[middle]]
+    expected = 2 * np.array(first) * white * taken
     return float(np.median(swing[middle] / np.maximum(expected, 1e-6)))
-
-
-def _disc_coefficient(share: NDArray[np.floating]) -> NDArray[np.float64]:
-    """First Fourier coefficient r J1(2 pi r) of a Euclidean dot of a given area share."""
-    from scipy.special import j1
-
-    r = np.sqrt(np.minimum(share, 1 - share) / math.pi)
-    return np.asarray(r * j1(2 * np.pi * r))

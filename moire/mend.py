@@ -136,9 +136,9 @@ def _remove(master: Pixels, recipe: Recipe, progress: Callable[[float], None]) -
         part = np.ascontiguousarray(master[..., group])
         ready = prepare(part, lattices)
 
-        def work(tile: Pixels, origin: tuple[int, int], ready: Preparation = ready) -> Pixels:
+        def work(tile: Pixels, ready: Preparation = ready) -> Pixels:
             level = remove_lines(tile, lines)
-            clear = apply(level, ready, origin=origin, quick=recipe.quick)
+            clear = apply(level, ready, quick=recipe.quick)
             if not beats:
                 return clear
             # Without screens to mend, the beats themselves are all there is; else they end with them.

@@ -28,7 +28,9 @@ _SURPRISE = 1 / (2 * math.pi * _SCALE_SD * _TURN_SD_DEG) / _CHANCE
 Options = tuple[Unfolded, ...]
 
 
-def settle(first: Sequence[Options], second: Sequence[Options]) -> tuple[tuple[Options, ...], float | None]:
+def settle(
+    first: Sequence[Options], second: Sequence[Options]
+) -> tuple[tuple[Options, ...], tuple[bool, ...], float | None]:
     """Candidates of the first scan's screens weighed by those of the second.
 
     Parameters
@@ -40,6 +42,8 @@ def settle(first: Sequence[Options], second: Sequence[Options]) -> tuple[tuple[O
     -------
     candidates : tuple of tuple of Unfolded
         Of the first scan, with new probabilities, most probable first.
+    seen_again : tuple of bool
+        Whether the second scan most probably shows the screen too; otherwise it says nothing of it.
     turn_deg : float or None
         Turn from the first to the second scan, counter-clockwise, estimated with the orders; a
         square lattice leaves it open by quarter turns. None where no screen is common.
@@ -51,15 +55,19 @@ def settle(first: Sequence[Options], second: Sequence[Options]) -> tuple[tuple[O
         hypotheses.append((chance + sum(math.log(o.sum()) for o in odds if o.size), turn, odds))
     best = max(h[0] for h in hypotheses)
     weights = [math.exp(h[0] - best) for h in hypotheses]
-    out = []
+    out, seen_again = [], []
     for i, options in enumerate(first):
         if not options:
             out.append(options)
+            seen_again.append(False)
             continue
+        unseen = float(_UNSEEN * _priors(options).sum())
+        chance = sum(w * unseen / float(h[2][i].sum()) for w, h in zip(weights, hypotheses, strict=True))
+        seen_again.append(chance / sum(weights) < 0.5)
         mixed = sum(w * h[2][i] / h[2][i].sum() for w, h in zip(weights, hypotheses, strict=True))
         ranked = sorted(zip(mixed / mixed.sum(), options, strict=True), key=lambda pair: -pair[0])
         out.append(tuple(replace(o, probability=float(p)) for p, o in ranked))
-    return tuple(out), max(hypotheses, key=lambda h: h[0])[1]
+    return tuple(out), tuple(seen_again), max(hypotheses, key=lambda h: h[0])[1]
 
 
 def _possible_turns(first: Sequence[Options], second: Sequence[Options]) -> list[float]:

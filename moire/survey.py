@@ -91,14 +91,14 @@ def take_survey(scan: Scan, size: int) -> Survey:
     peaks += _called(half_orders(seen_lattices, peaks, size=size), mixed, spectrum)
     peaks = polish(mixed, peaks, size=min(size, 64))
     halved = jpeg and codes.shape[2] == 3
-    peaks = _with_chroma(peaks, codes, size) if halved else with_colours(codes, peaks, size=size)
+    peaks = _coloured(peaks, codes, size, halved=halved)
     lattices = find_lattices(peaks, size=size, aspect=aspect, jpeg=jpeg)
     # Print or cloth is asked once, of the strongest: weak inks of a print cannot dominate it.
     if lattices and not is_halftone(lattices[0], lattices, seen, size):
         lattices = ()
     drifts = (0.0,) * len(lattices)
     if size == DRIFT_TILE and not _is_steady(lattices):
-        moving, moved = _follow_screens(mixed, codes, size, aspect, jpeg=jpeg)
+        moving, moved = _follow_screens(mixed, codes, size, aspect, jpeg=jpeg, halved=halved)
         if moving:
             lattices, drifts = moving, moved
     chroma = _read_inks(lattices, codes, size) if halved else ()
@@ -117,16 +117,18 @@ def _is_steady(lattices: tuple[Lattice, ...]) -> bool:
 
 
 def _follow_screens(
-    mixed: NDArray[np.float32], codes: Codes, size: int, aspect: tuple[float, float], *, jpeg: bool
+    mixed: NDArray[np.float32],
+    codes: Codes,
+    size: int,
+    aspect: tuple[float, float],
+    *,
+    jpeg: bool,
+    halved: bool,
 ) -> tuple[tuple[Lattice, ...], tuple[float, ...]]:
     """Screens among lines followed from tile to tile, and how far each drifts."""
     lines = find_drifting_lines(mixed)
     peaks = tuple(_followed(line, size) for line in lines)
-    peaks = (
-        _with_chroma(peaks, codes, size)
-        if jpeg and codes.shape[2] == 3
-        else with_colours(codes, peaks, size=size)
-    )
+    peaks = _coloured(peaks, codes, size, halved=halved)
     lattices = find_lattices(peaks, size=size, aspect=aspect, jpeg=jpeg, slack=_DRIFT_SLACK)
     if not lattices or not is_halftone(lattices[0], lattices, peaks, size):
         return (), ()
@@ -207,10 +209,10 @@ def _in_place(blocks: BlockGrid | None) -> bool:
     return blocks is not None and blocks.period_px == 8
 
 
-def _with_chroma(peaks: tuple[Peak, ...], codes: Codes, size: int) -> tuple[Peak, ...]:
-    """Peaks with the colours that a codec's halved chroma moved elsewhere."""
-    if not peaks:
-        return ()
+def _coloured(peaks: tuple[Peak, ...], codes: Codes, size: int, *, halved: bool) -> tuple[Peak, ...]:
+    """Peaks with their colours, read elsewhere where a codec's halved chroma moved them."""
+    if not halved or not peaks:
+        return with_colours(codes, peaks, size=size)
     places, weights = np.array([wrap(p.f) for p in peaks]), np.stack([p.weight for p in peaks])
     readings = read_chroma(codes, places, weights, size=size)
     return tuple(replace(p, colour=r.colour) for p, r in zip(peaks, readings, strict=True))

@@ -36,19 +36,19 @@ def split(width: int, height: int, *, size: int, margin: int) -> Iterator[Tile]:
 
 def map_tiles(
     picture: NDArray[Any],
-    work: Callable[[NDArray[Any], tuple[int, int]], NDArray[Any]],
+    work: Callable[[NDArray[Any]], NDArray[Any]],
     *,
     size: int,
     margin: int,
     progress: Callable[[float], None] = lambda _: None,
 ) -> NDArray[np.float32]:
-    """Apply `work(tile, (x, y))` to overlapping tiles and join the inner parts.
+    """Apply `work(tile)` to overlapping tiles and join the inner parts.
 
     Parameters
     ----------
     picture : ndarray, shape (rows, columns, channels)
     work : callable
-        Gets a tile and the pixel of its corner; returns an array of the tile's shape.
+        Gets a tile; returns an array of its shape.
     size, margin : int
         Side of the inner parts and reach beyond them, in pixels.
     progress : callable
@@ -59,7 +59,7 @@ def map_tiles(
     tiles = list(split(width, height, size=size, margin=margin))
     for done, tile in enumerate(tiles, 1):
         x, y, w, h = tile.outer
-        result = work(picture[y : y + h, x : x + w], (x, y))
+        result = work(picture[y : y + h, x : x + w])
         ix, iy, iw, ih = tile.inner
         out[iy : iy + ih, ix : ix + iw] = result[iy - y : iy - y + ih, ix - x : ix - x + iw]
         progress(done / len(tiles))

@@ -3,6 +3,7 @@
 import ctypes
 import os
 import signal
+import sqlite3
 from concurrent.futures import ProcessPoolExecutor
 from multiprocessing import get_context
 from pathlib import Path
@@ -57,3 +58,16 @@ def _sabotage() -> None:
         return whole(path)
 
     moire.scanfile.pages = pages
+
+
+def kept(ledger: Path) -> int:
+    """Results in a ledger, 0 where there is none yet."""
+    if not ledger.exists():
+        return 0
+    db = sqlite3.connect(ledger, timeout=10)
+    try:
+        return int(db.execute("SELECT count(*) FROM results").fetchone()[0])
+    except sqlite3.Error:
+        return 0
+    finally:
+        db.close()

@@ -8,7 +8,7 @@ from collections.abc import Iterator
 from pathlib import Path
 
 import pytest
-from leaves import tiny_folder
+from leaves import kept, tiny_folder
 
 from moire.cli.main import main
 
@@ -75,20 +75,6 @@ def test_a_killed_worker_costs_no_file(
     assert sum(bool(d["error"]) for d in found) == 4
     assert all("ends early" in d["error"] for d in found if d["error"])
     assert json.loads(out)["verdicts"]["unreadable"] == 4
-
-
-def kept(ledger: Path) -> int:
-    import sqlite3
-
-    if not ledger.exists():
-        return 0
-    db = sqlite3.connect(ledger, timeout=10)
-    try:
-        return int(db.execute("SELECT count(*) FROM results").fetchone()[0])
-    except sqlite3.Error:
-        return 0
-    finally:
-        db.close()
 
 
 def test_an_engine_that_does_not_answer_is_told_of(

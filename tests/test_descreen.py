@@ -109,7 +109,7 @@ def test_tiles_agree_with_the_whole() -> None:
     screens = [lattice(100 / 300, 25)]
     ready = prepare(image, screens)
     whole = apply(image, ready)
-    tiled = map_tiles(image, lambda t, o: apply(t, ready, origin=o), size=200, margin=margin_px(screens))
+    tiled = map_tiles(image, lambda t: apply(t, ready), size=200, margin=margin_px(screens))
     difference = np.abs(tiled - whole)
     assert np.quantile(difference, 0.99) < 1 / 255
     assert difference.mean() < 0.1 / 255

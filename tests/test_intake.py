@@ -14,7 +14,7 @@ from pathlib import Path
 from typing import Any
 
 import pytest
-from leaves import tiny_folder
+from leaves import kept, tiny_folder
 
 from moire.cli.main import main
 from moire.crew import processes
@@ -187,18 +187,6 @@ def test_exit_codes(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
 def command(scans: Path, top: Path) -> list[str]:
     outputs = [f"--{kind}={top / name}" for kind, name in OUTPUTS.items()]
     return [sys.executable, "-m", "moire", "intake", str(scans), "--jobs", "2", "--quiet", *outputs]
-
-
-def kept(ledger: Path) -> int:
-    if not ledger.exists():
-        return 0
-    db = sqlite3.connect(ledger, timeout=10)
-    try:
-        return int(db.execute("SELECT count(*) FROM results").fetchone()[0])
-    except sqlite3.Error:
-        return 0
-    finally:
-        db.close()
 
 
 def wait_for(condition: Any, limit_s: float = 20.0) -> None:

@@ -6,6 +6,7 @@ from pathlib import Path
 import cv2
 import numpy as np
 import pytest
+from gratings import TWO_GRATINGS
 from postscript import needs_ghostscript
 from prints import as_scan
 from scanlines import compare, gap_cpp, level
@@ -45,24 +46,7 @@ def place(found: Lines, *parts: tuple[int, int, int]) -> np.ndarray:
     raise AssertionError(f"{parts} is not among the lines")
 
 
-@pytest.mark.parametrize(
-    ("f1", "f2", "angle", "beat", "period_mm", "direction"),
-    # Source: f_m = sqrt(f1^2 + f2^2 - 2 f1 f2 cos a), direction atan2(-f2 sin a, f1 - f2 cos a), I. Amidror,
-    # The Theory of the Moire Phenomenon, 2.3 (formula, value from memory), worked to 6 digits.
-    [
-        (150, 150, 1, 2.617961, 9.702208, -89.5),
-        (150, 150, 5, 13.085816, 1.941033, -87.5),
-        (150, 150, 15, 39.157858, 0.648657, -82.5),
-        (150, 150, 30, 77.645714, 0.327127, -75.0),
-        (150, 133, 0, 17.0, 1.494118, 0.0),
-        (150, 133, 15, 40.602457, 0.625578, -57.973637),
-        (133, 150, 30, 75.063882, 0.338378, -87.636028),
-        (85, 100, 7.5, 19.246749, 1.319703, -137.298987),
-        (175, 175, 0.1, 0.305433, 83.160742, -89.95),
-        (60, 65, 3, 5.974080, 4.251701, -145.289315),
-        (120, 100, 45, 86.194183, 0.294683, -55.121333),
-    ],
-)
+@pytest.mark.parametrize(("f1", "f2", "angle", "beat", "period_mm", "direction"), TWO_GRATINGS)
 def test_two_screens(
     f1: float, f2: float, angle: float, beat: float, period_mm: float, direction: float
 ) -> None:

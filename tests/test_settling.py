@@ -27,7 +27,8 @@ def candidates(ruling: float, angle: float, ppi: float):
 def test_two_rates_settle_any_screen(ruling: float, angle: float, rates: tuple[int, int]) -> None:
     """Only the true pair of orders gives one vector in both scans, if no rate is a multiple of the other."""
     one, two = (candidates(ruling, angle, rate) for rate in rates)
-    ((best, *_),) = settle([one], [two])[0]
+    ((best, *_),), seen, _ = settle([one], [two])
+    assert seen == (True,)
     assert best.ruling_lpi == pytest.approx(ruling, rel=1e-3)
     assert angle_distance(best.angle_deg, angle, 90) < 0.1
     assert best.probability > 0.6
@@ -39,7 +40,7 @@ def test_a_turn_of_the_sheet_settles_and_is_estimated(ruling: float, turn: float
     angles = (15.0, 75.0, 0.0, 45.0)
     one = [candidates(ruling, a, 150) for a in angles]
     two = [candidates(ruling, a + turn, 150) for a in angles]
-    settled, found = settle(one, two)
+    settled, _, found = settle(one, two)
     assert found == pytest.approx(turn, abs=0.1)
     right = 0
     for options, angle in zip(settled, angles, strict=True):
@@ -56,7 +57,8 @@ def test_a_turn_of_the_sheet_settles_and_is_estimated(ruling: float, turn: float
 def test_a_screen_that_the_second_scan_does_not_show_keeps_its_own_odds() -> None:
     one = candidates(133, 45, 150)
     for others in ([candidates(97, 20, 200)], []):
-        ((best, *_),), turn = settle([one], others)
+        ((best, *_),), seen, turn = settle([one], others)
+        assert seen == (False,)
         assert best.order == one[0].order
         assert best.probability > 0.8
         assert turn is None

@@ -27,7 +27,7 @@ def test_a_filter_in_tiles_is_the_filter_of_the_whole() -> None:
     picture = np.random.default_rng(0).random((150, 210, 2)).astype(np.float32)
     told: list[float] = []
     blurred = map_tiles(
-        picture, lambda t, _: cv2.GaussianBlur(t, (0, 0), 2), size=64, margin=12, progress=told.append
+        picture, lambda t: cv2.GaussianBlur(t, (0, 0), 2), size=64, margin=12, progress=told.append
     )
     assert np.allclose(blurred, cv2.GaussianBlur(picture, (0, 0), 2), atol=1e-5)
     assert told[-1] == 1
