@@ -45,7 +45,7 @@ class SpectralLine:
     @property
     def weight(self) -> float:
         """What the line counts for in a reading."""
-        return float(np.clip(self.excess_nat / 3, 0.2, 1.5) * self.share)
+        return min(max(self.excess_nat / 3, 0.2), 1.5) * self.share
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -71,6 +71,11 @@ class BindingFit:
     gain: float
     explained: float
     lines: tuple[tuple[SpectralLine, tuple[float, float]], ...]
+
+    @property
+    def frame(self) -> NDArray[np.float64]:
+        """Warp and weft frequency as columns."""
+        return np.stack([self.warp, self.weft], axis=1)
 
 
 @cache
@@ -268,9 +273,13 @@ def _settle(
     """The frame fitted to all the lines it explains, and its final worth."""
     f = np.array([line.f for line in lines])
     weight = np.array([line.weight for line in lines])
+    before = None
     for _ in range(3):
         hit, orders = _match(weave, frame[None], f, size)
         used = hit[0]
+        if before is not None and (used == before).all():
+            break
+        before = used
         a = orders[0][used] * weight[used, None]
         if used.sum() < 2 or np.linalg.matrix_rank(a) < 2:
             break
