@@ -8,10 +8,10 @@ from dataclasses import replace
 import numpy as np
 from numpy.typing import NDArray
 
-from moire.model import Finding, Scan
+from moire.bindings import swapped
+from moire.model import Finding, Scan, WarpRuns, Weave
 from moire.peaks import Candidate, Peak
 from moire.refinement import refine
-from moire.setts import sett_map, sett_places, sett_range
 from moire.weavealias import WeaveAlias, explain_alias, thread_aliases
 from moire.weaves import SURE, Threads, measure_weave
 
@@ -20,24 +20,27 @@ _DRIFT = 0.05
 _COARSER, _BEAT_BINS, _HIGHEST_BEAT = 0.75, 0.4, 3.0
 
 
-def cloth_finding(threads: Threads, scan: Scan) -> Finding:
-    """What is told of a cloth; its lines and visibility are filled in by the caller."""
-    binding, rate = threads.fit.binding, scan.ppi
+def cloth_finding(threads: Threads, scan: Scan, warp: WarpRuns = "vertical") -> Finding:
+    """What is told of a cloth; its lines and visibility are filled in by the caller.
+
+    Parameters
+    ----------
+    threads : Threads
+    scan : Scan
+    warp : {"vertical", "horizontal"}
+        Which threads are taken for the ends.
+    """
+    rate = scan.ppi
     coverage, regions = _extent(threads, scan)
-    worth = f"(worth {threads.fit.gain:.0f} nat)"
-    if binding.pattern == "knit":
-        evidence = [
-            f"{len(threads.fit.lines)} lines of loops with two slanting legs each {worth}: a knit",
-            "wales are taken to run down the page; per cm they stand as ends, courses as picks",
-        ]
+    weave = None if rate is None else measure_weave(threads, rate, warp_runs=warp)
+    as_seen = warp == "vertical" or threads.fit.binding.pattern == "knit"
+    ends, picks = (threads.warp, threads.weft) if as_seen else (threads.weft, threads.warp)
+    sizes = [float(1 / np.hypot(*f)) for f in (ends, picks)]
+    evidence = [*_binding_words(threads, warp)]
+    if weave is None:
+        evidence.append(f"sampling rate unknown: {sizes[0]:.2f} pixels an end, {sizes[1]:.2f} a pick")
     else:
-        evidence = [
-            f"{len(threads.fit.lines)} lines at fractions of two thread frequencies, "
-            f"as in a {binding.structure} weave {worth}",
-            "which threads are the warp cannot be seen: ends are taken to run down the page",
-        ]
-    if rate is not None:
-        evidence.extend(_count_words(threads, rate))
+        evidence.extend(_count_words(weave, max(threads.count.jitter)))
     return Finding(
         kind="weave",
         confidence=round(1 - math.exp(-(threads.fit.gain - SURE[0][0] / 2) / 8), 3),
@@ -45,27 +48,45 @@ def cloth_finding(threads: Threads, scan: Scan) -> Finding:
         coverage=coverage,
         regions=regions,
         lines=(),
-        period_px=float(1 / np.hypot(*threads.warp)),
-        period_mm=None if rate is None else float(25.4 / np.hypot(*(threads.warp * np.array(rate)))),
-        weave=None if rate is None else measure_weave(threads, rate),
+        period_px=sizes[0],
+        period_mm=None if rate is None else float(25.4 / np.hypot(*(ends * np.array(rate)))),
+        weave=weave,
         evidence=tuple(evidence),
     )
 
 
-def _count_words(threads: Threads, ppi: tuple[float, float]) -> list[str]:
+def _binding_words(threads: Threads, warp: WarpRuns) -> tuple[str, str]:
+    """What shows the binding, and what was assumed of the warp."""
+    binding = threads.fit.binding
+    worth = f"(worth {threads.fit.gain:.0f} nat)"
+    if binding.pattern == "knit":
+        return (
+            f"{len(threads.fit.lines)} lines of loops with two slanting legs each {worth}: a knit",
+            "wales are taken to run down the page; per cm they stand as ends, courses as picks",
+        )
+    way = "down" if warp == "vertical" else "across"
+    name = binding.structure if warp == "vertical" else swapped(binding).structure
+    return (
+        f"{len(threads.fit.lines)} lines at fractions of two thread frequencies, "
+        f"as in a {name} weave {worth}",
+        f"which threads are the warp cannot be seen: ends are taken to run {way} the page (--warp {warp})",
+    )
+
+
+def _count_words(weave: Weave, jitter: float) -> list[str]:
     """What the standards' way of counting adds, and what a picture cannot say."""
-    maps = sett_map(threads.count, threads.reduction, ppi)
-    low, high = sett_range(maps)
-    places = "; ".join(f"{ends:.1f} x {picks:.1f}" for ends, picks in sett_places(maps))
-    drift = max(h / max(lo, 1e-9) - 1 for lo, h in zip(low, high, strict=True))
-    drifts = drift > _DRIFT and max(threads.count.jitter) < drift
+    ends, picks = weave.ends_range_per_cm or (0.0, 0.0), weave.picks_range_per_cm or (0.0, 0.0)
+    places = "; ".join(f"{e:.1f} x {p:.1f}" for e, p in weave.places_per_cm)
+    drift = max(high / max(low, 1e-9) - 1 for low, high in (ends, picks))
+    drifts = drift > _DRIFT and jitter < drift
     caution = ["the sett changes over the picture, as in a photograph taken at a slant: read the range, "
                "not the mean"] if drifts else []  # fmt: skip
     return [
         *caution,
         f"at five places {places} ends x picks per cm (as ISO 7211-2 and ASTM D3775 count, which ask for "
         "longer pieces than most scans hold)",
-        f"over the cloth {low[0]:.1f} to {high[0]:.1f} ends/cm and {low[1]:.1f} to {high[1]:.1f} picks/cm",
+        f"over the cloth {ends[0]:.1f} to {ends[1]:.1f} ends/cm "
+        f"and {picks[0]:.1f} to {picks[1]:.1f} picks/cm",
         "in a dispute the reference method is dissection; a plied yarn counts as one thread",
     ]
 

@@ -14,7 +14,7 @@ from moire.clothfinding import cloth_finding, thread_beat, thread_lines
 from moire.folds import Fold, judge_folds
 from moire.grids import find_line_screen, sort_line
 from moire.lattice import Lattice
-from moire.model import Finding, Ink, Kind, Scan
+from moire.model import Finding, Ink, Kind, Scan, WarpRuns
 from moire.peaks import Peak
 from moire.screens import measure_line_screen, name_inks, name_line_ink, on_axis, order_of
 from moire.survey import Survey
@@ -35,7 +35,7 @@ class Group:
     lines: list[tuple[Peak, tuple[int, int] | None]]
 
 
-def group_lines(survey: Survey, second: Survey | None = None) -> list[Group]:
+def group_lines(survey: Survey, second: Survey | None = None, warp: WarpRuns = "vertical") -> list[Group]:
     """Findings without visibility, screens first, then what remains."""
     threads = None
     # Cloth of equal setts is as square as a screen, but a press keeps step and threads do not.
@@ -63,7 +63,7 @@ def group_lines(survey: Survey, second: Survey | None = None) -> list[Group]:
     members: list[tuple[Peak, tuple[int, int] | None]] = []
     if threads is not None:
         members, taken_up = thread_lines(threads, survey.mixed, tuple(rest), size=survey.size)
-        groups.append(Group(finding=cloth_finding(threads, survey.scan), lines=members))
+        groups.append(Group(finding=cloth_finding(threads, survey.scan, warp), lines=members))
         rest = [p for p in rest if not any(p is m for m in taken_up)]
     ruled: tuple[tuple[Peak, int], ...] = ()
     if not survey.lattices and threads is None:

@@ -4,14 +4,13 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass, replace
-from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
 
 from moire.bindingfit import BindingFit, find_lines, fit_binding
 from moire.bindings import Binding, swapped
-from moire.model import Weave
+from moire.model import WarpRuns, Weave
 from moire.setts import coarse_map, sett_map, sett_places, sett_range
 from moire.spectrum import tile_spectrum
 from moire.swatches import count_cloth
@@ -172,9 +171,7 @@ def _is_knit(ruled: BindingFit) -> bool:
     )
 
 
-def measure_weave(
-    threads: Threads, ppi: tuple[float, float], *, warp_runs: Literal["vertical", "horizontal"] = "vertical"
-) -> Weave:
+def measure_weave(threads: Threads, ppi: tuple[float, float], *, warp_runs: WarpRuns = "vertical") -> Weave:
     """Thread counts of a cloth at a known sampling rate.
 
     Parameters
@@ -211,7 +208,9 @@ def measure_weave(
         ends_map_per_cm=coarse[0],
         picks_map_per_cm=coarse[1],
     )
-    return weave if warp_runs == "vertical" else _turned(weave, threads.fit.binding)
+    # Wales are told from courses by their loops, whatever the user holds for the warp.
+    as_seen = warp_runs == "vertical" or weave.pattern == "knit"
+    return weave if as_seen else _turned(weave, threads.fit.binding)
 
 
 def _turned(weave: Weave, binding: Binding) -> Weave:
