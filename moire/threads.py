@@ -31,6 +31,7 @@ _MAP_PERIODS = 6.0
 _EDGE_THREADS = 5.0
 _PHASE_FLOOR = 0.01
 _CHOICES, _REACH = 41, 0.35
+_STEADY_TURNS = 0.2
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -206,18 +207,21 @@ def _total_along(
     axis : int
     """
     blocks = [_rows(a, axis) for a in (_at_rest(fields, drift), drift + known, place)]
-    counts = []
+    gains, taken, lengths = [], [], []
     for block, turns, at in zip(*blocks, strict=True):
         product, a, b = _advance(block)
         if (b - a) * fields.step[axis] < _LEAST_PERIODS * fields.period:
             continue
-        length = float((at[axis, :, b] - at[axis, :, a]).mean())
-        gained = _agreed(np.angle(product[:, a:b]).sum(axis=1) / (2 * np.pi), fields)
-        gained += (turns[:, :, b] - turns[:, :, a]).mean(axis=1)
-        counts.append((*(gained / length), length))
-    if not counts:
+        gains.append(np.angle(product[:, a:b]).sum(axis=1) / (2 * np.pi))
+        taken.append((turns[:, :, b] - turns[:, :, a]).mean(axis=1))
+        lengths.append(float((at[axis, :, b] - at[axis, :, a]).mean()))
+    if not gains:
         return None
-    table = np.array(counts)
+    trust = fields.shares * _steadiness(np.array(gains))
+    moved = [
+        (_agreed(g, fields.orders, trust) + t) / n for g, t, n in zip(gains, taken, lengths, strict=True)
+    ]
+    table = np.column_stack([np.array(moved), lengths])
     weight = table[:, 2] ** 2
     middle = np.array([_weighted_median(table[:, i], weight) for i in (0, 1)])
     apart = np.abs(table[:, :2] - middle)
@@ -227,14 +231,22 @@ def _total_along(
     return middle, np.hypot(spread / math.sqrt(len(table)), _PHASE_FLOOR / table[:, 2].max())
 
 
-def _agreed(turns: NDArray[np.float64], fields: RestingLines) -> NDArray[np.float64]:
+def _steadiness(gains: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Trust in each line by how alike its turns are in all blocks, shape (blocks, lines): slips are not."""
+    spread = 1.4826 * np.median(np.abs(gains - np.median(gains, axis=0)), axis=0)
+    return np.asarray(1 / (1 + (spread / _STEADY_TURNS) ** 2))
+
+
+def _agreed(
+    turns: NDArray[np.float64], orders: NDArray[np.float64], trust: NDArray[np.float64]
+) -> NDArray[np.float64]:
     """Turns of warp and weft on which most lines agree; a line that slipped by one is left alone."""
-    weight: NDArray[np.float64] = np.sqrt(fields.shares)
+    weight: NDArray[np.float64] = np.sqrt(trust)
     solution: NDArray[np.floating] = np.zeros(2)
     for _ in range(12):
-        solution = np.linalg.lstsq(fields.orders * weight[:, None], turns * weight, rcond=None)[0]
-        off = np.abs(turns - fields.orders @ solution)
-        weight = np.sqrt(fields.shares / np.maximum(off, 0.02))
+        solution = np.linalg.lstsq(orders * weight[:, None], turns * weight, rcond=None)[0]
+        off = np.abs(turns - orders @ solution)
+        weight = np.sqrt(trust / np.maximum(off, 0.02))
     return np.asarray(solution)
 
 

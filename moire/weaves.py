@@ -8,10 +8,11 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from moire.bindingfit import BindingFit, find_lines, fit_binding
+from moire.bindingfit import BindingFit, fit_binding
 from moire.bindings import Binding, swapped
 from moire.model import WarpRuns, Weave
 from moire.setts import coarse_map, sett_map, sett_places, sett_range
+from moire.spectrallines import find_lines
 from moire.spectrum import tile_spectrum
 from moire.swatches import count_cloth
 from moire.threads import ThreadCount, gap_jitter
@@ -57,9 +58,15 @@ class Threads:
 
     @property
     def like_screen(self) -> bool:
-        """Whether the lines are those of a square screen at 45 degrees: an even weave of equal setts."""
+        """Whether the lines are those of a square screen at 45 degrees: an even weave of equal setts.
+
+        A screen's own lines stand above their sums; threads of a coarse cloth stand above its binding.
+        """
         ratio = float(np.hypot(*self.warp) / np.hypot(*self.weft))
-        return self.fit.binding.direction is None and abs(ratio - 1) < _SQUARE
+        threads = [line.level_nat for line, (a, b) in self.fit.lines if {abs(a), abs(b)} == {0.0, 1.0}]
+        bound = [line.level_nat for line, (a, b) in self.fit.lines if max(abs(a), abs(b)) < 1]
+        ruled = len(threads) > 1 and min(threads) > max(bound, default=-math.inf)
+        return self.fit.binding.direction is None and abs(ratio - 1) < _SQUARE and not ruled
 
     @property
     def surely_cloth(self) -> bool:
