@@ -15,7 +15,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from moire.bindings import Binding, basket, binding_levels, plain, satin, twill
-from moire.peaks import Candidate, find_candidates, measure_bins
+from moire.peaks import measure_bins
+from moire.spectrallines import FINEST_LINE_CPP, SpectralLine
 from moire.spectrum import Spectrum
 
 _STRONGEST, _KEPT = 12, 4
@@ -26,26 +27,8 @@ _PRESENT_Z = 2.5
 _TILT_DEG, _SQUARE_DEG, _STEEPEST_DEG = 5.0, 2.0, 25.0
 _FINEST_CPP = 0.62
 _EVEN_NAT, _LENS_PX = 4.0, 0.45
-_OUTER_CPP, _FOLDED = 0.45, 4.0
-
-
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class SpectralLine:
-    """A line with its place to a fraction of a bin: ``(fx, fy)`` cycles per pixel, excess in nat.
-
-    ``share`` weighs it by its level among the others.
-    """
-
-    f: NDArray[np.float64]
-    z: float
-    excess_nat: float
-    level_nat: float
-    share: float = 1.0
-
-    @property
-    def weight(self) -> float:
-        """What the line counts for in a reading."""
-        return float(np.clip(self.excess_nat / 3, 0.2, 1.5) * self.share)
+_FOLDED = 4.0
+_HALVED, _DOUBLED, _STRONG_NAT = 8.0, 10.0, 3.5
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -71,6 +54,11 @@ class BindingFit:
     gain: float
     explained: float
     lines: tuple[tuple[SpectralLine, tuple[float, float]], ...]
+
+    @property
+    def frame(self) -> NDArray[np.float64]:
+        """Warp and weft frequency as columns."""
+        return np.stack([self.warp, self.weft], axis=1)
 
 
 @cache
@@ -119,23 +107,6 @@ _RULED = _Weave(
 )
 
 
-def find_lines(spectrum: Spectrum) -> tuple[SpectralLine, ...]:
-    """Lines of a tiled spectrum, in step over the page or not, strongest first."""
-    found = []
-    for c in find_candidates(spectrum):
-        f = _sub_bin(spectrum, c)
-        if np.hypot(*f) > _OUTER_CPP:
-            continue
-        level = float(spectrum.mean[c.ky % spectrum.size, c.kx % spectrum.size])
-        found.append(SpectralLine(f=f, z=c.z, excess_nat=c.excess_nat, level_nat=level))
-    found.sort(key=lambda line: -line.level_nat)
-    # A line a thousandth as strong as the strongest says little about the cloth.
-    return tuple(
-        replace(line, share=float(np.clip(1 - (found[0].level_nat - line.level_nat) / 9, 0.2, 1)))
-        for line in found
-    )
-
-
 def fit_binding(spectrum: Spectrum, lines: tuple[SpectralLine, ...]) -> tuple[BindingFit, ...]:
     """Readings of the lines as weaves, best first; empty if no two lines make a cloth."""
     if len(lines) < 2:
@@ -178,17 +149,6 @@ def _seen(f: NDArray[np.float64]) -> float:
     """What a usual lens and aperture leave of a line's power, in nat."""
     box = float(np.log(np.abs(np.sinc(f))).sum())
     return 2 * box - 4 * math.pi**2 * _LENS_PX**2 * float(f @ f)
-
-
-def _sub_bin(spectrum: Spectrum, c: Candidate) -> NDArray[np.float64]:
-    n = spectrum.size
-    plane = spectrum.mean
-    shift = []
-    for dy, dx in ((0, 1), (1, 0)):
-        a, b, d = (float(plane[(c.ky + s * dy) % n, (c.kx + s * dx) % n]) for s in (-1, 0, 1))
-        curve = a - 2 * b + d
-        shift.append(float(np.clip(0.5 * (a - d) / curve, -0.5, 0.5)) if curve < 0 else 0.0)
-    return np.array([c.kx + shift[0], c.ky + shift[1]]) / n
 
 
 def _frames(weave: _Weave, lines: tuple[SpectralLine, ...], size: int) -> NDArray[np.float64]:
@@ -251,7 +211,7 @@ def _prior(frames: NDArray[np.float64], folds: float) -> NDArray[np.float64]:
     a, b = np.degrees(np.arctan2(uy, ux)), np.degrees(np.arctan2(-vx, vy))
     ratio = np.log(np.hypot(ux, uy) / np.hypot(vx, vy))
     tilt, skew = (a + b) / 2, a - b
-    fine = [np.hypot(x, y) > _OUTER_CPP for x, y in ((ux, uy), (vx, vy))]
+    fine = [np.hypot(x, y) > FINEST_LINE_CPP for x, y in ((ux, uy), (vx, vy))]
     folded = folds * _FOLDED * np.add(*fine, dtype=float)
     return np.asarray(
         -0.5 * ((tilt / _TILT_DEG) ** 2 + (skew / _SQUARE_DEG) ** 2 + (ratio / 0.6) ** 2) - folded
@@ -268,9 +228,13 @@ def _settle(
     """The frame fitted to all the lines it explains, and its final worth."""
     f = np.array([line.f for line in lines])
     weight = np.array([line.weight for line in lines])
+    before = None
     for _ in range(3):
         hit, orders = _match(weave, frame[None], f, size)
         used = hit[0]
+        if before is not None and (used == before).all():
+            break
+        before = used
         a = orders[0][used] * weight[used, None]
         if used.sum() < 2 or np.linalg.matrix_rank(a) < 2:
             break
@@ -278,6 +242,8 @@ def _settle(
     gains, hit = _gains(weave, frame[None], lines, size)
     _, orders = _match(weave, frame[None], f, size)
     gain = float(gains[0]) - _absent(weave, frame, z)
+    if weave.lowest:
+        gain -= _misnumbered(frame, lines, size)
     explained = float(weight[hit[0]].sum() / weight.sum())
     named = tuple(
         (line, (float(o[0]), float(o[1]))) for line, o, h in zip(lines, orders[0], hit[0], strict=True) if h
@@ -294,7 +260,7 @@ def _absent(weave: _Weave, frame: NDArray[np.float64], z: NDArray[np.float64]) -
     def present(order: tuple[float, float]) -> bool | None:
         least = _PRESENT_Z if weave.lowest else 2 * _PRESENT_Z
         f = frame @ np.array(order)
-        if np.hypot(*f) > _OUTER_CPP or np.hypot(*f) * size < _INNER_BINS:
+        if np.hypot(*f) > FINEST_LINE_CPP or np.hypot(*f) * size < _INNER_BINS:
             return None
         x, y = np.rint(f * size).astype(int)
         return bool(z[np.arange(y - 1, y + 2)[:, None] % size, np.arange(x - 1, x + 2) % size].max() > least)
@@ -306,6 +272,30 @@ def _absent(weave: _Weave, frame: NDArray[np.float64], z: NDArray[np.float64]) -
     for order in ((1.0, 0.0), (0.0, 1.0)):
         # A ruling is nothing without its fundamentals; threads of one colour may hide theirs.
         price += (3.0 if weave.lowest else 25.0) * (present(order) is False)
+    return price
+
+
+def _misnumbered(frame: NDArray[np.float64], lines: tuple[SpectralLine, ...], size: int) -> float:
+    """Price of threads counted at half or at twice their number.
+
+    Along its own threads no binding has a line at half their frequency alone, and twice their
+    frequency is never the stronger line; coloured stripes make oblique lines that fit either count.
+    """
+
+    def level(order: tuple[float, float]) -> float:
+        f = frame @ np.array(order)
+        near = (min(np.hypot(*(line.f - f)), np.hypot(*(line.f + f))) * size < 1.5 for line in lines)
+        return max(
+            (line.level_nat for line, is_near in zip(lines, near, strict=True) if is_near), default=-math.inf
+        )
+
+    price = 0.0
+    strongest = lines[0].level_nat
+    for half, one, two in (((0.5, 0.0), (1.0, 0.0), (2.0, 0.0)), ((0.0, 0.5), (0.0, 1.0), (0.0, 2.0))):
+        # Ends drawn in by pairs do show at half their frequency, beside their own line.
+        price += _HALVED * (level(one) == -math.inf and level(half) > strongest - _STRONG_NAT)
+        seen = np.hypot(*(frame @ np.array(one))) * size > _INNER_BINS
+        price += _DOUBLED * (seen and level(two) > max(level(one) + 1, strongest - _STRONG_NAT))
     return price
 
 

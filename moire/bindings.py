@@ -24,6 +24,9 @@ _BASKET = re.compile(r"^basket(?P<ends>\d+)/(?P<picks>\d+)$")
 _TWILL = re.compile(r"^twill(?P<up>\d+)/(?P<down>\d+)(?P<way>[ZS])$")
 _SATIN = re.compile(r"^satin(?P<n>\d+)/(?P<step>\d+)$")
 _LONGEST = 16
+# Structures in words, as `Binding.structure` has them.
+_WORDS = re.compile(r"^(?P<numbers>\d+/\d+) (?P<family>basket|twill) ?(?P<way>[ZS]?)$")
+_SATIN_WORDS = re.compile(r"^(?P<n>\d+)-end satin step (?P<step>\d+)$")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -132,11 +135,15 @@ def swapped(binding: Binding) -> Binding:
 
 
 def parse_binding(text: str) -> Binding:
-    """Binding from its short name: plain, basket2/2, twill3/1S, satin8/3.
+    """Binding from its short name (plain, basket2/2, twill3/1S, satin8/3) or its structure in words.
 
     The bare words basket, twill and satin are 2/2, 2/2 Z and 5 ends with step 2.
     """
     name = _NAMES.get(text, text)
+    if match := _WORDS.match(name):
+        name = f"{match['family']}{match['numbers']}{match['way']}"
+    if match := _SATIN_WORDS.match(name):
+        name = f"satin{match['n']}/{match['step']}"
     if name == "plain":
         return plain()
     if match := _BASKET.match(name):

@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 
 _BAND = 0.12
 _APART = 0.45
+_PLACES = 256
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -24,6 +25,8 @@ class RestingLines:
     values : ndarray, shape (n, rows, columns)
     x, y : ndarray
         Places of the grid in pixels.
+    shares : ndarray, shape (n,)
+        How much each line has to say: its power, none dominant.
     period, smoothing : float
         Mean distance of threads, and sigma of the Gaussian that the lines were seen through, pixels.
     """
@@ -33,18 +36,13 @@ class RestingLines:
     values: NDArray[np.complex64]
     x: NDArray[np.float64]
     y: NDArray[np.float64]
+    shares: NDArray[np.float64]
     period: float
     smoothing: float
 
     @property
     def step(self) -> tuple[float, float]:
         return (float(self.x[1] - self.x[0]), float(self.y[1] - self.y[0]))
-
-    @property
-    def shares(self) -> NDArray[np.float64]:
-        """How much each line has to say: its power, none dominant."""
-        power = np.median(np.abs(self.values), axis=(1, 2))
-        return np.asarray(np.clip(power / max(float(power.max()), 1e-9), 0.05, 1.0))
 
 
 def bring_to_rest(
@@ -79,12 +77,16 @@ def bring_to_rest(
             out[...] = cv2.GaussianBlur(
                 small, (0, 0), smoothing * size[0] / columns, sigmaY=smoothing * size[1] / rows
             )
+    # A median needs no more places than these, however large the picture.
+    thin = max(1, max(size) // _PLACES)
+    power = np.array([np.median(np.abs(v[::thin, ::thin])) for v in values])
     return RestingLines(
         frame=frame,
         orders=orders,
         values=values,
         x=(np.arange(size[0]) + 0.5) * columns / size[0] - 0.5,
         y=(np.arange(size[1]) + 0.5) * rows / size[1] - 0.5,
+        shares=np.clip(power / max(float(power.max()), 1e-9), 0.05, 1.0),
         period=period,
         smoothing=smoothing,
     )
@@ -101,11 +103,25 @@ def blur(v: NDArray[np.complex64], fields: RestingLines, across: float, down: fl
     return np.asarray(parts[0] + 1j * parts[1], np.complex64)
 
 
-def advances(v: NDArray[np.complex64]) -> tuple[NDArray[np.complex64], NDArray[np.complex64]]:
-    """Products of neighbours along x and y, same shape as the field (last one repeated)."""
-    along = v[:, 1:] * np.conj(v[:, :-1])
-    down = v[1:] * np.conj(v[:-1])
-    return np.concatenate([along, along[:, -1:]], axis=1), np.concatenate([down, down[-1:]])
+def advance_along(v: NDArray[np.complex64], axis: int) -> NDArray[np.complex64]:
+    """Products of neighbours along x (axis 0) or y (1), same shape as the field (last one repeated)."""
+    if axis == 0:
+        product = v[:, 1:] * np.conj(v[:, :-1])
+        return np.concatenate([product, product[:, -1:]], axis=1)
+    product = v[1:] * np.conj(v[:-1])
+    return np.concatenate([product, product[-1:]])
+
+
+def departures_along(fields: RestingLines, axis: int, across: float, down: float) -> NDArray[np.float64]:
+    """Departures of both thread frequencies around each place along one axis, shape (rows, columns, 2)."""
+    weight = fields.shares[:, None]
+    solve = np.linalg.pinv(fields.orders * weight) * weight.T
+    out = np.zeros((*fields.values.shape[1:], 2))
+    for i, v in enumerate(fields.values):
+        turn = np.angle(blur(advance_along(v, axis), fields, across, down))
+        for thread in (0, 1):
+            out[..., thread] += turn * (solve[thread, i] / (2 * np.pi * fields.step[axis]))
+    return out
 
 
 def local_departures(fields: RestingLines, across: float, down: float) -> NDArray[np.float64]:
@@ -113,12 +129,4 @@ def local_departures(fields: RestingLines, across: float, down: float) -> NDArra
 
     The last axis is (fx, fy), the one before it warp and weft.
     """
-    weight = fields.shares[:, None]
-    solve = np.linalg.pinv(fields.orders * weight) * weight.T
-    out = np.zeros((*fields.values.shape[1:], 2, 2))
-    for i, v in enumerate(fields.values):
-        for axis, product in enumerate(advances(v)):
-            mean = blur(product, fields, across, down)
-            turn = np.angle(mean) / (2 * np.pi * fields.step[axis])
-            out[..., axis] += turn[..., None] * solve[:, i]
-    return out
+    return np.stack([departures_along(fields, axis, across, down) for axis in (0, 1)], axis=-1)

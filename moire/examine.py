@@ -9,7 +9,7 @@ from typing import Literal
 import moire
 from moire.findings import group_lines
 from moire.measures import levels_where_strong
-from moire.model import Examination, Finding, Line, Scan, Viewing
+from moire.model import Examination, Finding, Line, Scan, Viewing, WarpRuns
 from moire.peaks import Peak
 from moire.samples import tile_size
 from moire.survey import Survey, take_survey
@@ -18,7 +18,11 @@ from moire.vision import viewing_condition, visibility
 
 
 def examine(
-    scan: Scan, *, viewing: Literal["monitor", "print"] = "monitor", second: Scan | None = None
+    scan: Scan,
+    *,
+    viewing: Literal["monitor", "print"] = "monitor",
+    second: Scan | None = None,
+    warp: WarpRuns = "vertical",
 ) -> Examination:
     """Find and explain every periodic pattern in one scan.
 
@@ -31,6 +35,8 @@ def examine(
     second : Scan or None
         Another scan of the same original, at another ppi or turned by a few degrees: it settles
         which screens are folded.
+    warp : {"vertical", "horizontal"}
+        Which threads of a cloth are its ends; a picture cannot tell.
 
     Returns
     -------
@@ -41,7 +47,7 @@ def examine(
     survey = _survey(scan)
     findings: tuple[Finding, ...] = ()
     if survey is not None:
-        findings = _weigh(survey, None if second is None else _survey(second), condition)
+        findings = _weigh(survey, None if second is None else _survey(second), condition, warp)
     verdict, worst, advice = judge(findings)
     if survey is None:
         verdict, advice = "refer", ("The scan is too small to measure a pattern in it: a person must look.",)
@@ -72,9 +78,9 @@ def _survey(scan: Scan) -> Survey | None:
     return take_survey(scan, size) if size else None
 
 
-def _weigh(survey: Survey, second: Survey | None, condition: Viewing) -> tuple[Finding, ...]:
+def _weigh(survey: Survey, second: Survey | None, condition: Viewing, warp: WarpRuns) -> tuple[Finding, ...]:
     """Named findings, screens first, then what remains."""
-    groups = group_lines(survey, second)
+    groups = group_lines(survey, second, warp)
     used = [peak for group in groups for peak, _ in group.lines]
     levels = {}
     if used:

@@ -10,15 +10,16 @@ from numpy.typing import NDArray
 
 from moire.beats import rosette_parents
 from moire.blocks import BlockGrid
+from moire.clothfinding import cloth_finding, thread_beat, thread_lines
 from moire.folds import Fold, judge_folds
 from moire.grids import find_line_screen, sort_line
 from moire.lattice import Lattice
-from moire.model import Finding, Ink, Kind, Scan
+from moire.model import Finding, Ink, Kind, Scan, WarpRuns
 from moire.peaks import Peak
 from moire.screens import measure_line_screen, name_inks, name_line_ink, on_axis, order_of
 from moire.survey import Survey
 from moire.weavealias import WeaveAlias
-from moire.weaves import cloth_finding, find_threads, thread_beat, thread_lines
+from moire.weaves import find_threads, is_surely_cloth
 
 _TEXTURE_LINES, _TEXTURE_OBLIQUE = 4, 2
 _OF_THE_CLOTH, _BEAT_SHARE = 0.15, 0.03
@@ -34,14 +35,12 @@ class Group:
     lines: list[tuple[Peak, tuple[int, int] | None]]
 
 
-def group_lines(survey: Survey, second: Survey | None = None) -> list[Group]:
+def group_lines(survey: Survey, second: Survey | None = None, warp: WarpRuns = "vertical") -> list[Group]:
     """Findings without visibility, screens first, then what remains."""
     threads = None
-    if survey.lattices and len(survey.lattices) <= _LATTICES_OF_CLOTH:
-        # Cloth of equal setts is as square as a screen, but a press keeps step and threads do not.
-        sample = find_threads(_strong_window(survey))
-        if sample is not None and sample.surely_cloth:
-            survey = replace(survey, lattices=(), drifts=(), chroma=())
+    # Cloth of equal setts is as square as a screen, but a press keeps step and threads do not.
+    if 1 <= len(survey.lattices) <= _LATTICES_OF_CLOTH and is_surely_cloth(_strong_window(survey)):
+        survey = replace(survey, lattices=(), drifts=(), chroma=())
     if not survey.lattices:
         threads = find_threads(survey.mixed)
     inks = name_inks(survey.lattices, survey.chroma)
@@ -64,7 +63,7 @@ def group_lines(survey: Survey, second: Survey | None = None) -> list[Group]:
     members: list[tuple[Peak, tuple[int, int] | None]] = []
     if threads is not None:
         members, taken_up = thread_lines(threads, survey.mixed, tuple(rest), size=survey.size)
-        groups.append(Group(finding=cloth_finding(threads, survey.scan), lines=members))
+        groups.append(Group(finding=cloth_finding(threads, survey.scan, warp), lines=members))
         rest = [p for p in rest if not any(p is m for m in taken_up)]
     ruled: tuple[tuple[Peak, int], ...] = ()
     if not survey.lattices and threads is None:

@@ -28,6 +28,7 @@ Kind = Literal[
 Verdict = Literal["sound", "mendable", "rescan", "refer", "unreadable"]
 Ink = Literal["cyan", "magenta", "yellow", "black", "unknown"]
 PpiSource = Literal["option", "file"]
+WarpRuns = Literal["vertical", "horizontal"]
 WeavePattern = Literal["plain", "basket", "twill", "satin", "knit", "unknown"]
 
 

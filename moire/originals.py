@@ -91,9 +91,10 @@ def woven_original(weave: Weave) -> Original:
     counts = (weave.ends_per_inch, weave.picks_per_inch)
     if not all(2 <= c <= 500 for c in counts):
         raise BadRequest("a thread count is out of range: give 1 to 200 per cm")
-    binding: WeavePattern = "plain" if weave.pattern == "unknown" else weave.pattern
+    family: WeavePattern = "plain" if weave.pattern == "unknown" else weave.pattern
+    binding = family if family == "knit" else weave.structure or family
     sigma = weave.sigma_per_cm * 2.54
-    name = f"{binding} weave"
+    name = weave.structure if family == "knit" and weave.structure else f"{binding} weave"
     pattern = cloth_pattern(name, binding, *counts, weave.skew_deg, sigma)
     planned = _planned(name, "cloth", counts, weave.skew_deg, sigma)
     return Original(patterns=(pattern,), planned=(planned,))

@@ -16,7 +16,6 @@ from numpy.typing import NDArray
 from moire.bindings import parse_binding
 from moire.dots import Shape, dot_coefficients
 from moire.loom import KNIT, Cloth
-from moire.model import WeavePattern
 from moire.press import INKS, PAPER
 from moire.scanner import srgb_decode, srgb_encode
 
@@ -82,9 +81,12 @@ def ink_pattern(
 
 
 def cloth_pattern(
-    name: str, weave: WeavePattern, ends: float, picks: float, skew_deg: float, sigma_cpi: float
+    name: str, weave: str, ends: float, picks: float, skew_deg: float, sigma_cpi: float
 ) -> Pattern:
-    """A cloth of usual yarns, `ends` across and `picks` down the sheet per inch."""
+    """A cloth of usual yarns, `ends` across and `picks` down the sheet per inch.
+
+    `weave` is a binding's name, or knit.
+    """
     repeat = 1 if weave == KNIT else max(parse_binding(weave).repeat)
     cells = repeat * _SAMPLES_A_THREAD
     cloth = Cloth(

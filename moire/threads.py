@@ -14,17 +14,24 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from moire.demodulation import RestingLines, advances, blur, bring_to_rest, local_departures
+from moire.bending import bend_turns, fit_bend
+from moire.demodulation import (
+    RestingLines,
+    blur,
+    bring_to_rest,
+    departures_along,
+    local_departures,
+)
 from moire.straightening import straighten
 
-_PRESENT = 0.3
+PRESENT = 0.3
 _LEAST_PERIODS = 6.0
 _BLOCKS = 8
 _MAP_PERIODS = 6.0
 _EDGE_THREADS = 5.0
 _PHASE_FLOOR = 0.01
 _CHOICES, _REACH = 41, 0.35
-_DRIFT_PLACES = 64
+_STEADY_TURNS = 0.2
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -41,14 +48,14 @@ class ThreadCount:
         Apparent standard deviation of the gaps between threads, as a share of a gap.
     x, y : ndarray
         A grid of places over the picture, in pixels.
+    strength : ndarray, shape (len(y), len(x))
+        How strong the lines are around those places, code values.
     present : ndarray of bool, shape (len(y), len(x))
         Where the lines are.
     warp_map, weft_map : ndarray, shape (len(y), len(x), 2)
         Thread frequencies around those places, over some fifteen threads.
     bow : float
         Depth of the weft's arc as a share of the width; positive: middle lower.
-    wander : (float, float)
-        How far either set strays from even straight threads, robust sd in threads.
     """
 
     warp: NDArray[np.float64]
@@ -57,11 +64,11 @@ class ThreadCount:
     jitter: tuple[float, float]
     x: NDArray[np.float64]
     y: NDArray[np.float64]
+    strength: NDArray[np.float32]
     present: NDArray[np.bool_]
     warp_map: NDArray[np.float64]
     weft_map: NDArray[np.float64]
     bow: float
-    wander: tuple[float, float]
 
 
 def count_threads(
@@ -85,18 +92,19 @@ def count_threads(
     """
     shape = (image.shape[1], image.shape[0])
     fields = bring_to_rest(image, frame, orders)
-    drift = _fit_drift(fields, shape)
-    turns = _follow(fields, _drift_turns(drift, fields, shape))
+    drift = fit_bend(fields, shape)
+    turns = _follow(fields, bend_turns(drift, fields, shape))
     # Seen with its threads straightened, the cloth's lines are sharp and do not slip.
     straight, known, place = straighten(image, frame, turns)
     again = bring_to_rest(straight, frame, orders)
-    rest = _drift_turns(_fit_drift(again, shape), again, shape)
+    rest = bend_turns(fit_bend(again, shape), again, shape)
     totals = [_total_along(again, rest, known, place, axis=axis) for axis in (0, 1)]
     if totals[0] is None or totals[1] is None:
         return None
     moved = np.stack([t[0] for t in totals if t], axis=1)
     sigma = np.stack([t[1] for t in totals if t], axis=1)
-    present = _presence(fields)
+    strength = _strength(fields)
+    present = _present(strength)
     jitter = (_jitter(fields, present, 0), _jitter(fields, present, 1))
     near = fields.frame.T + local_departures(fields, _MAP_PERIODS, _MAP_PERIODS)
     threads = fields.frame.T + moved
@@ -114,73 +122,27 @@ def count_threads(
         jitter=jitter,
         x=fields.x,
         y=fields.y,
+        strength=strength,
         present=present,
         warp_map=near[..., 0, :],
         weft_map=near[..., 1, :],
         bow=float(drift[1, 2] / (np.hypot(*threads[1]) * image.shape[1])),
-        wander=(_wander(turns[0], fields, present), _wander(turns[1], fields, present)),
     )
 
 
-def _wander(turns: NDArray[np.float64], fields: RestingLines, present: NDArray[np.bool_]) -> float:
-    """Robust standard deviation of turns about a plane."""
-    x, y = np.meshgrid(fields.x, fields.y)
-    design = np.stack([np.ones(int(present.sum())), x[present], y[present]], axis=1)
-    rest = turns[present] - design @ np.linalg.lstsq(design, turns[present], rcond=None)[0]
-    return 1.4826 * float(np.median(np.abs(rest - np.median(rest))))
+def gap_jitter(
+    image: NDArray[np.float32], frame: NDArray[np.float64], orders: NDArray[np.float64]
+) -> tuple[float, float]:
+    """Apparent standard deviation of the gaps of warp and weft, as a share of a gap.
 
-
-def _basis(
-    fields: RestingLines, shape: tuple[int, int]
-) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
-    """Polynomials of third degree without a constant over the grid, and their gradients.
-
-    Coordinates run from -1 to 1 over the picture; gradients are per pixel.
+    Parameters
+    ----------
+    image, frame, orders
+        As for `count_threads`.
     """
-    half = np.array(shape) / 2
-    x, y = np.meshgrid((fields.x + 0.5) / half[0] - 1, (fields.y + 0.5) / half[1] - 1)
-    zero, one = np.zeros_like(x), np.ones_like(x)
-    value = np.stack([x, y, x * x, x * y, y * y, x**3, x * x * y, x * y * y, y**3], axis=-1)
-    along = np.stack([one, zero, 2 * x, y, zero, 3 * x * x, 2 * x * y, y * y, zero], axis=-1) / half[0]
-    down = np.stack([zero, one, zero, x, 2 * y, zero, x * x, 2 * x * y, 3 * y * y], axis=-1) / half[1]
-    return value, along, down
-
-
-def _fit_drift(fields: RestingLines, shape: tuple[int, int]) -> NDArray[np.float64]:
-    """Smooth drift of both thread sets, in turns: polynomial coefficients, shape (2, 9)."""
-    _, along, down = _basis(fields, shape)
-    # A cubic needs no more places than these, however large the picture.
-    thin = max(1, int(2 * fields.period / min(fields.step)), max(fields.values.shape[1:]) // _DRIFT_PLACES)
-    seen = np.s_[::thin, ::thin]
-    design, target, weight = [], [], []
-    for order, v, share in zip(fields.orders, fields.values, fields.shares, strict=True):
-        strength = np.abs(v)
-        for basis, product, step in zip((along, down), advances(v), fields.step, strict=True):
-            mean = blur(product, fields, 2.0, 2.0)[seen]
-            turn = np.angle(mean) / (2 * np.pi * step)
-            b = basis[seen].reshape(-1, 9)
-            design.append(np.concatenate([order[0] * b, order[1] * b], axis=1))
-            target.append(turn.ravel())
-            strong = np.abs(mean) / max(float(np.quantile(strength, 0.9)) ** 2, 1e-12)
-            weight.append(share * np.clip(strong, 0, 1).ravel())
-    a, t, w = np.concatenate(design), np.concatenate(target), np.concatenate(weight)
-    solution = np.zeros(18)
-    robust = np.ones_like(w)
-    for _ in range(6):
-        root = np.sqrt(w * robust)
-        solution = np.linalg.lstsq(a * root[:, None], t * root, rcond=1e-8)[0]
-        residual = np.abs(t - a @ solution)
-        scale = 1.5 * float(np.median(residual[w > 0.05])) if (w > 0.05).any() else 1.0
-        robust = 1 / np.maximum(1, residual / max(scale, 1e-9)) ** 2
-    return np.asarray(solution.reshape(2, 9))
-
-
-def _drift_turns(
-    drift: NDArray[np.float64], fields: RestingLines, shape: tuple[int, int]
-) -> NDArray[np.float64]:
-    """Drift of warp and weft over the grid in turns, shape (2, rows, columns)."""
-    value, _, _ = _basis(fields, shape)
-    return np.asarray(np.einsum("ik,yxk->iyx", drift, value))
+    fields = bring_to_rest(image, frame, orders)
+    present = _present(_strength(fields))
+    return _jitter(fields, present, 0), _jitter(fields, present, 1)
 
 
 def _rows(planes: NDArray[Any], axis: int) -> list[NDArray[Any]]:
@@ -196,7 +158,7 @@ def _advance(block: NDArray[np.complex64]) -> tuple[NDArray[np.complex64], int, 
     """
     product = (block[:, :, 1:] * np.conj(block[:, :, :-1])).sum(axis=1)
     strength = np.abs(product).sum(axis=0)
-    return product, *_longest(strength > _PRESENT**2 * float(np.quantile(strength, 0.9)))
+    return product, *_longest(strength > PRESENT**2 * float(np.quantile(strength, 0.9)))
 
 
 def _at_rest(fields: RestingLines, drift: NDArray[np.float64]) -> NDArray[np.complex64]:
@@ -245,18 +207,21 @@ def _total_along(
     axis : int
     """
     blocks = [_rows(a, axis) for a in (_at_rest(fields, drift), drift + known, place)]
-    counts = []
+    gains, taken, lengths = [], [], []
     for block, turns, at in zip(*blocks, strict=True):
         product, a, b = _advance(block)
         if (b - a) * fields.step[axis] < _LEAST_PERIODS * fields.period:
             continue
-        length = float((at[axis, :, b] - at[axis, :, a]).mean())
-        gained = _agreed(np.angle(product[:, a:b]).sum(axis=1) / (2 * np.pi), fields)
-        gained += (turns[:, :, b] - turns[:, :, a]).mean(axis=1)
-        counts.append((*(gained / length), length))
-    if not counts:
+        gains.append(np.angle(product[:, a:b]).sum(axis=1) / (2 * np.pi))
+        taken.append((turns[:, :, b] - turns[:, :, a]).mean(axis=1))
+        lengths.append(float((at[axis, :, b] - at[axis, :, a]).mean()))
+    if not gains:
         return None
-    table = np.array(counts)
+    trust = fields.shares * _steadiness(np.array(gains))
+    moved = [
+        (_agreed(g, fields.orders, trust) + t) / n for g, t, n in zip(gains, taken, lengths, strict=True)
+    ]
+    table = np.column_stack([np.array(moved), lengths])
     weight = table[:, 2] ** 2
     middle = np.array([_weighted_median(table[:, i], weight) for i in (0, 1)])
     apart = np.abs(table[:, :2] - middle)
@@ -266,14 +231,22 @@ def _total_along(
     return middle, np.hypot(spread / math.sqrt(len(table)), _PHASE_FLOOR / table[:, 2].max())
 
 
-def _agreed(turns: NDArray[np.float64], fields: RestingLines) -> NDArray[np.float64]:
+def _steadiness(gains: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Trust in each line by how alike its turns are in all blocks, shape (blocks, lines): slips are not."""
+    spread = 1.4826 * np.median(np.abs(gains - np.median(gains, axis=0)), axis=0)
+    return np.asarray(1 / (1 + (spread / _STEADY_TURNS) ** 2))
+
+
+def _agreed(
+    turns: NDArray[np.float64], orders: NDArray[np.float64], trust: NDArray[np.float64]
+) -> NDArray[np.float64]:
     """Turns of warp and weft on which most lines agree; a line that slipped by one is left alone."""
-    weight: NDArray[np.float64] = np.sqrt(fields.shares)
+    weight: NDArray[np.float64] = np.sqrt(trust)
     solution: NDArray[np.floating] = np.zeros(2)
     for _ in range(12):
-        solution = np.linalg.lstsq(fields.orders * weight[:, None], turns * weight, rcond=None)[0]
-        off = np.abs(turns - fields.orders @ solution)
-        weight = np.sqrt(fields.shares / np.maximum(off, 0.02))
+        solution = np.linalg.lstsq(orders * weight[:, None], turns * weight, rcond=None)[0]
+        off = np.abs(turns - orders @ solution)
+        weight = np.sqrt(trust / np.maximum(off, 0.02))
     return np.asarray(solution)
 
 
@@ -316,11 +289,15 @@ def _weighted_median(values: NDArray[np.float64], weights: NDArray[np.float64]) 
     return float(values[order][np.searchsorted(share, 0.5)])
 
 
-def _presence(fields: RestingLines) -> NDArray[np.bool_]:
-    """Where most of the lines' power stands: within reach of the strongest tenth."""
+def _strength(fields: RestingLines) -> NDArray[np.float32]:
+    """Amplitude of all lines together around each place."""
     power = sum(np.abs(blur(v, fields, 1.0, 1.0)) ** 2 for v in fields.values)
-    strength = np.sqrt(np.asarray(power))
-    return np.asarray(strength > _PRESENT * float(np.quantile(strength, 0.9)))
+    return np.asarray(np.sqrt(np.asarray(power)), np.float32)
+
+
+def _present(strength: NDArray[np.float32]) -> NDArray[np.bool_]:
+    """Where most of the lines' power stands: within reach of the strongest tenth."""
+    return np.asarray(strength > PRESENT * float(np.quantile(strength, 0.9)))
 
 
 def _jitter(fields: RestingLines, present: NDArray[np.bool_], which: int) -> float:
@@ -330,7 +307,7 @@ def _jitter(fields: RestingLines, present: NDArray[np.bool_], which: int) -> flo
     j / sqrt(2 sqrt(pi) s).
     """
     across, down = (0.0, 8.0) if which == 0 else (8.0, 0.0)
-    local = local_departures(fields, across, down)[..., which, which][present]
+    local = departures_along(fields, which, across, down)[..., which][present]
     if local.size < 4:
         return 0.0
     middle = float(np.median(local))

@@ -1,22 +1,20 @@
 """Beats of a cloth with a pixel grid: which order of its threads has folded to a line, and how strongly.
 
 A reduction samples the threads anew. Orders beyond half the new rate fold back; what is left of
-them is the transfer of the kernel that averaged before sampling.
+them is the response of the kernel that averaged before sampling, the one that plans reckon with.
 """
 
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
 
-Kernel = Literal["nearest", "area", "box", "bilinear", "hamming", "bicubic", "lanczos"]
+from moire.kernels import Kernel, image_responses
+
 _HIGHEST_ORDER = 3
-_OUTPUTS = 64
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -102,18 +100,19 @@ def explain_alias(
 
 
 def kernel_transfer(kernel: Kernel, f_cpp: NDArray[np.float64], reduction: tuple[float, float]) -> float:
-    """Share of a line's amplitude that a reduction leaves.
+    """Share of a line's amplitude that a reduction leaves at the line's own place.
 
     Parameters
     ----------
     kernel : str
-        ``nearest`` and ``area`` as in OpenCV, the others as in Pillow's ``resize``, whose kernels
-        grow with the reduction.
+        One of `moire.kernels.KERNELS`.
     f_cpp : ndarray, shape (2,)
-        Cycles per pixel before the reduction.
+        Cycles per pixel before the reduction, of any size.
     reduction : (float, float)
     """
-    return math.prod(_transfer(kernel, float(f), s) for f, s in zip(f_cpp, reduction, strict=True))
+    held = f_cpp - np.rint(f_cpp)
+    shares = [image_responses(kernel, s)(np.array([f]), 0)[0] for f, s in zip(held, reduction, strict=True)]
+    return float(abs(shares[0] * shares[1]))
 
 
 def _whole_orders() -> list[tuple[float, float]]:
@@ -125,57 +124,3 @@ def _whole_orders() -> list[tuple[float, float]]:
         if (a > 0 or (a == 0 and b > 0)) and abs(a) + abs(b) <= _HIGHEST_ORDER
     ]
     return sorted(found, key=lambda o: (abs(o[0]) + abs(o[1]), -o[0]))
-
-
-def _transfer(kernel: Kernel, f: float, reduction: float) -> float:
-    """Mean response over outputs, whose places among the pixels differ where the reduction is not whole."""
-    total = 0j
-    for i in range(_OUTPUTS):
-        centre = (i + 0.5) * reduction
-        if kernel == "nearest":
-            at: NDArray[np.floating] = np.array([math.floor(i * reduction) + 0.5])
-            weight: NDArray[np.floating] = np.ones(1)
-        elif kernel == "area":
-            first, last = i * reduction, (i + 1) * reduction
-            pixel = np.arange(math.floor(first), math.ceil(last))
-            at, weight = pixel + 0.5, np.minimum(pixel + 1, last) - np.maximum(pixel, first)
-        else:
-            shape, support = _SHAPES[kernel]
-            reach = support * max(reduction, 1.0)
-            at = np.arange(int(centre - reach + 0.5), int(centre + reach + 0.5)) + 0.5
-            weight = shape(np.asarray((at - centre) / max(reduction, 1.0), np.float64))
-        total += (weight * np.exp(2j * np.pi * f * (at - centre))).sum() / weight.sum()
-    return float(abs(total)) / _OUTPUTS
-
-
-def _bicubic(x: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Keys, IEEE Trans. ASSP 29 (1981) 1153, with a = -1/2."""
-    r = np.abs(x)
-    inner = 1.5 * r**3 - 2.5 * r**2 + 1
-    return np.where(r < 1, inner, -0.5 * r**3 + 2.5 * r**2 - 4 * r + 2)
-
-
-def _hamming(x: NDArray[np.float64]) -> NDArray[np.float64]:
-    return np.asarray(np.sinc(x) * (0.54 + 0.46 * np.cos(np.pi * x)))
-
-
-def _lanczos(x: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Duchon, J. Appl. Meteorol. 18 (1979) 1016, three lobes."""
-    return np.asarray(np.sinc(x) * np.sinc(x / 3))
-
-
-def _box(x: NDArray[np.float64]) -> NDArray[np.float64]:
-    return np.asarray((x > -0.5) & (x <= 0.5), float)
-
-
-def _bilinear(x: NDArray[np.float64]) -> NDArray[np.float64]:
-    return np.asarray(np.maximum(1 - np.abs(x), 0))
-
-
-_SHAPES: dict[str, tuple[Callable[[NDArray[np.float64]], NDArray[np.float64]], float]] = {
-    "box": (_box, 0.5),
-    "bilinear": (_bilinear, 1.0),
-    "bicubic": (_bicubic, 2.0),
-    "hamming": (_hamming, 1.0),
-    "lanczos": (_lanczos, 3.0),
-}

@@ -4,32 +4,27 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass, replace
-from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
 
-from moire.bindingfit import BindingFit, find_lines, fit_binding
+from moire.bindingfit import BindingFit, fit_binding
 from moire.bindings import Binding, swapped
-from moire.model import Finding, Scan, Weave
-from moire.peaks import Candidate, Peak
-from moire.refinement import refine
+from moire.model import WarpRuns, Weave
 from moire.setts import coarse_map, sett_map, sett_places, sett_range
+from moire.spectrallines import find_lines
 from moire.spectrum import tile_spectrum
-from moire.threads import ThreadCount, count_threads
-from moire.weavealias import WeaveAlias, explain_alias, thread_aliases
+from moire.swatches import count_cloth
+from moire.threads import ThreadCount, gap_jitter
 
 _TILE, _PITCH, _TILES_AT_MOST = 128, 64, 600
 _SMALLEST_PX = 200
 _COARSEST = 8
 # Nats gained and weight of lines at fractions of the threads' frequencies, either pair being enough.
-_SURE = ((14.0, 0.8), (9.0, 2.2), (20.0, 0.4))
+SURE = ((14.0, 0.8), (9.0, 2.2), (20.0, 0.4))
 _COUNTED_LINES = 8
-_MEMBER_BINS, _PATCH = 0.8, 0.005
 _KNIT_GAIN = 20.0
-_DRIFT = 0.05
 _SQUARE, _SURE_GAIN, _UNEVEN = 0.01, 24.0, 0.02
-_COARSER, _BEAT_BINS, _HIGHEST_BEAT = 0.75, 0.4, 3.0
 _JERSEY = Binding(pattern="knit", structure="single jersey", direction=None, matrix=np.zeros((1, 1), bool))
 
 
@@ -63,9 +58,15 @@ class Threads:
 
     @property
     def like_screen(self) -> bool:
-        """Whether the lines are those of a square screen at 45 degrees: an even weave of equal setts."""
+        """Whether the lines are those of a square screen at 45 degrees: an even weave of equal setts.
+
+        A screen's own lines stand above their sums; threads of a coarse cloth stand above its binding.
+        """
         ratio = float(np.hypot(*self.warp) / np.hypot(*self.weft))
-        return self.fit.binding.direction is None and abs(ratio - 1) < _SQUARE
+        threads = [line.level_nat for line, (a, b) in self.fit.lines if {abs(a), abs(b)} == {0.0, 1.0}]
+        bound = [line.level_nat for line, (a, b) in self.fit.lines if max(abs(a), abs(b)) < 1]
+        ruled = len(threads) > 1 and min(threads) > max(bound, default=-math.inf)
+        return self.fit.binding.direction is None and abs(ratio - 1) < _SQUARE and not ruled
 
     @property
     def surely_cloth(self) -> bool:
@@ -84,26 +85,53 @@ def find_threads(image: NDArray[np.float32]) -> Threads | None:
     image : ndarray, shape (rows, columns)
         Lightness or code values on a 0..255 scale.
     """
-    best: tuple[BindingFit, NDArray[np.float32], int] | None = None
+    reading = read_cloth(image)
+    if reading is None:
+        return None
+    fit = reading.fit
+    count = count_cloth(reading.image, fit.frame, reading.orders)
+    if count is None:
+        return None
+    threads = Threads(fit=fit, count=count, reduction=reading.reduction)
+    return None if threads.like_screen and not threads.surely_cloth else threads
+
+
+def is_surely_cloth(image: NDArray[np.float32]) -> bool:
+    """Whether a picture is clearly of bound threads whose gaps vary as yarns do, without counting them."""
+    reading = read_cloth(image)
+    if reading is None or reading.fit.gain <= _SURE_GAIN:
+        return False
+    return min(gap_jitter(reading.image, reading.fit.frame, reading.orders)) > _UNEVEN
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class _Reading:
+    """The surest reading of a picture as a weave, and the picture reduced as it was then."""
+
+    fit: BindingFit
+    image: NDArray[np.float32]
+    reduction: int
+
+    @property
+    def orders(self) -> NDArray[np.float64]:
+        """Lines to count by, strongest first, as orders of warp and weft."""
+        return np.array([o for _, o in self.fit.lines if max(map(abs, o)) <= 2][:_COUNTED_LINES])
+
+
+def read_cloth(image: NDArray[np.float32]) -> _Reading | None:
+    """The weave that a picture's lines are read as most surely, at any of four sizes."""
+    best: _Reading | None = None
     reduction = 1
     small = image
     while reduction <= _COARSEST and min(small.shape) >= _SMALLEST_PX:
         pitch = max(_PITCH, math.isqrt(small.size // _TILES_AT_MOST))
         spectrum = tile_spectrum(small, size=_TILE, pitch=pitch)
         fit = as_cloth(fit_binding(spectrum, find_lines(spectrum)))
-        if fit is not None and (best is None or fit.gain > best[0].gain):
-            best = (fit, small, reduction)
+        if fit is not None and (best is None or fit.gain > best.fit.gain):
+            best = _Reading(fit=fit, image=small, reduction=reduction)
         reduction *= 2
         small = _halve(small)
-    if best is None:
-        return None
-    fit, small, reduction = best
-    orders = np.array([o for _, o in fit.lines if max(map(abs, o)) <= 2][:_COUNTED_LINES])
-    count = count_threads(small, np.stack([fit.warp, fit.weft], axis=1), orders)
-    if count is None:
-        return None
-    threads = Threads(fit=fit, count=count, reduction=reduction)
-    return None if threads.like_screen and not threads.surely_cloth else threads
+    return best
 
 
 def as_cloth(fits: tuple[BindingFit, ...]) -> BindingFit | None:
@@ -122,7 +150,7 @@ def as_cloth(fits: tuple[BindingFit, ...]) -> BindingFit | None:
             for line, order in fit.lines
             if any(abs(c - round(c)) > 1e-6 for c in order) and not any(line is r for r in rival)
         )
-        if any(fit.gain > gain and bound > least for gain, least in _SURE):
+        if any(fit.gain > gain and bound > least for gain, least in SURE):
             return fit
     return None if ruled is None or not _is_knit(ruled) else replace(ruled, binding=_JERSEY)
 
@@ -150,9 +178,7 @@ def _is_knit(ruled: BindingFit) -> bool:
     )
 
 
-def measure_weave(
-    threads: Threads, ppi: tuple[float, float], *, warp_runs: Literal["vertical", "horizontal"] = "vertical"
-) -> Weave:
+def measure_weave(threads: Threads, ppi: tuple[float, float], *, warp_runs: WarpRuns = "vertical") -> Weave:
     """Thread counts of a cloth at a known sampling rate.
 
     Parameters
@@ -189,7 +215,9 @@ def measure_weave(
         ends_map_per_cm=coarse[0],
         picks_map_per_cm=coarse[1],
     )
-    return weave if warp_runs == "vertical" else _turned(weave, threads.fit.binding)
+    # Wales are told from courses by their loops, whatever the user holds for the warp.
+    as_seen = warp_runs == "vertical" or weave.pattern == "knit"
+    return weave if as_seen else _turned(weave, threads.fit.binding)
 
 
 def _turned(weave: Weave, binding: Binding) -> Weave:
@@ -210,128 +238,6 @@ def _turned(weave: Weave, binding: Binding) -> Weave:
         ends_map_per_cm=weave.picks_map_per_cm,
         picks_map_per_cm=weave.ends_map_per_cm,
     )
-
-
-def cloth_finding(threads: Threads, scan: Scan) -> Finding:
-    """What is told of a cloth; its lines and visibility are filled in by the caller."""
-    binding, rate = threads.fit.binding, scan.ppi
-    coverage, regions = _extent(threads, scan)
-    worth = f"(worth {threads.fit.gain:.0f} nat)"
-    if binding.pattern == "knit":
-        evidence = [
-            f"{len(threads.fit.lines)} lines of loops with two slanting legs each {worth}: a knit",
-            "wales are taken to run down the page; per cm they stand as ends, courses as picks",
-        ]
-    else:
-        evidence = [
-            f"{len(threads.fit.lines)} lines at fractions of two thread frequencies, "
-            f"as in a {binding.structure} weave {worth}",
-            "which threads are the warp cannot be seen: ends are taken to run down the page",
-        ]
-    if rate is not None:
-        evidence.extend(_count_words(threads, rate))
-    return Finding(
-        kind="weave",
-        confidence=round(1 - math.exp(-(threads.fit.gain - _SURE[0][0] / 2) / 8), 3),
-        visibility=0.0,
-        coverage=coverage,
-        regions=regions,
-        lines=(),
-        period_px=float(1 / np.hypot(*threads.warp)),
-        period_mm=None if rate is None else float(25.4 / np.hypot(*(threads.warp * np.array(rate)))),
-        weave=None if rate is None else measure_weave(threads, rate),
-        evidence=tuple(evidence),
-    )
-
-
-def _count_words(threads: Threads, ppi: tuple[float, float]) -> list[str]:
-    """What the standards' way of counting adds, and what a picture cannot say."""
-    maps = sett_map(threads.count, threads.reduction, ppi)
-    low, high = sett_range(maps)
-    places = "; ".join(f"{ends:.1f} x {picks:.1f}" for ends, picks in sett_places(maps))
-    drift = max(h / max(lo, 1e-9) - 1 for lo, h in zip(low, high, strict=True))
-    drifts = drift > _DRIFT and max(threads.count.jitter) < drift
-    caution = ["the sett changes over the picture, as in a photograph taken at a slant: read the range, "
-               "not the mean"] if drifts else []  # fmt: skip
-    return [
-        *caution,
-        f"at five places {places} ends x picks per cm (as ISO 7211-2 and ASTM D3775 count, which ask for "
-        "longer pieces than most scans hold)",
-        f"over the cloth {low[0]:.1f} to {high[0]:.1f} ends/cm and {low[1]:.1f} to {high[1]:.1f} picks/cm",
-        "in a dispute the reference method is dissection; a plied yarn counts as one thread",
-    ]
-
-
-def thread_lines(
-    threads: Threads, image: NDArray[np.float32], peaks: tuple[Peak, ...], *, size: int
-) -> tuple[list[tuple[Peak, tuple[int, int] | None]], list[Peak]]:
-    """The cloth's lines, and the peaks among `peaks` that they stand for.
-
-    They are the two thread lines, those the weave was read from, and others of its orders.
-
-    Parameters
-    ----------
-    threads : Threads
-    image : ndarray, shape (rows, columns)
-        Code values on a 0..255 scale, mean of channels.
-    peaks : tuple of Peak
-        Lines found in the scan by other means.
-    size : int
-        Tile side that their weights refer to.
-    """
-    frame = np.stack([threads.warp, threads.weft], axis=1)
-    levels = {(1.0, 0.0): (0.0, 0.0), (0.0, 1.0): (0.0, 0.0)}
-    for line, order in threads.fit.lines:
-        levels[order] = (line.z, line.excess_nat)
-    out: list[tuple[Peak, tuple[int, int] | None]] = []
-    for order, (z, excess) in levels.items():
-        f = frame @ np.array(order)
-        if np.abs(f).max() >= 0.5:
-            continue
-        kx, ky = np.rint(f * size).astype(int)
-        candidate = Candidate(kx=int(kx), ky=int(ky), z=z, excess_nat=excess)
-        (peak,) = refine(image, (candidate,), size=size)
-        sigma = np.hypot(*(np.array(order) * np.array(threads.count.sigma) / threads.reduction))
-        whole = all(float(c).is_integer() for c in order)
-        named = (int(order[0]), int(order[1])) if whole else None
-        out.append((replace(peak, f=f, sigma=np.full(2, sigma)), named))
-    repeat = np.array(threads.fit.binding.repeat)
-    known = [p for p, _ in out]
-    taken = []
-    for peak in peaks:
-        near = np.rint(np.linalg.solve(frame, peak.f) * repeat) / repeat
-        if np.hypot(*(frame @ near - peak.f)) < _MEMBER_BINS / size:
-            taken.append(peak)
-            same = [i for i, p in enumerate(known) if np.hypot(*(p.f - peak.f)) < _MEMBER_BINS / size]
-            if not same:
-                known.append(peak)
-                out.append((peak, None))
-    return out, taken
-
-
-def thread_beat(threads: Threads, f: NDArray[np.float64], *, size: int) -> WeaveAlias | None:
-    """The order of the threads that has folded to a line coarser than they are, or None."""
-    finest = min(float(np.hypot(*threads.warp)), float(np.hypot(*threads.weft)))
-    if np.hypot(*f) > _COARSER * finest:
-        return None
-    aliases = thread_aliases(threads.warp, threads.weft, orders=threads.fit.binding.orders(_HIGHEST_BEAT))
-    return explain_alias(f, aliases, tolerance=_BEAT_BINS / size)
-
-
-def _extent(threads: Threads, scan: Scan) -> tuple[float, tuple[tuple[int, int, int, int], ...]]:
-    """Share of the scan that is cloth, and boxes around it, largest first."""
-    import cv2
-
-    present = threads.count.present.astype(np.uint8)
-    rows, columns = present.shape
-    _, _, stats, _ = cv2.connectedComponentsWithStats(present, connectivity=8)
-    boxes = []
-    scale = (scan.width_px / columns, scan.height_px / rows)
-    for x, y, w, h, area in sorted(stats[1:].tolist(), key=lambda s: -s[4])[:12]:
-        if area >= _PATCH * present.size:
-            left, top = int(x * scale[0]), int(y * scale[1])
-            boxes.append((left, top, round((x + w) * scale[0]) - left, round((y + h) * scale[1]) - top))
-    return float(present.mean()), tuple(boxes)
 
 
 def _halve(image: NDArray[np.float32]) -> NDArray[np.float32]:

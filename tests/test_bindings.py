@@ -97,3 +97,9 @@ def test_a_cloth_turned_over_in_mind_has_the_transposed_lines(name: str) -> None
     levels, other = binding_levels(~binding.matrix.T), binding_levels(swapped(binding).matrix)
     levels[0, 0] = other[0, 0] = 0
     assert np.allclose(levels, other)
+
+
+@pytest.mark.parametrize("name", ["plain", "basket2/1", "twill3/1S", "twill2/2Z", "satin5/2", "satin8/3"])
+def test_a_structure_in_words_is_read_back(name: str) -> None:
+    binding = parse_binding(name)
+    assert parse_binding(binding.structure).structure == binding.structure

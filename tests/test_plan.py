@@ -9,8 +9,10 @@ from prints import FOUR_INKS, as_scan, card_print, scanned
 import moire
 from moire.errors import BadRequest
 from moire.examine import examine
+from moire.loom import Cloth
 from moire.model import Candidate, Examination, Screen, Weave
 from moire.plan import Scanning, plan, sweep
+from moire.scanner import Scanner, digitise, sample
 from moire.units import lpcm_to_lpi, lpi_to_lpcm
 
 INKS = (("cyan", 15), ("magenta", 75), ("yellow", 0), ("black", 45))
@@ -150,6 +152,16 @@ def test_cloth_is_honest_but_its_folds_are_not() -> None:
     assert made.patterns[0].kind == "cloth"
 
 
+def test_a_plan_is_made_for_the_weave_that_was_read() -> None:
+    """A 3/1 twill S has lines on its own diagonal, at quarters of its setts."""
+    cloth = replace(weave(), pattern="twill", structure="3/1 twill S")
+    made = plan(cloth, rates=square(40))
+    assert made.patterns[0].name == "3/1 twill S weave"
+    orders = [o.orders for b in made.choices[0].beats for o in b.orders]
+    assert any(m % 4 and n % 4 for m, n in orders)
+    assert all((m + n) % 4 == 0 for m, n in orders)
+
+
 def test_rules_of_the_trade_are_weighed_not_recited() -> None:
     turned = {r.rule: r for r in plan([screen(133, 15)], rates=square(600)).rules}
     assert not turned["twice the ruling"].agrees
@@ -218,3 +230,18 @@ def test_cautions_defer_to_the_keeper() -> None:
 def test_nothing_to_plan_for(wrong: object) -> None:
     with pytest.raises(BadRequest):
         wrong()  # type: ignore[operator]
+
+
+def test_a_plan_from_scanned_cloth_is_for_its_own_weave_and_setts() -> None:
+    cloth = Cloth(
+        width_in=1.2, height_in=1.2, ends_per_cm=24, picks_per_cm=17, pattern="twill3/1S", jitter=0.02
+    )
+    scanner = Scanner(ppi=(400, 400))
+    pixels = digitise(sample(cloth, scanner), scanner, np.random.default_rng(2))
+    made = plan(examine(as_scan(pixels, 400)), rates=square(60, 300))
+    (woven,) = made.patterns
+    assert woven.name == "3/1 twill S weave"
+    assert woven.frequencies_lpi == pytest.approx((24 * 2.54, 17 * 2.54), rel=0.01)
+    assert made.choices[0].ppi == (300, 300)
+    fine = made.choices[0].beats
+    assert all(b.visibility < made.choices[1].visibility for b in fine)

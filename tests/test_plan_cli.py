@@ -71,7 +71,7 @@ def test_a_measured_scan_and_its_derivatives(capsys: pytest.CaptureFixture[str])
 
 def test_cloth(capsys: pytest.CaptureFixture[str]) -> None:
     assert run("plan", "--ends", "18", "--picks", "16", "--weave", "twill", "--ppi", "72,300") == 0
-    assert "twill weave, 18.00 ends by 16.00 picks/cm" in capsys.readouterr().out
+    assert "2/2 twill Z weave, 18.00 ends by 16.00 picks/cm" in capsys.readouterr().out
 
 
 def test_the_best_choice_can_fail_a_script() -> None:

@@ -7,23 +7,28 @@ from numpy.typing import NDArray
 from PIL import Image
 from prints import as_scan
 
+from moire.bindings import parse_binding
+from moire.kernels import Kernel
 from moire.loom import Cloth
 from moire.mend import mend
+from moire.patterns import cloth_pattern
+from moire.prediction import Capture, predict
 from moire.scanner import Scanner, digitise, sample
 from moire.vision import lightness
-from moire.weavealias import Kernel, explain_alias, kernel_transfer, thread_aliases
+from moire.weavealias import explain_alias, kernel_transfer, thread_aliases
 from moire.weaves import find_threads
 
 PILLOW = {
-    "box": Image.Resampling.BOX, "bilinear": Image.Resampling.BILINEAR, "hamming": Image.Resampling.HAMMING,
-    "bicubic": Image.Resampling.BICUBIC, "lanczos": Image.Resampling.LANCZOS,
+    "pillow-box": Image.Resampling.BOX, "pillow-bilinear": Image.Resampling.BILINEAR,
+    "pillow-hamming": Image.Resampling.HAMMING, "pillow-bicubic": Image.Resampling.BICUBIC,
+    "pillow-lanczos": Image.Resampling.LANCZOS,
 }  # fmt: skip
 SIDE = 900
 
 
 def reduced(image: NDArray[np.float32], kernel: str, size: int) -> NDArray[np.float32]:
-    if kernel in ("nearest", "area"):
-        flag = cv2.INTER_NEAREST if kernel == "nearest" else cv2.INTER_AREA
+    if kernel.startswith("opencv"):
+        flag = cv2.INTER_NEAREST if kernel == "opencv-nearest" else cv2.INTER_AREA
         return np.asarray(cv2.resize(image, (size, size), interpolation=flag), np.float32)
     return np.asarray(Image.fromarray(image).resize((size, size), PILLOW[kernel]), np.float32)
 
@@ -36,7 +41,7 @@ def amplitude(image: NDArray[np.float32], f: tuple[float, float]) -> float:
     return float(2 * np.abs((image * window * wave).sum()) / window.sum())
 
 
-@pytest.mark.parametrize("kernel", ["nearest", "area", *PILLOW])
+@pytest.mark.parametrize("kernel", ["opencv-nearest", "opencv-area", *PILLOW])
 @pytest.mark.parametrize(("f", "size"), [((0.31, 0.02), 360), ((0.27, 0.0), 300)])
 def test_a_line_leaves_through_the_kernel_what_is_foretold(
     kernel: Kernel, f: tuple[float, float], size: int
@@ -52,12 +57,14 @@ def test_a_line_leaves_through_the_kernel_what_is_foretold(
 
 
 def test_box_at_its_own_rate_leaves_nothing() -> None:
-    assert kernel_transfer("box", np.array([0.25, 0.0]), (4.0, 4.0)) == pytest.approx(0, abs=1e-12)
-    assert kernel_transfer("nearest", np.array([0.25, 0.3]), (4.0, 4.0)) == pytest.approx(1)
-    assert kernel_transfer("lanczos", np.array([0.0, 0.0]), (4.0, 4.0)) == pytest.approx(1)
+    assert kernel_transfer("pillow-box", np.array([0.25, 0.0]), (4.0, 4.0)) == pytest.approx(0, abs=1e-12)
+    assert kernel_transfer("opencv-nearest", np.array([0.25, 0.3]), (4.0, 4.0)) == pytest.approx(1)
+    assert kernel_transfer("pillow-lanczos", np.array([0.0, 0.0]), (4.0, 4.0)) == pytest.approx(1)
 
 
-@pytest.mark.parametrize(("kernel", "size"), [("nearest", 75), ("area", 110), ("bicubic", 110)])
+@pytest.mark.parametrize(
+    ("kernel", "size"), [("opencv-nearest", 75), ("opencv-area", 110), ("pillow-bicubic", 110)]
+)
 def test_a_beat_over_reduced_cloth_is_explained_by_its_threads(kernel: Kernel, size: int) -> None:
     cloth = Cloth(width_in=1.25, height_in=1.25, ends_per_cm=22, picks_per_cm=19, unevenness=0.0)
     scanner = Scanner(ppi=(600, 600))
@@ -99,3 +106,29 @@ def test_beats_of_a_reduced_cloth_are_mended_and_its_weave_stays() -> None:
     beat = max(found["alias"].lines, key=lambda line: line.amplitude)
     f = (beat.fx_cpp, beat.fy_cpp)
     assert amplitude(after, f) < 10 ** (-10 / 20) * amplitude(before, f)
+
+
+def test_plans_and_examinations_reckon_alike() -> None:
+    """What `plan` foretells of a reduced cloth lies where, and shrinks as, its aliases here say."""
+    ends, picks, master = 22.0, 19.0, 600.0
+    rates = np.array([[600.0, 600.0], [100.0, 100.0]])
+    woven = cloth_pattern("cloth", "plain", ends * 2.54, picks * 2.54, 0.0, 0.0)
+    for kernel in ("opencv-nearest", "opencv-area", "pillow-bicubic"):
+        capture = Capture(rates=rates, grid=(master, master), kernel=kernel, derivative=True)
+        lines = predict((woven,), capture)
+        aliases = thread_aliases(
+            np.array([ends * 2.54 / master, 0.0]), np.array([0.0, picks * 2.54 / master]),
+            orders=parse_binding("plain").orders(2), reduction=(master / 100,) * 2, kernel=kernel,
+        )  # fmt: skip
+        assert len(aliases) >= 2
+        compared = 0
+        for i, ((_, m, n),) in enumerate(lines.parts):
+            for alias in (a for a in aliases if a.order == (m / 2, n / 2) and not lines.image[i].any()):
+                assert lines.seen_cpi[1, i] / 100 == pytest.approx(np.array(alias.f_cpp), abs=1e-9)
+                assert tuple(lines.order[1, i]) == alias.fold
+                share = lines.amplitude[1, i] / lines.amplitude[0, i]
+                # Higher orders of lightness are partly made of lower ones, which shrink otherwise.
+                if alias.order == (1, 0):
+                    assert share == pytest.approx(alias.transfer, rel=0.1)
+                compared += 1
+        assert compared >= 2

@@ -22,8 +22,11 @@ SETTS = {"plain": (16, 13), "basket2/2": (22, 18), "twill3/1S": (24, 17), "twill
 def seen(pattern: str, ppi: float = 400, turn: float = 0.7, **cloth: Any) -> tuple[Cloth, Any]:
     ends, picks = SETTS[pattern]
     swatch = Cloth(
-        width_in=1.0, height_in=1.0, ends_per_cm=ends, picks_per_cm=picks, pattern=pattern,
-        **{"jitter": 0.03, "thickness": 0.08, "hair": 0.4, **cloth},
+        pattern=pattern,
+        **{
+            "width_in": 1.0, "height_in": 1.0, "ends_per_cm": ends, "picks_per_cm": picks, "jitter": 0.03,
+            "thickness": 0.08, "hair": 0.4, **cloth,
+        },
     )  # fmt: skip
     scanner = Scanner(ppi=(ppi, ppi), turn_deg=turn)
     pixels = digitise(sample(swatch, scanner), scanner, np.random.default_rng(1))
@@ -71,6 +74,21 @@ def test_stripes_and_checks_do_not_change_the_count() -> None:
     cloth, weave = seen("twill2/2Z", warp_stripes=bands, weft_stripes=bands)
     assert weave.structure == "2/2 twill Z"
     assert weave.ends_per_cm == pytest.approx(cloth.true_setts()[0], rel=0.005)
+
+
+def test_stripes_on_fine_cloth_do_not_make_lines_slip() -> None:
+    """Where a dark stripe leaves a line faint its phase slips; lines that gain alike everywhere count."""
+    bands = stripes(31, (0.6, 0.25, 0.2), (0.24, 0.1, 0.08))
+    cloth, weave = seen("satin5/2", turn=-3.5, warp_stripes=bands, width_in=1.6)
+    assert weave.ends_per_cm == pytest.approx(cloth.true_setts()[0], rel=0.005)
+
+
+def test_coarse_cloth_of_equal_setts_is_no_screen() -> None:
+    """Its threads stand out more than its binding, as no screen's sums do."""
+    yarns = {"warp": (0.3, 0.25, 0.2), "weft": (0.35, 0.3, 0.25), "ends_per_cm": 8.2, "picks_per_cm": 8.2}
+    cloth, weave = seen("plain", ppi=600, width_in=1.3, height_in=1.3, **yarns)
+    assert weave.structure == "plain"
+    assert weave.ends_per_cm == pytest.approx(cloth.true_setts()[0], rel=0.01)
 
 
 def test_unequal_rates_are_taken_into_account() -> None:

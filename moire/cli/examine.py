@@ -11,7 +11,7 @@ from moire.cli.options import VERDICTS, PpiType, shared
 
 @click.command("examine")
 @click.argument("scan", type=click.Path())
-@shared("ppi", "viewing", "page")
+@shared("ppi", "viewing", "page", "warp")
 @click.option(
     "--second",
     type=click.Path(),
@@ -30,6 +30,7 @@ def command(scan: str, **flags: Any) -> int:
       moire examine postcard.tif --ppi 600
       moire examine page.png --json --fail-on rescan > page.json
       moire examine leaf-300.tif --second leaf-400.tif
+      moire examine swatch.tif --warp horizontal
     """
     from moire.cli.console import console, print_json, show_examination
     from moire.cli.main import EXIT_VERDICT
@@ -44,7 +45,7 @@ def command(scan: str, **flags: Any) -> int:
         raise BadRequest(
             "--second needs the ppi of both scans: give --ppi, or a second scan that states its own."
         )
-    found = examine(master, viewing=flags["viewing"], second=second)
+    found = examine(master, viewing=flags["viewing"], second=second, warp=flags["warp"])
     if flags["report"]:
         from moire.cli.reporting import save_report
 

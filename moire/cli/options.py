@@ -5,6 +5,7 @@
 ``--quiet``     no human text and no progress
 ``--ppi``       the scan's sampling rate, N or XxY; wins over the file's own
 ``--viewing``   condition under which visibility is judged
+``--warp``      which threads of a cloth are its ends
 ``--page``      page of a multi-page file, from 1
 ``--report``    write a self-contained HTML report
 ``--force``     overwrite an output; never an input
@@ -70,6 +71,13 @@ _FLAGS: dict[str, Callable[[Callable[..., Any]], Callable[..., Any]]] = {
         default="monitor",
         show_default=True,
         help="Judge visibility with pixels 1:1 on a monitor, or at the original's size in the hand.",
+    ),
+    "warp": click.option(
+        "--warp",
+        type=click.Choice(["vertical", "horizontal"]),
+        default="vertical",
+        show_default=True,
+        help="How the warp of a cloth runs on the page; a picture cannot tell.",
     ),
     "page": click.option(
         "--page", type=click.IntRange(1), default=1, show_default=True, help="Page of the file."

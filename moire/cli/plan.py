@@ -80,8 +80,8 @@ def _range(text: str) -> tuple[float, float] | None:
 @click.option("--spot", type=click.Choice(_SHAPES), default="round", show_default=True, help="Dot shape.")
 @click.option("--ends", type=click.FloatRange(1, 200), help="Cloth: warp threads per cm; needs --picks.")
 @click.option("--picks", type=click.FloatRange(1, 200), help="Cloth: weft threads per cm.")
-@click.option("--weave", type=click.Choice(["plain", "twill", "satin"]), default="plain", show_default=True,
-              help="Cloth: how it is bound.")  # fmt: skip
+@click.option("--weave", default="plain", show_default=True, metavar="WEAVE",
+              help="Cloth: how it is bound, such as plain, basket2/2, twill3/1S, satin8/3.")  # fmt: skip
 @click.option("--from", "scan", type=click.Path(), metavar="SCAN", help="Measure the original in a scan.")
 @click.option("--from-ppi", type=PpiType(), metavar="N|XxY", help="That scan's rate; wins over its own.")
 @click.option("--second", type=click.Path(), metavar="SCAN", help="Another scan of it: settles folds.")
@@ -191,13 +191,19 @@ def _measured(flags: dict[str, Any]) -> tuple[Any, tuple[float, float] | None]:
 
 
 def _weave(flags: dict[str, Any]) -> Any:
+    from moire.bindings import parse_binding
     from moire.model import Weave
     from moire.units import lpcm_to_lpi
 
+    try:
+        binding = parse_binding(flags["weave"])
+    except ValueError as error:
+        raise click.BadParameter(str(error), param_hint="--weave") from error
     ends, picks = flags["ends"], flags["picks"]
     return Weave(
         ends_per_cm=ends, picks_per_cm=picks, sigma_per_cm=0.0, ends_per_inch=lpcm_to_lpi(ends),
-        picks_per_inch=lpcm_to_lpi(picks), pattern=flags["weave"], skew_deg=0.0,
+        picks_per_inch=lpcm_to_lpi(picks), pattern=binding.pattern, skew_deg=0.0,
+        structure=binding.structure,
     )  # fmt: skip
 
 
