@@ -42,7 +42,7 @@ def group_lines(survey: Survey, second: Survey | None = None, warp: WarpRuns = "
     if 1 <= len(survey.lattices) <= _LATTICES_OF_CLOTH and is_surely_cloth(_strong_window(survey)):
         survey = replace(survey, lattices=(), drifts=(), chroma=())
     if not survey.lattices:
-        threads = find_threads(survey.mixed)
+        threads = find_threads(survey.mixed, survey.spectrum)
     inks = name_inks(survey.lattices, survey.chroma)
     folds = judge_folds(survey, inks, second)
     groups = [

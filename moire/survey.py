@@ -48,6 +48,8 @@ class Survey:
         Mean of the channels.
     size : int
         Tile side that weights and bins refer to.
+    spectrum : Spectrum
+        Of those tiles.
     peaks : tuple of Peak
         Lines that keep their phase.
     lattices : tuple of Lattice
@@ -63,6 +65,7 @@ class Survey:
     codes: Codes
     mixed: NDArray[np.float32]
     size: int
+    spectrum: Spectrum
     peaks: tuple[Peak, ...]
     lattices: tuple[Lattice, ...]
     drifts: tuple[float, ...]
@@ -107,8 +110,8 @@ def take_survey(scan: Scan, size: int) -> Survey:
     chroma = _read_inks(lattices, codes, size) if halved else ()
     peaks += _band_peaks(find_bands(mixed), peaks, blocks, size=size, grid=grid)
     return Survey(
-        scan=scan, codes=codes, mixed=mixed, size=size, peaks=peaks, lattices=lattices, drifts=drifts,
-        chroma=chroma, blocks=blocks,
+        scan=scan, codes=codes, mixed=mixed, size=size, spectrum=spectrum, peaks=peaks,
+        lattices=lattices, drifts=drifts, chroma=chroma, blocks=blocks,
     )  # fmt: skip
 
 

@@ -13,7 +13,7 @@ from moire.bindings import Binding, swapped
 from moire.model import WarpRuns, Weave
 from moire.setts import coarse_map, sett_map, sett_places, sett_range
 from moire.spectrallines import find_lines
-from moire.spectrum import tile_spectrum
+from moire.spectrum import Spectrum, tile_spectrum
 from moire.swatches import count_cloth
 from moire.threads import ThreadCount, gap_jitter
 
@@ -74,7 +74,7 @@ class Threads:
         return self.fit.gain > _SURE_GAIN and min(self.count.jitter) > _UNEVEN
 
 
-def find_threads(image: NDArray[np.float32]) -> Threads | None:
+def find_threads(image: NDArray[np.float32], spectrum: Spectrum | None = None) -> Threads | None:
     """The cloth in a picture, or None.
 
     A table or a page of text also has lines on both axes; only cloth has the fractions of
@@ -84,8 +84,10 @@ def find_threads(image: NDArray[np.float32]) -> Threads | None:
     ----------
     image : ndarray, shape (rows, columns)
         Lightness or code values on a 0..255 scale.
+    spectrum : Spectrum or None
+        Of this picture, where it has been measured already.
     """
-    reading = read_cloth(image)
+    reading = read_cloth(image, spectrum)
     if reading is None:
         return None
     fit = reading.fit
@@ -118,14 +120,15 @@ class _Reading:
         return np.array([o for _, o in self.fit.lines if max(map(abs, o)) <= 2][:_COUNTED_LINES])
 
 
-def read_cloth(image: NDArray[np.float32]) -> _Reading | None:
+def read_cloth(image: NDArray[np.float32], spectrum: Spectrum | None = None) -> _Reading | None:
     """The weave that a picture's lines are read as most surely, at any of four sizes."""
     best: _Reading | None = None
     reduction = 1
     small = image
     while reduction <= _COARSEST and min(small.shape) >= _SMALLEST_PX:
-        pitch = max(_PITCH, math.isqrt(small.size // _TILES_AT_MOST))
-        spectrum = tile_spectrum(small, size=_TILE, pitch=pitch)
+        if reduction > 1 or spectrum is None or spectrum.size != _TILE:
+            pitch = max(_PITCH, math.isqrt(small.size // _TILES_AT_MOST))
+            spectrum = tile_spectrum(small, size=_TILE, pitch=pitch)
         fit = as_cloth(fit_binding(spectrum, find_lines(spectrum)))
         if fit is not None and (best is None or fit.gain > best.fit.gain):
             best = _Reading(fit=fit, image=small, reduction=reduction)
@@ -241,6 +244,8 @@ def _turned(weave: Weave, binding: Binding) -> Weave:
 
 
 def _halve(image: NDArray[np.float32]) -> NDArray[np.float32]:
-    rows, columns = image.shape[0] // 2 * 2, image.shape[1] // 2 * 2
-    cells = image[:rows, :columns].reshape(rows // 2, 2, columns // 2, 2)
-    return np.ascontiguousarray(cells.mean(axis=(1, 3)), np.float32)
+    import cv2
+
+    rows, columns = image.shape[0] // 2, image.shape[1] // 2
+    small = cv2.resize(image[: 2 * rows, : 2 * columns], (columns, rows), interpolation=cv2.INTER_AREA)
+    return np.asarray(small, np.float32)
