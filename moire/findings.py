@@ -19,7 +19,7 @@ from moire.peaks import Peak
 from moire.screens import measure_line_screen, name_inks, name_line_ink, on_axis, order_of
 from moire.survey import Survey
 from moire.weavealias import WeaveAlias
-from moire.weaves import find_threads, is_surely_cloth
+from moire.weaves import Threads, find_threads, is_surely_cloth, settle_threads
 
 _TEXTURE_LINES, _TEXTURE_OBLIQUE = 4, 2
 _OF_THE_CLOTH, _BEAT_SHARE = 0.15, 0.03
@@ -42,7 +42,7 @@ def group_lines(survey: Survey, second: Survey | None = None, warp: WarpRuns = "
     if 1 <= len(survey.lattices) <= _LATTICES_OF_CLOTH and is_surely_cloth(_strong_window(survey)):
         survey = replace(survey, lattices=(), drifts=(), chroma=())
     if not survey.lattices:
-        threads = find_threads(survey.mixed)
+        threads = _threads(survey, second)
     inks = name_inks(survey.lattices, survey.chroma)
     folds = judge_folds(survey, inks, second)
     groups = [
@@ -89,6 +89,16 @@ def group_lines(survey: Survey, second: Survey | None = None, warp: WarpRuns = "
     if survey.blocks is not None and all(g.finding.kind != "block-grid" for g in groups):
         groups.append(_block_group(survey.blocks))
     return groups
+
+
+def _threads(survey: Survey, second: Survey | None) -> Threads | None:
+    """The cloth in a scan; where its threads may have folded, as another scan settles it."""
+    threads = find_threads(survey.mixed)
+    rate, other_rate = survey.scan.ppi, None if second is None else second.scan.ppi
+    if threads is None or not threads.rivals or second is None or rate is None or other_rate is None:
+        return threads
+    other = find_threads(second.mixed)
+    return threads if other is None else settle_threads(threads, survey.mixed, rate, other, other_rate)
 
 
 def _strong_window(survey: Survey) -> NDArray[np.float32]:

@@ -154,12 +154,18 @@ class Weave:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Candidate:
-    """One true screen that would look like the observed one on this sampling grid."""
+    """One true screen or cloth that would look like the observed one on this sampling grid.
+
+    Of a cloth ``ruling_lpi``, ``angle_deg`` and ``order`` are those of its ends.
+    """
 
     ruling_lpi: float
     angle_deg: float
     order: tuple[int, int]
     probability: float
+    ends_per_cm: float | None = None
+    picks_per_cm: float | None = None
+    structure: str = ""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
