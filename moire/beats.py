@@ -13,6 +13,8 @@ from moire.lattice import Lattice, grid_distance, wrap
 _LOWEST_CPP = 0.07
 _APART_CPP = 0.02
 _BELOW_SCREEN = 0.75
+_LOW_ORDERS = np.array([(m, n) for m in range(-2, 3) for n in range(-2, 3) if 1 <= abs(m) + abs(n) <= 2])
+_ORDER_SIZE = np.abs(_LOW_ORDERS).sum(axis=1)
 
 
 def rosette_frequencies(
@@ -51,13 +53,14 @@ def rosette_parents(
     Orders up to |m| + |n| = 2 of each, the k-vector sum rule (Amidror, The Theory of the
     Moire Phenomenon, ch. 2).
     """
-    orders = [(m, n) for m in range(-2, 3) for n in range(-2, 3) if 1 <= abs(m) + abs(n) <= 2]
     best: tuple[int, int, int, str] | None = None
     for (i, a), (j, b) in combinations(enumerate(lattices), 2):
-        for m, n in orders:
-            for p, q in orders:
-                place = wrap(m * a.k1 + n * a.k2 + p * b.k1 + q * b.k2)
-                total = abs(m) + abs(n) + abs(p) + abs(q)
-                if grid_distance(f, place) < tolerance and (best is None or total < best[0]):
-                    best = (total, i, j, f"({m},{n}) of one and ({p},{q}) of the other")
+        of_a, of_b = (_LOW_ORDERS @ np.stack([g.k1, g.k2]) for g in (a, b))
+        gap = grid_distance(f, of_a[:, None] + of_b[None, :])
+        total = np.where(gap < tolerance, _ORDER_SIZE[:, None] + _ORDER_SIZE[None, :], 99)
+        first, second = np.unravel_index(int(total.argmin()), total.shape)
+        least = int(total[first, second])
+        if least < (99 if best is None else best[0]):
+            (m, n), (p, q) = _LOW_ORDERS[first], _LOW_ORDERS[second]
+            best = (least, i, j, f"({m},{n}) of one and ({p},{q}) of the other")
     return None if best is None else best[1:]

@@ -15,7 +15,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from moire.bindings import Binding, basket, binding_levels, plain, satin, twill
-from moire.peaks import measure_bins
 from moire.spectrallines import FINEST_LINE_CPP, SpectralLine
 from moire.spectrum import Spectrum
 
@@ -119,7 +118,7 @@ def fit_binding(spectrum: Spectrum, lines: tuple[SpectralLine, ...]) -> tuple[Bi
 
 
 def read_as(
-    weave: WeaveLines, frames: NDArray[np.float64], lines: tuple[SpectralLine, ...], z: NDArray[np.float64]
+    weave: WeaveLines, frames: NDArray[np.float64], lines: tuple[SpectralLine, ...], z: NDArray[np.float32]
 ) -> list[BindingFit]:
     """The best few readings of the lines as one weave, from frames of shape (n, 2, 2) to begin with."""
     if not len(frames):
@@ -233,7 +232,7 @@ def _settle(
     frame: NDArray[np.float64],
     lines: tuple[SpectralLine, ...],
     size: int,
-    z: NDArray[np.float64],
+    z: NDArray[np.float32],
 ) -> BindingFit:
     """The frame fitted to all the lines it explains, and its final worth."""
     f = np.array([line.f for line in lines])
@@ -263,7 +262,7 @@ def _settle(
     )
 
 
-def _absent(weave: WeaveLines, frame: NDArray[np.float64], z: NDArray[np.float64]) -> float:
+def _absent(weave: WeaveLines, frame: NDArray[np.float64], z: NDArray[np.float32]) -> float:
     """Price of lines that the weave should show within the band and does not."""
     size = len(z)
 
@@ -309,15 +308,9 @@ def _misnumbered(frame: NDArray[np.float64], lines: tuple[SpectralLine, ...], si
     return price
 
 
-def z_plane(spectrum: Spectrum) -> NDArray[np.float64]:
+def z_plane(spectrum: Spectrum) -> NDArray[np.float32]:
     """How far each bin stands above its background, in robust standard deviations."""
-    n = spectrum.size
-    bins = tuple((x, y) for y in range(n) for x in range(n // 2 + 1))
-    half = np.array([c.z for c in measure_bins(spectrum, bins)]).reshape(n, n // 2 + 1)
-    full = np.empty((n, n))
-    full[:, : n // 2 + 1] = half
-    full[:, n // 2 + 1 :] = half[(-np.arange(n)) % n][:, 1 : n // 2][:, ::-1]
-    return full
+    return np.maximum(spectrum.mean_relief.z, spectrum.top_relief.z)
 
 
 def _distinct(frames: NDArray[np.float64], gains: NDArray[np.float64], size: int) -> list[int]:

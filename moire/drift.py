@@ -12,10 +12,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from moire.spectrum import hann
+from moire.spectrum import Spectrum, hann
 
-SIZE = 128
-_TILES_AT_MOST = 500
 _MAXIMA = 10
 _EXCESS_NAT = 2.2
 _INNER_BINS = 6.0
@@ -23,7 +21,9 @@ _CELL_CPP = 0.01
 _REACH_CPP, _SHRINK, _FINAL_CPP = 0.045, 0.75, 0.006
 _LINES_AT_MOST = 16
 _LEAST_TILES, _LEAST_SHARE = 16, 0.12
-_FLOOR = 0.03
+# A line of that many tiles puts a good part of them into one seed's cell.
+_SEED_SHARE = 0.25
+_AROUND = 21
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -40,7 +40,7 @@ class DriftingLine:
     amplitude, excess_nat : float
         Median over those tiles: code values, ln power above the surroundings.
     weight : ndarray, shape (tile rows, tile columns)
-        1 where a half-overlapped tile of `SIZE` carries it, else 0.
+        1 where a half-overlapped tile carries it, else 0.
     """
 
     f: NDArray[np.float64]
@@ -51,110 +51,113 @@ class DriftingLine:
     weight: NDArray[np.float32]
 
 
-def find_drifting_lines(image: NDArray[np.float32]) -> tuple[DriftingLine, ...]:
+def find_drifting_lines(spectrum: Spectrum, grid: tuple[int, int]) -> tuple[DriftingLine, ...]:
     """Lines that tiles agree on up to a smooth drift, those of most tiles first.
 
     Parameters
     ----------
-    image : ndarray, shape (rows, columns)
-        Code values on a 0..255 scale.
+    spectrum : Spectrum
+        Of the whole page.
+    grid : (int, int)
+        Rows and columns of half-overlapped tiles that the lines' weights are given on.
     """
-    hop = SIZE // 2
-    grid = (image.shape[0] // hop - 1, image.shape[1] // hop - 1)
-    if min(grid) < 3:
+    if min(grid) < 3 or spectrum.tiles < _LEAST_TILES:
         return ()
-    stride = max(1, math.isqrt(grid[0] * grid[1] // _TILES_AT_MOST))
-    tiles = np.array([(y, x) for y in range(0, grid[0], stride) for x in range(0, grid[1], stride)])
-    place, f, excess, amplitude = _tile_maxima(image, tiles, hop)
+    place, f, excess, amplitude = _tile_maxima(spectrum)
     # Each maximum stands for itself and its mirror image: a line may cross from one half plane to
     # the other.
     half = len(f)
     place, f = np.concatenate([place, place]), np.concatenate([f, -f])
-    found: list[DriftingLine] = []
+    low, high = spectrum.starts.min(axis=0), spectrum.starts.max(axis=0)
+    where = (2 * spectrum.starts - low - high) / np.maximum(high - low, 1)
+    basis = _basis(where)[place]
+    nearest = _nearest_tiles(spectrum, grid)
+    least = max(_LEAST_TILES, int(_LEAST_SHARE * spectrum.tiles))
+    found = []
     free = np.ones(2 * half, bool)
-    middle, span = (tiles.mean(axis=0), np.maximum(np.ptp(tiles, axis=0), 1) / 2)
-    where = (tiles[place] - middle) / span
     for _ in range(_LINES_AT_MOST):
-        seed = _densest(f[free])
+        seed = _densest(f[free], least)
         if seed is None:
             break
-        members, fit = _follow(f, where, place, free, seed)
-        least = max(_LEAST_TILES, int(_LEAST_SHARE * len(tiles)))
+        members, fit = _follow(f, basis, place, free, seed)
         if len(members) < least:
             # The seed's own neighbourhood is spent: look elsewhere.
             free &= np.minimum(np.linalg.norm(f - seed, axis=1), np.linalg.norm(f + seed, axis=1)) > _CELL_CPP
             continue
         free[members] = free[(members + half) % (2 * half)] = False
-        local = _basis(where[members]) @ fit
-        size = np.hypot(local[:, 0], local[:, 1])
+        local = basis[members] @ fit
+        length = np.hypot(local[:, 0], local[:, 1])
         rest = f[members] - local
-        weight = np.zeros(grid, np.float32)
-        for y, x in tiles[place[members]]:
-            weight[
-                max(0, y - stride // 2) : y + stride // 2 + 1, max(0, x - stride // 2) : x + stride // 2 + 1
-            ] = 1
+        carries = np.zeros(spectrum.tiles, np.float32)
+        carries[place[members]] = 1
         found.append(
             DriftingLine(
                 f=np.median(local, axis=0),
                 sigma=1.5 * rest.std(axis=0) / math.sqrt(len(members)),
-                drift=float((np.quantile(size, 0.98) - np.quantile(size, 0.02)) / size.mean()),
+                drift=float((np.quantile(length, 0.98) - np.quantile(length, 0.02)) / length.mean()),
                 amplitude=float(np.median(amplitude[members % half])),
                 excess_nat=float(np.median(excess[members % half])),
-                weight=_spread(tiles[place[members]], grid, stride),
+                weight=np.where(nearest < 0, np.float32(0), carries[nearest]),
             )
         )
     return tuple(sorted(found, key=lambda line: -float(line.weight.sum())))
 
 
-def _spread(tiles: NDArray[np.int64], grid: tuple[int, int], stride: int) -> NDArray[np.float32]:
-    """1 at the given tiles and at those left out around them."""
-    weight = np.zeros(grid, np.float32)
-    half = stride // 2
-    for y, x in tiles:
-        weight[max(0, y - half) : y + half + 1, max(0, x - half) : x + half + 1] = 1
-    return weight
+def _nearest_tiles(spectrum: Spectrum, grid: tuple[int, int]) -> NDArray[np.int64]:
+    """Index of the spectrum's tile nearest to each half-overlapped one, -1 where none is near."""
+    from scipy.spatial import cKDTree
+
+    size = spectrum.size
+    at = np.stack(np.meshgrid(*(np.arange(n) * (size // 2) for n in grid), indexing="ij"), axis=-1)
+    gap, nearest = cKDTree(spectrum.starts).query(at, p=np.inf)
+    return np.where(gap <= size, nearest, -1)
 
 
 def _tile_maxima(
-    image: NDArray[np.float32], tiles: NDArray[np.int64], hop: int
+    spectrum: Spectrum,
 ) -> tuple[NDArray[np.int64], NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
     """Tile index, frequency, excess and amplitude of the strongest local maxima of every tile."""
     import cv2
-    from scipy import fft
 
-    window = np.outer(hann(SIZE), hann(SIZE))
-    energy = float(np.sqrt((window**2).sum()))
-    ky, kx = np.meshgrid(np.fft.fftfreq(SIZE, 1 / SIZE), np.fft.fftfreq(SIZE, 1 / SIZE), indexing="ij")
-    inside = ((kx > 0) | ((kx == 0) & (ky > 0))) & (np.hypot(kx, ky) >= _INNER_BINS)
-    index, places, excesses, amplitudes = [], [], [], []
-    for i, (y, x) in enumerate(tiles):
-        tile = image[y * hop : y * hop + SIZE, x * hop : x * hop + SIZE]
-        tile = (tile - float((tile * window).sum() / window.sum())) * window
-        power = np.abs(fft.fft2(tile)) ** 2 / energy**2
-        plane = np.log(power + _FLOOR).astype(np.float32)
-        wrapped = np.pad(plane, 11, mode="wrap")
-        excess = plane - cv2.blur(wrapped, (21, 21))[11:-11, 11:-11]
-        peak = (plane >= cv2.dilate(wrapped, np.ones((3, 3), np.uint8))[11:-11, 11:-11]) & inside
-        ys, xs = np.nonzero(peak & (excess > _EXCESS_NAT))
-        best = np.argsort(-excess[ys, xs])[:_MAXIMA]
-        for v, u in zip(ys[best], xs[best], strict=True):
-            across = _vertex(plane[v, u - 1], plane[v, u], plane[v, (u + 1) % SIZE])
-            down = _vertex(plane[v - 1, u], plane[v, u], plane[(v + 1) % SIZE, u])
-            index.append(i)
-            places.append(((kx[v, u] + across) / SIZE, (ky[v, u] + down) / SIZE))
-            excesses.append(excess[v, u])
-            amplitudes.append(2 * math.sqrt(power[v, u]) * energy / window.sum())
-    f = np.array(places).reshape(-1, 2)
-    return np.array(index, int), f, np.array(excesses), np.array(amplitudes)
+    size, around = spectrum.size, _AROUND // 2
+    # The right half of each plane with what lies around it: columns mirror, rows wrap.
+    left = np.roll(spectrum.log_power[:, ::-1, around:0:-1], 1, axis=1)
+    right = np.roll(spectrum.log_power[:, ::-1, -2 : -2 - around : -1], 1, axis=1)
+    plane = np.concatenate([left, spectrum.log_power, right], axis=2)
+    plane = np.concatenate([plane[:, -around:], plane, plane[:, :around]], axis=1)
+    # One tall picture: the margins keep tiles apart.
+    tall = plane.reshape(-1, plane.shape[2])
+    excess = tall - cv2.blur(tall, (_AROUND, _AROUND))
+    high = (tall >= cv2.dilate(tall, np.ones((3, 3), np.uint8))) & (excess > _EXCESS_NAT)
+    inner = (slice(None), slice(around, around + size), slice(around, around + size // 2 + 1))
+    ky, kx = np.meshgrid(np.fft.fftfreq(size, 1 / size), np.arange(size // 2 + 1), indexing="ij")
+    inside = ((kx > 0) | (ky > 0)) & (np.hypot(kx, ky) >= _INNER_BINS)
+    tile, v, u = np.nonzero(high.reshape(plane.shape)[inner] & inside)
+    strength = excess.reshape(plane.shape)[inner][tile, v, u]
+    order = np.lexsort((-strength, tile))
+    rank = np.arange(len(tile)) - np.searchsorted(tile, tile)
+    kept = order[rank < _MAXIMA]
+    tile, v, u, strength = tile[kept], v[kept], u[kept], strength[kept]
+    row, column = v + around, u + around
+    middle = plane[tile, row, column]
+    across = _vertex(plane[tile, row, column - 1], middle, plane[tile, row, column + 1])
+    down = _vertex(plane[tile, row - 1, column], middle, plane[tile, row + 1, column])
+    f = np.stack([(kx[v, u] + across) / size, (ky[v, u] + down) / size], axis=1)
+    # Tapers of unit energy: a line of amplitude a has a peak of a sum(w) / 2.
+    taper = hann(size).astype(np.float64)
+    amplitude = 2 * np.exp(middle / 2) * (taper**2).sum() / taper.sum() ** 2
+    return tile, f, strength.astype(np.float64), amplitude
 
 
-def _vertex(left: float, middle: float, right: float) -> float:
+def _vertex(
+    left: NDArray[np.float32], middle: NDArray[np.float32], right: NDArray[np.float32]
+) -> NDArray[np.float64]:
     """Offset of a parabola's top through three log powers, in bins (good to 0.02 bin with Hann)."""
-    curve = left - 2 * middle + right
-    return float(np.clip(0.5 * (left - right) / curve, -0.5, 0.5)) if curve < 0 else 0.0
+    curve = np.minimum(left - 2 * middle + right, -1e-6)
+    return np.clip(0.5 * (left - right) / curve, -0.5, 0.5).astype(np.float64)
 
 
-def _densest(f: NDArray[np.float64]) -> NDArray[np.float64] | None:
+def _densest(f: NDArray[np.float64], least: int) -> NDArray[np.float64] | None:
     """Centre of the cell of the frequency plane, with its neighbours, that most maxima fall in."""
     from scipy import ndimage
 
@@ -164,14 +167,14 @@ def _densest(f: NDArray[np.float64]) -> NDArray[np.float64] | None:
     votes, xs, ys = np.histogram2d(f[:, 0], f[:, 1], bins=side, range=[[-0.5, 0.5], [-0.5, 0.5]])
     votes = ndimage.uniform_filter(votes, 3, mode="wrap")
     i, j = np.unravel_index(int(np.argmax(votes)), votes.shape)
-    if votes[i, j] * 9 < _LEAST_TILES / 2:
+    if votes[i, j] * 9 < max(_LEAST_TILES / 2, _SEED_SHARE * least):
         return None
     return np.array([(xs[i] + xs[i + 1]) / 2, (ys[j] + ys[j + 1]) / 2])
 
 
 def _follow(
     f: NDArray[np.float64],
-    where: NDArray[np.float64],
+    basis: NDArray[np.float64],
     place: NDArray[np.int64],
     free: NDArray[np.bool_],
     seed: NDArray[np.float64],
@@ -181,10 +184,12 @@ def _follow(
     fit[0] = seed
     reach = _REACH_CPP
     members = np.empty(0, int)
+    # No map strays further from its seed than a few times the first reach.
+    about = np.flatnonzero(free & (np.abs(f - seed).max(axis=1) < 3 * _REACH_CPP))
     while reach > _FINAL_CPP:
-        gap = np.linalg.norm(f - _basis(where) @ fit, axis=1)
-        near = np.flatnonzero(free & (gap < reach))
-        near = near[np.argsort(gap[near])]
+        gap = np.linalg.norm(f[about] - basis[about] @ fit, axis=1)
+        inside = gap < reach
+        near = about[inside][np.argsort(gap[inside])]
         _, first = np.unique(place[near], return_index=True)
         members = near[first]
         if len(members) < _LEAST_TILES:
@@ -192,7 +197,7 @@ def _follow(
         # Few tiles cannot hold a curved map.
         terms = 6 if len(members) > 40 else 3
         fit = np.zeros((6, 2))
-        fit[:terms] = np.linalg.lstsq(_basis(where[members])[:, :terms], f[members], rcond=None)[0]
+        fit[:terms] = np.linalg.lstsq(basis[members][:, :terms], f[members], rcond=None)[0]
         reach *= _SHRINK
     return members, fit
 

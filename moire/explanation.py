@@ -32,13 +32,11 @@ def explained(pair: Lattice, generators: list[Lattice], *, size: int, jpeg: bool
     coloured = len(pair.colour) == 3 and not (pair.first.doubled or pair.second.doubled)
     likeness = (_SAME_COLOUR_JPEG if jpeg else _SAME_COLOUR) if coloured else -1.0
     kin = [(g, s) for g, s in parents if alike(pair.colour, g.colour) > likeness]
-    return any(
-        (
-            any(_is_order(pair, strength, g, s, tau) for g, s in (parents if jpeg else kin)),
-            any(_is_suborder(pair, strength, g, s, tau) for g, s in kin),
-            _is_sum(pair, strength, parents, tau, -1.0 if jpeg else likeness),
-            jpeg and _is_block_image(pair, strength, parents, tau),
-        )
+    return (
+        any(_is_order(pair, strength, g, s, tau) for g, s in (parents if jpeg else kin))
+        or any(_is_suborder(pair, strength, g, s, tau) for g, s in kin)
+        or _is_sum(pair, strength, parents, tau, -1.0 if jpeg else likeness)
+        or (jpeg and _is_block_image(pair, strength, parents, tau))
     )
 
 

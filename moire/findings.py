@@ -93,11 +93,11 @@ def group_lines(survey: Survey, second: Survey | None = None, warp: WarpRuns = "
 
 def _threads(survey: Survey, second: Survey | None) -> Threads | None:
     """The cloth in a scan; where its threads may have folded, as another scan settles it."""
-    threads = find_threads(survey.mixed)
+    threads = find_threads(survey.mixed, survey.spectrum)
     rate, other_rate = survey.scan.ppi, None if second is None else second.scan.ppi
     if threads is None or not threads.rivals or second is None or rate is None or other_rate is None:
         return threads
-    other = find_threads(second.mixed)
+    other = find_threads(second.mixed, second.spectrum)
     return threads if other is None else settle_threads(threads, survey.mixed, rate, other, other_rate)
 
 

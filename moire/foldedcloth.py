@@ -37,7 +37,7 @@ def fit_folded(spectrum: Spectrum, lines: tuple[SpectralLine, ...]) -> tuple[Bin
     """
     folded = [_folded_along(lines, axis) for axis in (0, 1)]
     best: list[BindingFit] = []
-    z = z_plane(spectrum) if any(folded) else np.zeros((0, 0))
+    z = z_plane(spectrum) if any(folded) else np.zeros((0, 0), np.float32)
     for warp, weft in product(*((None, *found) for found in folded)):
         chosen = [line for line in (warp, weft) if line is not None]
         if not chosen:

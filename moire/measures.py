@@ -13,6 +13,7 @@ from moire.spectrum import tile_means, tile_phasors
 from moire.vision import lightness
 
 _EDGES = 300
+_LEVEL_TILES = 16
 
 
 def line_levels(
@@ -81,10 +82,9 @@ def levels_where_strong(
     """
     swing, tone = np.zeros(len(peaks)), np.zeros(len(peaks))
     for i, peak in enumerate(peaks):
-        tiles = strong_tiles(peak.weight)
-        patches = cut_patches(codes, tiles, size=size)
-        light = lightness(patches.reshape(-1, size, codes.shape[2])).reshape(-1, size, size, 1)
-        v, means = patch_phasors(light, peak.f[None])
+        tiles = strong_tiles(peak.weight, _LEVEL_TILES)
+        light = lightness(cut_patches(codes, tiles, size=size))
+        v, means = patch_phasors(light[..., None], peak.f[None])
         turn = np.exp(-2j * np.pi * (size // 2) * (tiles[:, 1] * peak.f[0] + tiles[:, 0] * peak.f[1]))
         in_step = abs((v[0, :, 0] * turn).mean())
         apart = np.abs(v[0, :, 0]).mean()

@@ -6,12 +6,13 @@ accepted before it is believed to be a screen.
 
 from __future__ import annotations
 
-from itertools import combinations, product
+from collections.abc import Iterator
+from itertools import product
 
 import numpy as np
 
 from moire.explanation import explained
-from moire.lattice import Lattice, Vector, alike, grid_distance, overlap, quarter_turn, transfer, wrap
+from moire.lattice import Lattice, alike, grid_distance, overlap, quarter_turn, transfer, wrap
 from moire.peaks import Peak
 
 _PAIR_BINS = 0.15
@@ -113,12 +114,9 @@ def missing_partners(
 
 def _pairs(peaks: tuple[Peak, ...], size: int, aspect: tuple[float, float], slack: float) -> list[Lattice]:
     found = []
-    for a, b in combinations(range(len(peaks)), 2):
+    for a, b, error, sense in _right_angles(peaks, size, aspect, slack):
         p, q = peaks[a], peaks[b]
-        best = _partner_error(p.f, q.f, aspect)
-        if best is None or _at_half_rate(p.f, size):
-            continue
-        error, k1, k2 = best
+        k1, k2 = p.f, sense * q.f
         bins = error * size
         ratio = max(p.amplitude, q.amplitude) / max(min(p.amplitude, q.amplitude), 1e-9)
         cosine = alike(p.colour, q.colour)
@@ -135,23 +133,26 @@ def _pairs(peaks: tuple[Peak, ...], size: int, aspect: tuple[float, float], slac
     return found
 
 
-def _at_half_rate(f: Vector, size: int) -> bool:
-    """Whether a line sits on the edge of the grid, where phase and amplitude cannot be told apart."""
-    return bool(np.linalg.norm(wrap(2 * f)) < 1 / size)
+def _right_angles(
+    peaks: tuple[Peak, ...], size: int, aspect: tuple[float, float], slack: float
+) -> Iterator[tuple[int, int, float, float]]:
+    """Pairs near enough to a right angle: both indices, the gap in cycles per pixel, the sense of the second.
 
-
-def _partner_error(f: Vector, g: Vector, aspect: tuple[float, float]) -> tuple[float, Vector, Vector] | None:
-    """How far `g` is from `f` turned by 90 degrees, and the two with one common sense."""
-    if aspect[0] == aspect[1]:
-        shifts = [np.zeros(2)]
-    else:
-        # On an uneven grid folding and turning do not commute: try the next orders too.
-        shifts = [np.array(s, float) for s in product((0, -1, 1), repeat=2)]
-    best = None
-    for shift in shifts:
-        turned = wrap(quarter_turn(f + shift, aspect))
-        for sign in (1.0, -1.0):
-            error = float(np.linalg.norm(wrap(sign * g - turned)))
-            if best is None or error < best[0]:
-                best = (error, f, sign * g)
-    return best
+    Lines on the edge of the grid are left out: phase and amplitude cannot be told apart there.
+    """
+    f = np.array([p.f for p in peaks]).reshape(-1, 2)
+    edge = np.linalg.norm(wrap(2 * f), axis=1) < 1 / size
+    allowed = slack * np.maximum(_PAIR_BINS / size, _PAIR_SHARE * np.linalg.norm(f, axis=1))
+    # On an uneven grid folding and turning do not commute: try the next orders too.
+    shifts = np.array([(0.0, 0.0)] if aspect[0] == aspect[1] else list(product((0.0, -1.0, 1.0), repeat=2)))
+    x, y = (f[:, None] + shifts).transpose(2, 0, 1)
+    turned = np.stack([y * aspect[1] / aspect[0], -x * aspect[0] / aspect[1]], axis=-1)
+    senses = np.array([1.0, -1.0])
+    for a in range(len(peaks) - 1):
+        if edge[a]:
+            continue
+        gap = np.linalg.norm(wrap(senses[:, None] * f[a + 1 :, None, None] - turned[a][:, None]), axis=-1)
+        flat = gap.reshape(len(gap), -1)
+        least = flat.min(axis=1)
+        for i in np.flatnonzero(least <= allowed[a]):
+            yield a, a + 1 + int(i), float(least[i]), float(senses[flat[i].argmin() % 2])

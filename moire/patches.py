@@ -29,16 +29,17 @@ def strong_tiles(weight: NDArray[np.floating], limit: int = TILES_AT_MOST) -> ND
     return strong[np.linspace(0, len(strong) - 1, min(limit, len(strong))).astype(int)]
 
 
-def cut_patches(codes: Codes, tiles: NDArray[np.int64], *, size: int) -> NDArray[np.float32]:
+def cut_patches(codes: Codes, tiles: NDArray[np.int64], *, size: int) -> Codes:
     """Pixels of half-overlapped tiles, shape (tiles, size, size, channels)."""
     hop = size // 2
-    return np.stack([codes[y * hop : y * hop + size, x * hop : x * hop + size] for y, x in tiles]).astype(
-        np.float32
-    )
+    cut = np.empty((len(tiles), size, size, codes.shape[2]), codes.dtype)
+    for patch, (y, x) in zip(cut, tiles * hop, strict=True):
+        patch[...] = codes[y : y + size, x : x + size]
+    return cut
 
 
 def patch_phasors(
-    patches: NDArray[np.float32], frequencies: NDArray[np.float64]
+    patches: Codes, frequencies: NDArray[np.float64]
 ) -> tuple[NDArray[np.complex64], NDArray[np.float32]]:
     """Complex amplitudes of lines in Hann-tapered patches, and the patches' means.
 
@@ -55,12 +56,16 @@ def patch_phasors(
     means : ndarray, shape (tiles, channels)
     """
     tiles, size, _, channels = patches.shape
+    n = len(frequencies)
     window = hann(size) / hann(size).sum()
-    means = patches.mean(axis=(1, 2))
-    flat = (patches - means[:, None, None, :]).transpose(0, 3, 1, 2)
     wave = np.exp(-2j * np.pi * frequencies[:, :, None] * np.arange(size)) * window
     across, down = wave[:, 0].astype(np.complex64), wave[:, 1].astype(np.complex64)
-    rows = np.ascontiguousarray(flat).reshape(-1, size) @ np.concatenate([across.real, across.imag]).T
-    half = len(frequencies)
-    lines = (rows[:, :half] + 1j * rows[:, half:]).reshape(tiles, channels, size, half)
-    return 2 * np.einsum("tcyf,fy->ftc", lines, down), means
+    # One product over all rows: both parts of each wave, and the plain mean.
+    rows = np.concatenate([down.real, down.imag, np.full((1, size), 1 / size, np.float32)])
+    sums = np.matmul(rows, patches.reshape(tiles, size, size * channels).astype(np.float32, copy=False))
+    means = sums[:, -1].reshape(tiles, size, channels).mean(axis=1)
+    lines = (sums[:, :n] + 1j * sums[:, n : 2 * n]).reshape(tiles, n, size, channels)
+    v = np.einsum("tfxc,fx->ftc", lines, across)
+    # What the mean alone leaks through the taper.
+    v -= (across.sum(axis=1) * down.sum(axis=1))[:, None, None] * means
+    return 2 * v, means

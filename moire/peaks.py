@@ -11,12 +11,12 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from moire.relief import Relief
 from moire.spectrum import Spectrum
 
 Z_THRESHOLD = 6.5
 _EXCESS_NAT = 0.35
 _INNER_BINS = 3.5
-_LOG_EXPONENTIAL_SD = 1.283
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -82,8 +82,8 @@ def find_candidates(spectrum: Spectrum, *, limit: int = 60) -> tuple[Candidate, 
     if spectrum.tiles < 2:
         return ()
     best: dict[tuple[int, int], Candidate] = {}
-    for plane, top in _planes(spectrum):
-        for found in _plane_candidates(plane, spectrum, top=top):
+    for plane, relief in _planes(spectrum):
+        for found in _plane_candidates(plane, relief):
             key = (found.kx, found.ky)
             if key not in best or found.z > best[key].z:
                 best[key] = found
@@ -111,71 +111,33 @@ def measure_bins(spectrum: Spectrum, bins: tuple[tuple[int, int], ...]) -> tuple
     if not bins or spectrum.tiles < 2:
         return ()
     kx, ky = np.array(bins).T
-    levels = [_levels(plane, spectrum, ky, kx, top=top) for plane, top in _planes(spectrum)]
-    z = np.max([level[0] for level in levels], axis=0)
-    excess = np.max([level[1] for level in levels], axis=0)
+    at = (ky % spectrum.size, kx % spectrum.size)
+    z = np.max([relief.z[at] for _, relief in _planes(spectrum)], axis=0)
+    excess = np.max([relief.excess[at] for _, relief in _planes(spectrum)], axis=0)
     return tuple(
         Candidate(kx=int(x), ky=int(y), z=float(zz), excess_nat=float(e))
         for x, y, zz, e in zip(kx, ky, z, excess, strict=True)
     )
 
 
-def _planes(spectrum: Spectrum) -> tuple[tuple[NDArray[np.float32], bool], ...]:
-    return (spectrum.mean, False), (spectrum.top, True)
+def _planes(spectrum: Spectrum) -> tuple[tuple[NDArray[np.float32], Relief], ...]:
+    return (spectrum.mean, spectrum.mean_relief), (spectrum.top, spectrum.top_relief)
 
 
-def _plane_candidates(plane: NDArray[np.float32], spectrum: Spectrum, *, top: bool) -> list[Candidate]:
+def _plane_candidates(plane: NDArray[np.float32], relief: Relief) -> list[Candidate]:
     from scipy import ndimage
 
-    n = spectrum.size
+    n = plane.shape[0]
     ky, kx = np.meshgrid(np.fft.fftfreq(n, 1 / n), np.fft.fftfreq(n, 1 / n), indexing="ij")
     half = (kx > 0) | ((kx == 0) & (ky > 0)) | (kx == -n // 2)
     inside = half & (np.hypot(kx, ky) >= _INNER_BINS)
-    maxima = (plane >= ndimage.maximum_filter(plane, 3, mode="wrap")) & inside
+    found = inside & (relief.z > Z_THRESHOLD) & (relief.excess > _EXCESS_NAT)
+    found &= plane >= ndimage.maximum_filter(plane, 3, mode="wrap")
     raised = plane - ndimage.uniform_filter(plane, 15, mode="wrap")
-    spread = 1.4826 * np.median(np.abs(raised - np.median(raised)))
-    maxima &= raised > 2.5 * spread
-    ys, xs = np.nonzero(maxima)
-    z, excess = _levels(plane, spectrum, ys, xs, top=top)
-    keep = (z > Z_THRESHOLD) & (excess > _EXCESS_NAT)
+    found &= raised > 2.5 * 1.4826 * np.median(np.abs(raised - np.median(raised)))
     return [
-        Candidate(kx=int(kx[y, x]), ky=int(ky[y, x]), z=float(zz), excess_nat=float(e))
-        for y, x, zz, e in zip(ys[keep], xs[keep], z[keep], excess[keep], strict=True)
+        Candidate(
+            kx=int(kx[y, x]), ky=int(ky[y, x]), z=float(relief.z[y, x]), excess_nat=float(relief.excess[y, x])
+        )
+        for y, x in np.argwhere(found)
     ]
-
-
-def _levels(
-    plane: NDArray[np.float32], spectrum: Spectrum, ys: NDArray[np.int64], xs: NDArray[np.int64], *, top: bool
-) -> tuple[NDArray[np.floating], NDArray[np.floating]]:
-    """Robust z and excess over the background of given bins."""
-    n = spectrum.size
-    # The noise of the statistic is taken at random places, away from the origin.
-    rng = np.random.default_rng(0)
-    radius = np.hypot(np.fft.fftfreq(n, 1 / n)[:, None], np.fft.fftfreq(n, 1 / n)[None, :])
-    far = np.argwhere(radius > n / 16)
-    sample = far[rng.choice(len(far), min(1500, len(far)), replace=False)]
-    reference = plane[sample[:, 0], sample[:, 1]] - _background(plane, sample[:, 0], sample[:, 1])
-    centre = float(np.median(reference))
-    mad = 1.4826 * float(np.median(np.abs(reference - centre)))
-    sd = mad if top else max(mad, _LOG_EXPONENTIAL_SD * np.sqrt(1.1 / spectrum.tiles))
-    excess = plane[ys % n, xs % n] - _background(plane, ys, xs)
-    return (excess - centre) / max(sd, 1e-6), excess
-
-
-def _background(
-    plane: NDArray[np.float32], ys: NDArray[np.int64], xs: NDArray[np.int64]
-) -> NDArray[np.float32]:
-    """Largest over 12 directions of the lower of two means, 3 to 6 bins out on either side.
-
-    A streak is high on both sides in its own direction and cancels itself; a neighbouring
-    peak is high on one side only and does no harm.
-    """
-    n = plane.shape[0]
-    sides = []
-    for angle in np.pi * np.arange(12) / 12:
-        radii = np.arange(3, 7)
-        dx, dy = np.rint(radii * np.cos(angle)).astype(int), np.rint(radii * np.sin(angle)).astype(int)
-        plus = plane[(ys[:, None] + dy) % n, (xs[:, None] + dx) % n].mean(axis=1)
-        minus = plane[(ys[:, None] - dy) % n, (xs[:, None] - dx) % n].mean(axis=1)
-        sides.append(np.minimum(plus, minus))
-    return np.asarray(np.max(sides, axis=0))

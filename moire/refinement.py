@@ -145,62 +145,70 @@ def _climb(
     Maximises ``|sum v exp(-2 pi i d.r)|^2`` over tile centres r: a zero-padded FFT of the
     tile grid, then Newton steps on the phase.
     """
-    total = float(np.abs(v).sum())
+    from scipy import fft
+
+    size = np.abs(v)
+    total = float(size.sum())
     if total <= 0:
         return np.zeros(2), np.full(2, np.inf), 0.0
     hop_x = x[1] - x[0] if len(x) > 1 else 1.0
     hop_y = y[1] - y[0] if len(y) > 1 else 1.0
-    pad = (4 * v.shape[0], 4 * v.shape[1])
-    power = np.abs(np.fft.fft2(v, pad))
-    row, column = np.unravel_index(int(np.argmax(power)), power.shape)
+    pad = tuple(fft.next_fast_len(2 * side) for side in v.shape)
+    transform = fft.fft2(v.astype(np.complex64), pad)
+    row, column = np.unravel_index(int(np.argmax(np.abs(transform))), pad)
     step = np.array([np.fft.fftfreq(pad[1], hop_x)[column], np.fft.fftfreq(pad[0], hop_y)[row]])
-    gx, gy = np.meshgrid(x - x.mean(), y - y.mean())
-    design = np.stack([np.ones(v.size), 2 * np.pi * gx.ravel(), 2 * np.pi * gy.ravel()], axis=1)
-    flat = v.ravel()
-    free = [0] + ([1] if v.shape[1] > 1 else []) + ([2] if v.shape[0] > 1 else [])
-    rotated = flat
+    ax, ay = 2 * np.pi * (x - x.mean()), 2 * np.pi * (y - y.mean())
+    free = [0] + ([1] if len(x) > 1 else []) + ([2] if len(y) > 1 else [])
+    limit = 0.5 / np.array([max(np.ptp(x), hop_x), max(np.ptp(y), hop_y)])
+    rotated = v
     for _ in range(8):
-        turned = flat * np.exp(-1j * (design[:, 1] * step[0] + design[:, 2] * step[1]))
+        turned = v * np.exp(-1j * step[0] * ax) * np.exp(-1j * step[1] * ay)[:, None]
         mean = turned.sum()
-        rotated = turned * np.conj(mean) / max(abs(mean), 1e-12)
-        weight = np.abs(flat) * np.maximum(np.cos(np.angle(rotated)), 0)
-        normal = (design * weight[:, None]).T @ design
+        rotated = turned * (np.conj(mean) / max(abs(mean), 1e-12))
+        normal = _moments(np.maximum(rotated.real, 0), ax, ay)
+        slope = rotated.imag
+        lean = np.array([slope.sum(), slope.sum(axis=0) @ ax, slope.sum(axis=1) @ ay])
         move = np.zeros(3)
-        move[free] = np.linalg.lstsq(
-            normal[np.ix_(free, free)], design[:, free].T @ rotated.imag, rcond=None
-        )[0]
-        limit = 0.5 / np.array([max(np.ptp(x), hop_x), max(np.ptp(y), hop_y)])
+        move[free] = np.linalg.lstsq(normal[np.ix_(free, free)], lean[free], rcond=None)[0]
         step = step + np.clip(move[1:], -limit, limit)
         if np.all(np.abs(move[1:]) < 1e-4 * limit):
             break
-    sigma = _sandwich(design, free, rotated, np.abs(flat), v.shape)
+    sigma = _sandwich(rotated.imag, size, ax, ay, free)
     return step, sigma, float(np.abs(rotated.sum()) / total)
 
 
+def _moments(
+    weight: NDArray[np.float64], ax: NDArray[np.float64], ay: NDArray[np.float64]
+) -> NDArray[np.float64]:
+    """Weighted sums of products of (1, ax, ay) over a grid, shape (3, 3)."""
+    across, down = weight.sum(axis=0), weight.sum(axis=1)
+    w, wx, wy, wxy = across.sum(), across @ ax, down @ ay, ay @ weight @ ax
+    return np.array([[w, wx, wy], [wx, across @ ax**2, wxy], [wy, wxy, down @ ay**2]])
+
+
 def _sandwich(
-    design: NDArray[np.float64],
-    free: list[int],
-    rotated: NDArray[np.complex128],
+    slope: NDArray[np.float64],
     weight: NDArray[np.float64],
-    shape: tuple[int, ...],
+    ax: NDArray[np.float64],
+    ay: NDArray[np.float64],
+    free: list[int],
 ) -> NDArray[np.float64]:
     """Uncertainty of the step from residual phases, summed by blocks of tiles.
 
     Blocks make the estimate honest about overlap and about tone that spans several tiles
     (cluster-robust covariance: Liang and Zeger, Biometrika 73 (1986) 13).
     """
-    block = 3 if min(shape) >= 9 else 2
-    columns = -(-shape[1] // block)
-    rows_at, columns_at = np.divmod(np.arange(weight.size), shape[1])
-    label = (rows_at // block) * columns + columns_at // block
-    used = design[:, free]
-    scores = used * rotated.imag[:, None]
-    sums = np.zeros((label.max() + 1, len(free)))
-    np.add.at(sums, label, scores)
-    blocks = int((np.bincount(label, weight) > 0).sum())
-    inverse = np.linalg.pinv((used * weight[:, None]).T @ used)
+    block = 3 if min(slope.shape) >= 9 else 2
+    rows, columns = (np.arange(0, side, block) for side in slope.shape)
+
+    def sums(values: NDArray[np.float64]) -> NDArray[np.float64]:
+        return np.add.reduceat(np.add.reduceat(values, rows, axis=0), columns, axis=1).ravel()
+
+    scores = np.stack([sums(slope), sums(slope * ax), sums(slope * ay[:, None])])[free]
+    blocks = int((sums(weight) > 0).sum())
+    inverse = np.linalg.pinv(_moments(weight, ax, ay)[np.ix_(free, free)])
     correction = blocks / max(blocks - len(free), 0.5)
-    covariance = inverse @ (sums.T @ sums) @ inverse * correction
+    covariance = inverse @ (scores @ scores.T) @ inverse * correction
     sigma = np.full(3, np.inf)
     sigma[free] = np.sqrt(np.maximum(np.diag(covariance), 0))
     return sigma[1:]

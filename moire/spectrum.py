@@ -12,6 +12,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from moire.relief import Relief, raise_relief
+
 _BLANK_POWER = 0.005
 _FLOOR = 0.03
 
@@ -24,16 +26,28 @@ class Spectrum:
     ----------
     size : int
         Tile side in pixels; bin `k` is ``k / size`` cycles per pixel.
-    tiles : int
-        Tiles that carried a picture.
+    log_power : ndarray, shape (tiles, size, size // 2 + 1)
+        ln power of each tile that carried a picture, right half of its plane.
+    starts : ndarray, shape (tiles, 2)
+        First row and column of those tiles.
     mean, top : ndarray, shape (size, size)
         Mean of ln power, and mean of its strongest tenth, at each bin.
+    mean_relief, top_relief : Relief
+        How far those stand out.
     """
 
     size: int
-    tiles: int
+    log_power: NDArray[np.float32]
+    starts: NDArray[np.int64]
     mean: NDArray[np.float32]
     top: NDArray[np.float32]
+    mean_relief: Relief
+    top_relief: Relief
+
+    @property
+    def tiles(self) -> int:
+        """Tiles that carried a picture."""
+        return len(self.log_power)
 
 
 def hann(n: int) -> NDArray[np.float32]:
@@ -66,30 +80,47 @@ def tile_spectrum(image: NDArray[np.float32], *, size: int, pitch: int) -> Spect
 
     window = np.outer(hann(size), hann(size))
     window /= np.sqrt((window**2).sum())
-    weight = window / window.sum()
-    half: list[NDArray[np.float32]] = []
+    weight = (window / window.sum()).ravel()
+    blank = np.full((0, size, size // 2 + 1), 0, np.float32)
+    half, starts = [blank], [np.zeros((0, 2), int)]
     columns = tile_starts(image.shape[1], size, pitch)
     for y in tile_starts(image.shape[0], size, pitch):
         strip = image[y : y + size]
         tiles = np.stack([strip[:, x : x + size] for x in columns])
-        tiles = (tiles - (tiles * weight).sum(axis=(1, 2), keepdims=True)) * window
-        tiles = tiles[(tiles**2).sum(axis=(1, 2)) > _BLANK_POWER]
-        if len(tiles):
-            transform = fft.rfft2(tiles)
-            half.append(np.log(transform.real**2 + transform.imag**2 + _FLOOR))
-    if not half:
-        blank = np.full((size, size), np.log(_FLOOR), np.float32)
-        return Spectrum(size=size, tiles=0, mean=blank, top=blank)
+        tiles -= (tiles.reshape(len(columns), -1) @ weight)[:, None, None]
+        tiles *= window
+        carries = np.einsum("nij,nij->n", tiles, tiles) > _BLANK_POWER
+        if carries.any():
+            size_of = np.abs(fft.rfft2(tiles if carries.all() else tiles[carries]))
+            half.append(np.log(size_of * size_of + np.float32(_FLOOR)))
+            starts.append(np.stack([np.full(carries.sum(), y), columns[carries]], axis=1))
     log_power = np.concatenate(half)
+    if not len(log_power):
+        return _summed(size, log_power, np.concatenate(starts), np.full(blank.shape[1:], np.log(_FLOOR)))
     count = max(2, len(log_power) // 10)
     top = log_power
     if count < len(log_power):
         top = np.partition(log_power, len(log_power) - count, axis=0)[-count:]
+    return _summed(size, log_power, np.concatenate(starts), log_power.mean(axis=0), top.mean(axis=0))
+
+
+def _summed(
+    size: int,
+    log_power: NDArray[np.float32],
+    starts: NDArray[np.int64],
+    mean: NDArray[np.floating],
+    top: NDArray[np.floating] | None = None,
+) -> Spectrum:
+    mean_plane = _full_plane(mean)
+    top_plane = mean_plane if top is None else _full_plane(top)
     return Spectrum(
         size=size,
-        tiles=len(log_power),
-        mean=_full_plane(log_power.mean(axis=0)),
-        top=_full_plane(top.mean(axis=0)),
+        log_power=log_power,
+        starts=starts,
+        mean=mean_plane,
+        top=top_plane,
+        mean_relief=raise_relief(mean_plane, independent_tiles=max(len(log_power), 1)),
+        top_relief=raise_relief(top_plane),
     )
 
 
@@ -151,7 +182,7 @@ def _half_windows(
     return wave * window[:hop], wave * window[hop:], shift
 
 
-def _full_plane(half: NDArray[np.float32]) -> NDArray[np.float32]:
+def _full_plane(half: NDArray[np.floating]) -> NDArray[np.float32]:
     """Full periodic plane of a real image's half-plane log power."""
     n = half.shape[0]
     full = np.empty((n, n), np.float32)

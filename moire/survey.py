@@ -11,7 +11,6 @@ from numpy.typing import NDArray
 from moire.banding import Band, find_bands
 from moire.blocks import BlockGrid, find_block_grid
 from moire.chroma import ChromaReading, read_chroma
-from moire.drift import SIZE as DRIFT_TILE
 from moire.drift import DriftingLine, find_drifting_lines
 from moire.lattice import Lattice, wrap
 from moire.model import Scan
@@ -23,11 +22,13 @@ from moire.samples import code_planes, mixed_plane, rate_aspect
 from moire.screens import is_halftone, on_axis
 from moire.spectrum import Spectrum, tile_spectrum
 
-_TILES_AT_MOST = 1200
+_TILES_AT_MOST = 600
 _CALLED_Z = 3.0
 # Excess that is worth one robust standard deviation, for a profile's line beside a tile's.
 _NAT_OF_Z = 0.35
 _BANDS_AT_MOST = 3
+# Smaller tiles part too few bins to follow a line by.
+_FOLLOWED_TILE = 128
 # A local map is good to about a tenth of a bin, and a bent page shears its squares.
 _FOLLOWED_COHERENCE, _DRIFT_SLACK = 0.92, 2.5
 _STEADY, _LEAST_DRIFT = 0.97, 0.008
@@ -47,6 +48,8 @@ class Survey:
         Mean of the channels.
     size : int
         Tile side that weights and bins refer to.
+    spectrum : Spectrum
+        Of those tiles.
     peaks : tuple of Peak
         Lines that keep their phase.
     lattices : tuple of Lattice
@@ -62,6 +65,7 @@ class Survey:
     codes: Codes
     mixed: NDArray[np.float32]
     size: int
+    spectrum: Spectrum
     peaks: tuple[Peak, ...]
     lattices: tuple[Lattice, ...]
     drifts: tuple[float, ...]
@@ -97,17 +101,17 @@ def take_survey(scan: Scan, size: int) -> Survey:
     if lattices and not is_halftone(lattices[0], lattices, seen, size):
         lattices = ()
     drifts = (0.0,) * len(lattices)
-    if size == DRIFT_TILE and not _is_steady(lattices):
-        moving, moved = _follow_screens(mixed, codes, size, aspect, jpeg=jpeg, halved=halved)
+    hop = size // 2
+    grid = (mixed.shape[0] // hop - 1, mixed.shape[1] // hop - 1)
+    if size >= _FOLLOWED_TILE and not _is_steady(lattices):
+        moving, moved = _follow_screens(spectrum, grid, codes, aspect, jpeg=jpeg, halved=halved)
         if moving:
             lattices, drifts = moving, moved
     chroma = _read_inks(lattices, codes, size) if halved else ()
-    hop = size // 2
-    grid = (mixed.shape[0] // hop - 1, mixed.shape[1] // hop - 1)
     peaks += _band_peaks(find_bands(mixed), peaks, blocks, size=size, grid=grid)
     return Survey(
-        scan=scan, codes=codes, mixed=mixed, size=size, peaks=peaks, lattices=lattices, drifts=drifts,
-        chroma=chroma, blocks=blocks,
+        scan=scan, codes=codes, mixed=mixed, size=size, spectrum=spectrum, peaks=peaks,
+        lattices=lattices, drifts=drifts, chroma=chroma, blocks=blocks,
     )  # fmt: skip
 
 
@@ -117,17 +121,20 @@ def _is_steady(lattices: tuple[Lattice, ...]) -> bool:
 
 
 def _follow_screens(
-    mixed: NDArray[np.float32],
+    spectrum: Spectrum,
+    grid: tuple[int, int],
     codes: Codes,
-    size: int,
     aspect: tuple[float, float],
     *,
     jpeg: bool,
     halved: bool,
 ) -> tuple[tuple[Lattice, ...], tuple[float, ...]]:
     """Screens among lines followed from tile to tile, and how far each drifts."""
-    lines = find_drifting_lines(mixed)
+    size = spectrum.size
+    lines = find_drifting_lines(spectrum, grid)
     peaks = tuple(_followed(line, size) for line in lines)
+    if not find_lattices(peaks, size=size, aspect=aspect, jpeg=jpeg, slack=_DRIFT_SLACK):
+        return (), ()
     peaks = _coloured(peaks, codes, size, halved=halved)
     lattices = find_lattices(peaks, size=size, aspect=aspect, jpeg=jpeg, slack=_DRIFT_SLACK)
     if not lattices or not is_halftone(lattices[0], lattices, peaks, size):

@@ -111,14 +111,23 @@ def visibility(
     return modulation * contrast_sensitivity(u)
 
 
-def lightness(rgb: NDArray[np.floating]) -> NDArray[np.float32]:
-    """CIE 1976 L* of sRGB code values on a 0..255 scale, shape (rows, columns)."""
-    table = np.arange(4097, dtype=np.float32) / 4096
-    linear = np.where(table <= 0.04045, table / 12.92, ((table + 0.055) / 1.055) ** 2.4).astype(np.float32)
+def lightness(rgb: NDArray[np.uint8] | NDArray[np.floating]) -> NDArray[np.float32]:
+    """CIE 1976 L* of sRGB code values on a 0..255 scale, shape (..., channels) or (rows, columns)."""
     if rgb.ndim == 2:
         rgb = rgb[..., None]
-    index = np.clip(np.rint(rgb * (4096 / 255)), 0, 4096).astype(np.uint16)
-    weights = (0.2126, 0.7152, 0.0722) if rgb.shape[2] == 3 else (1.0,)
-    y = sum(np.float32(w) * linear[index[..., c]] for c, w in enumerate(weights))
+    steps = 255 if rgb.dtype == np.uint8 else 4096
+    index = rgb if rgb.dtype == np.uint8 else np.rint(np.clip(rgb, 0, 255) * (steps / 255)).astype(np.uint16)
+    weights = (0.2126, 0.7152, 0.0722) if rgb.shape[-1] == 3 else (1.0,)
+    linear = _linear_light(steps)
+    y = sum((np.float32(w) * linear)[index[..., c]] for c, w in enumerate(weights))
     y = np.asarray(y, np.float32)
-    return np.where(y > 216 / 24389, 116 * np.cbrt(y) - 16, np.float32(24389 / 27) * y).astype(np.float32)
+    # The cube root by logarithms, which run on all lanes of the processor.
+    root = np.exp(np.log(np.maximum(y, np.float32(1e-6))) / np.float32(3))
+    return np.where(y > 216 / 24389, 116 * root - 16, np.float32(24389 / 27) * y)
+
+
+@lru_cache(maxsize=2)
+def _linear_light(steps: int) -> NDArray[np.float32]:
+    """Linear light of equally spaced sRGB values 0..1 (IEC 61966-2-1)."""
+    table = np.arange(steps + 1, dtype=np.float32) / steps
+    return np.where(table <= 0.04045, table / 12.92, ((table + 0.055) / 1.055) ** 2.4).astype(np.float32)

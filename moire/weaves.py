@@ -14,7 +14,7 @@ from moire.foldedcloth import REACH_CPP, Rival, fit_folded, is_beyond_reach, set
 from moire.model import WarpRuns, Weave
 from moire.setts import coarse_map, sett_map, sett_places, sett_range
 from moire.spectrallines import find_lines
-from moire.spectrum import tile_spectrum
+from moire.spectrum import Spectrum, tile_spectrum
 from moire.swatches import count_cloth
 from moire.threads import ThreadCount, gap_jitter
 
@@ -94,7 +94,7 @@ class Threads:
         return self.fit.gain > _SURE_GAIN and min(self.count.jitter) > _UNEVEN
 
 
-def find_threads(image: NDArray[np.float32]) -> Threads | None:
+def find_threads(image: NDArray[np.float32], spectrum: Spectrum | None = None) -> Threads | None:
     """The cloth in a picture, or None.
 
     A table or a page of text also has lines on both axes; only cloth has the fractions of
@@ -104,8 +104,10 @@ def find_threads(image: NDArray[np.float32]) -> Threads | None:
     ----------
     image : ndarray, shape (rows, columns)
         Lightness or code values on a 0..255 scale.
+    spectrum : Spectrum or None
+        Of this picture, where it has been measured already.
     """
-    reading = read_cloth(image)
+    reading = read_cloth(image, spectrum)
     threads = None if reading is None else _count(reading)
     return None if threads is None or (threads.like_screen and not threads.surely_cloth) else threads
 
@@ -169,14 +171,15 @@ class _Reading:
         return np.array(low[:_COUNTED_LINES]).reshape(-1, 2)
 
 
-def read_cloth(image: NDArray[np.float32]) -> _Reading | None:
+def read_cloth(image: NDArray[np.float32], spectrum: Spectrum | None = None) -> _Reading | None:
     """The weave that a picture's lines are read as most surely, at any of four sizes."""
     best: _Reading | None = None
     reduction = 1
     small = image
     while reduction <= _COARSEST and min(small.shape) >= _SMALLEST_PX:
-        pitch = max(_PITCH, math.isqrt(small.size // _TILES_AT_MOST))
-        spectrum = tile_spectrum(small, size=_TILE, pitch=pitch)
+        if reduction > 1 or spectrum is None or spectrum.size != _TILE:
+            pitch = max(_PITCH, math.isqrt(small.size // _TILES_AT_MOST))
+            spectrum = tile_spectrum(small, size=_TILE, pitch=pitch)
         lines = find_lines(spectrum)
         fits = fit_binding(spectrum, lines)
         fit = as_cloth(fits)
@@ -313,6 +316,8 @@ def _turned(weave: Weave, binding: Binding) -> Weave:
 
 
 def _halve(image: NDArray[np.float32]) -> NDArray[np.float32]:
-    rows, columns = image.shape[0] // 2 * 2, image.shape[1] // 2 * 2
-    cells = image[:rows, :columns].reshape(rows // 2, 2, columns // 2, 2)
-    return np.ascontiguousarray(cells.mean(axis=(1, 3)), np.float32)
+    import cv2
+
+    rows, columns = image.shape[0] // 2, image.shape[1] // 2
+    small = cv2.resize(image[: 2 * rows, : 2 * columns], (columns, rows), interpolation=cv2.INTER_AREA)
+    return np.asarray(small, np.float32)
