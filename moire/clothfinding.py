@@ -180,13 +180,18 @@ def thread_beat(threads: Threads, f: NDArray[np.float64], *, size: int) -> Weave
     """The order of the threads that has folded to a line coarser than they are, or None."""
     frame = np.stack([threads.warp, threads.weft], axis=1)
     finest = float(np.hypot(*frame).min())
-    aliases = thread_aliases(threads.warp, threads.weft, orders=threads.fit.binding.orders(_HIGHEST_BEAT))
-    beat = explain_alias(f, aliases, tolerance=_BEAT_BINS / size)
+    beat = folded_order(threads, f, size=size)
     if beat is None or np.hypot(*f) < _COARSER * finest:
         return beat
     # Threads that fold themselves are seen coarser than they are, though not than each other.
     own = abs(beat.order[0]) + abs(beat.order[1]) == 1 and 0 in beat.order
     return beat if own and np.hypot(*f) < np.hypot(*(frame @ np.array(beat.order))) else None
+
+
+def folded_order(threads: Threads, f: NDArray[np.float64], *, size: int) -> WeaveAlias | None:
+    """The order of the threads that has folded to a line, coarser than they are or not, or None."""
+    aliases = thread_aliases(threads.warp, threads.weft, orders=threads.fit.binding.orders(_HIGHEST_BEAT))
+    return explain_alias(f, aliases, tolerance=_BEAT_BINS / size)
 
 
 def _extent(threads: Threads, scan: Scan) -> tuple[float, tuple[tuple[int, int, int, int], ...]]:

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from moire.beats import rosette_parents
 from moire.blocks import BlockGrid
-from moire.clothfinding import cloth_finding, thread_beat, thread_lines
+from moire.clothfinding import cloth_finding, folded_order, thread_beat, thread_lines
 from moire.folds import Fold, judge_folds
 from moire.grids import find_line_screen, sort_line
 from moire.lattice import Lattice
@@ -80,6 +80,8 @@ def group_lines(survey: Survey, second: Survey | None = None, warp: WarpRuns = "
             found = _beat_group(survey, peak, beat, parent=len(survey.lattices))
         else:
             found = _leftover(survey, peak, tuple(rest), woven=woven, textured=textured)
+            if found.finding.kind in ("content", "unexplained") and threads is not None:
+                found = _fine_beat(survey, peak, threads, parent=len(survey.lattices)) or found
         key = (found.finding.kind, found.finding.parents)
         if key in merged and found.finding.kind != "banding":
             merged[key].lines.extend(found.lines)
@@ -204,6 +206,16 @@ def _beat_group(survey: Survey, peak: Peak, beat: WeaveAlias, *, parent: int) ->
     a, b = beat.order
     words = f"a beat with the pixel grid: order ({a:g}, {b:g}) of the threads, folded by {beat.fold}"
     return _lone_line(survey, peak, "alias", words, settled=True, parents=(parent,))
+
+
+def _fine_beat(survey: Survey, peak: Peak, threads: Threads, *, parent: int) -> Group | None:
+    """An order of the threads folded to a line as fine as they are: part of how the cloth looks."""
+    order = folded_order(threads, peak.f, size=survey.size)
+    if order is None:
+        return None
+    a, b = order.order
+    words = f"order ({a:g}, {b:g}) of the threads, folded by {order.fold} to a line no coarser than they are"
+    return _lone_line(survey, peak, "content", words, settled=True, parents=(parent,))
 
 
 def _lone_line(

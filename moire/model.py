@@ -233,13 +233,15 @@ class Removal:
     """One step of a recipe: the lattice or line that a filter takes out.
 
     ``method`` is ``descreen`` for a screen with harmonics (two generators ``(fx, fy)`` in
-    cycles per pixel) or ``notch`` for isolated lines (one vector for each line).
+    cycles per pixel) or ``notch`` for isolated lines (one vector for each line). ``beside_cpp`` are
+    strong lines that stay and must not be taken for these: a weave's own, beside its beats.
     """
 
     kind: Kind
     method: Literal["descreen", "notch"]
     vectors_cpp: tuple[tuple[float, float], ...]
     ink: Ink = "unknown"
+    beside_cpp: tuple[tuple[float, float], ...] = ()
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
