@@ -23,7 +23,8 @@ _TOLERANCE_BINS = 0.8
 _FURTHEST_ORDER = 8.5
 _INNER_BINS = 3.5
 _PRESENT_Z = 2.5
-_TILT_DEG, _SQUARE_DEG, _STEEPEST_DEG = 5.0, 2.0, 25.0
+# Most cloth lies nearly level, some anyhow; what is turned further has its other set for the warp.
+_TILT_DEG, _SQUARE_DEG, _STEEPEST_DEG, _ANYHOW_NAT = 5.0, 2.0, 47.0, 5.0
 _FINEST_CPP = 0.62
 _EVEN_NAT, _LENS_PX = 4.0, 0.45
 _FOLDED = 4.0
@@ -195,7 +196,7 @@ def _gains(
     cells = size**2 / (math.pi * _TOLERANCE_BINS**2)
     saved = np.log(np.maximum(cells / density, 1.0))
     folds = 1.0 if weave.binding.pattern == "plain" else 2.0
-    return (hit * weight).sum(axis=1) * saved + weave.prior + _prior(frames, folds), hit
+    return (hit * weight).sum(axis=1) * saved + weave.prior + _prior(frames, folds, level=_lies_level(f)), hit
 
 
 def _match(
@@ -214,7 +215,14 @@ def _match(
     return near & low & weave.allowed[k, h], orders
 
 
-def _prior(frames: NDArray[np.float64], folds: float) -> NDArray[np.float64]:
+def _lies_level(f: NDArray[np.float64]) -> bool:
+    """Whether strong lines lie along both axes, as the threads of level cloth do; shape (lines, 2)."""
+    x, y = np.abs(f[:_STRONGEST]).T
+    slope = math.tan(math.radians(_TILT_DEG))
+    return bool((y < slope * x).any() and (x < slope * y).any())
+
+
+def _prior(frames: NDArray[np.float64], folds: float, *, level: bool) -> NDArray[np.float64]:
     """How likely cloth lies so, in nat; `folds` is the price of threads beyond the grid's reach."""
     ux, uy, vx, vy = frames[:, 0, 0], frames[:, 1, 0], frames[:, 0, 1], frames[:, 1, 1]
     a, b = np.degrees(np.arctan2(uy, ux)), np.degrees(np.arctan2(-vx, vy))
@@ -223,7 +231,9 @@ def _prior(frames: NDArray[np.float64], folds: float) -> NDArray[np.float64]:
     fine = [np.hypot(x, y) > FINEST_LINE_CPP for x, y in ((ux, uy), (vx, vy))]
     folded = folds * _FOLDED * np.add(*fine, dtype=float)
     return np.asarray(
-        -0.5 * ((tilt / _TILT_DEG) ** 2 + (skew / _SQUARE_DEG) ** 2 + (ratio / 0.6) ** 2) - folded
+        -0.5 * ((skew / _SQUARE_DEG) ** 2 + (ratio / 0.6) ** 2)
+        - np.minimum(0.5 * (tilt / _TILT_DEG) ** 2, math.inf if level else _ANYHOW_NAT)
+        - folded
     )
 
 
