@@ -23,7 +23,8 @@ _TOLERANCE_BINS = 0.8
 _FURTHEST_ORDER = 8.5
 _INNER_BINS = 3.5
 _PRESENT_Z = 2.5
-_TILT_DEG, _SQUARE_DEG, _STEEPEST_DEG = 5.0, 2.0, 25.0
+# Most cloth lies nearly level, some anyhow; what is turned further has its other set for the warp.
+_TILT_DEG, _SQUARE_DEG, _STEEPEST_DEG, _ANYHOW_NAT = 5.0, 2.0, 47.0, 5.0
 _FINEST_CPP = 0.62
 _EVEN_NAT, _LENS_PX = 4.0, 0.45
 _FOLDED = 4.0
@@ -61,16 +62,16 @@ class BindingFit:
 
 
 @cache
-def _weaves() -> tuple[_Weave, ...]:
+def known_weaves() -> tuple[WeaveLines, ...]:
     bindings = [plain(), basket(2, 2), basket(2, 1), basket(1, 2), basket(3, 3)]
     for way in ("Z", "S"):
         bindings += [twill(up, down, way) for up, down in ((2, 1), (3, 1), (2, 2), (4, 1), (3, 3), (5, 1))]
     bindings += [satin(5, 2), satin(5, 3), satin(8, 3), satin(8, 5)]
-    return (*(_Weave.of(b) for b in bindings), _RULED)
+    return (*(WeaveLines.of(b) for b in bindings), _RULED)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class _Weave:
+class WeaveLines:
     """What a binding predicts: allowed orders of one repeat, and the lowest lines it must show."""
 
     binding: Binding
@@ -79,7 +80,7 @@ class _Weave:
     prior: float
 
     @staticmethod
-    def of(binding: Binding) -> _Weave:
+    def of(binding: Binding) -> WeaveLines:
         levels = binding_levels(binding.matrix)
         picks, ends = levels.shape
         strong = levels.copy()
@@ -94,11 +95,11 @@ class _Weave:
         orders.sort(key=lambda o: math.hypot(*o))
         allowed[0, 0] = True
         prior = {"plain": 0.0, "twill": -1.0, "basket": -2.0, "satin": -2.0}[binding.pattern]
-        return _Weave(binding=binding, allowed=allowed, lowest=tuple(orders[:3]), prior=prior)
+        return WeaveLines(binding=binding, allowed=allowed, lowest=tuple(orders[:3]), prior=prior)
 
 
 # Lines both ways without any binding: a table, graph paper, type on a grid, and a knit.
-_RULED = _Weave(
+_RULED = WeaveLines(
     binding=Binding(pattern="unknown", structure="unbound", direction=None, matrix=np.zeros((1, 1), bool)),
     allowed=np.ones((1, 1), bool),
     lowest=(),
@@ -110,19 +111,25 @@ def fit_binding(spectrum: Spectrum, lines: tuple[SpectralLine, ...]) -> tuple[Bi
     """Readings of the lines as weaves, best first; empty if no two lines make a cloth."""
     if len(lines) < 2:
         return ()
-    z = _z_plane(spectrum)
+    z = z_plane(spectrum)
     best: list[BindingFit] = []
-    for weave in _weaves():
-        frames = _frames(weave, lines, spectrum.size)
-        if not len(frames):
-            continue
-        gains, _ = _gains(weave, frames, lines, spectrum.size)
-        for i in _distinct(frames, gains, spectrum.size):
-            best.append(_settle(weave, frames[i], lines, spectrum.size, z))
-    return tuple(sorted(map(_face, best), key=lambda fit: -fit.gain))
+    for weave in known_weaves():
+        best.extend(read_as(weave, _frames(weave, lines, spectrum.size), lines, z))
+    return tuple(sorted(best, key=lambda fit: -fit.gain))
 
 
-def _face(fit: BindingFit) -> BindingFit:
+def read_as(
+    weave: WeaveLines, frames: NDArray[np.float64], lines: tuple[SpectralLine, ...], z: NDArray[np.float32]
+) -> list[BindingFit]:
+    """The best few readings of the lines as one weave, from frames of shape (n, 2, 2) to begin with."""
+    if not len(frames):
+        return []
+    size = len(z)
+    gains, _ = _gains(weave, frames, lines, size)
+    return [_named(_settle(weave, frames[i], lines, size, z)) for i in _distinct(frames, gains, size)]
+
+
+def _named(fit: BindingFit) -> BindingFit:
     """A twill named by its floats: even orders tell 3/1 from 2/2, the stronger threads the face.
 
     Warp floats show more warp ridges than weft ridges, hence the stronger thread line.
@@ -150,7 +157,7 @@ def _seen(f: NDArray[np.float64]) -> float:
     return 2 * box - 4 * math.pi**2 * _LENS_PX**2 * float(f @ f)
 
 
-def _frames(weave: _Weave, lines: tuple[SpectralLine, ...], size: int) -> NDArray[np.float64]:
+def _frames(weave: WeaveLines, lines: tuple[SpectralLine, ...], size: int) -> NDArray[np.float64]:
     """Thread frequencies, shape (n, 2, 2) with warp and weft as columns, from pairs of lines."""
     orders = [*weave.lowest, (1.0, 0.0), (0.0, 1.0)] if weave.lowest else [(1.0, 0.0), (0.0, 1.0), (1.0, 1.0)]
     f = np.array([line.f for line in lines[:_STRONGEST]])
@@ -163,19 +170,23 @@ def _frames(weave: _Weave, lines: tuple[SpectralLine, ...], size: int) -> NDArra
             matrix = np.array([a, b]).T
             if i != j and abs(np.linalg.det(matrix)) > 1e-6:
                 out.append(pairs @ np.linalg.inv(matrix))
-    frames = np.concatenate(out)
+    return plausible(np.concatenate(out), size, _FINEST_CPP)
+
+
+def plausible(frames: NDArray[np.float64], size: int, finest_cpp: float) -> NDArray[np.float64]:
+    """Those of many frames that cloth on a platen may have."""
     ux, uy, vx, vy = frames[:, 0, 0], frames[:, 1, 0], frames[:, 0, 1], frames[:, 1, 1]
     steep = math.tan(math.radians(_STEEPEST_DEG))
     u, v = np.hypot(ux, uy), np.hypot(vx, vy)
     keep = (ux > 0) & (vy > 0) & (np.abs(uy) < steep * ux) & (np.abs(vx) < steep * vy)
     keep &= np.abs(ux * vx + uy * vy) < math.sin(math.radians(12)) * u * v
-    keep &= (np.minimum(u, v) > _INNER_BINS / size) & (np.maximum(u, v) < _FINEST_CPP)
+    keep &= (np.minimum(u, v) > _INNER_BINS / size) & (np.maximum(u, v) < finest_cpp)
     keep &= (u < 3.5 * v) & (v < 3.5 * u)
     return np.asarray(frames[keep])
 
 
 def _gains(
-    weave: _Weave, frames: NDArray[np.float64], lines: tuple[SpectralLine, ...], size: int
+    weave: WeaveLines, frames: NDArray[np.float64], lines: tuple[SpectralLine, ...], size: int
 ) -> tuple[NDArray[np.float64], NDArray[np.bool_]]:
     """Nats saved by each frame, and which lines it explains, shape (frames, lines)."""
     f = np.array([line.f for line in lines])
@@ -185,11 +196,11 @@ def _gains(
     cells = size**2 / (math.pi * _TOLERANCE_BINS**2)
     saved = np.log(np.maximum(cells / density, 1.0))
     folds = 1.0 if weave.binding.pattern == "plain" else 2.0
-    return (hit * weight).sum(axis=1) * saved + weave.prior + _prior(frames, folds), hit
+    return (hit * weight).sum(axis=1) * saved + weave.prior + _prior(frames, folds, level=_lies_level(f)), hit
 
 
 def _match(
-    weave: _Weave, frames: NDArray[np.float64], f: NDArray[np.float64], size: int
+    weave: WeaveLines, frames: NDArray[np.float64], f: NDArray[np.float64], size: int
 ) -> tuple[NDArray[np.bool_], NDArray[np.float64]]:
     """Which lines lie on allowed orders, and the orders, shape (frames, lines, 2)."""
     picks, ends = weave.allowed.shape
@@ -204,7 +215,14 @@ def _match(
     return near & low & weave.allowed[k, h], orders
 
 
-def _prior(frames: NDArray[np.float64], folds: float) -> NDArray[np.float64]:
+def _lies_level(f: NDArray[np.float64]) -> bool:
+    """Whether strong lines lie along both axes, as the threads of level cloth do; shape (lines, 2)."""
+    x, y = np.abs(f[:_STRONGEST]).T
+    slope = math.tan(math.radians(_TILT_DEG))
+    return bool((y < slope * x).any() and (x < slope * y).any())
+
+
+def _prior(frames: NDArray[np.float64], folds: float, *, level: bool) -> NDArray[np.float64]:
     """How likely cloth lies so, in nat; `folds` is the price of threads beyond the grid's reach."""
     ux, uy, vx, vy = frames[:, 0, 0], frames[:, 1, 0], frames[:, 0, 1], frames[:, 1, 1]
     a, b = np.degrees(np.arctan2(uy, ux)), np.degrees(np.arctan2(-vx, vy))
@@ -213,12 +231,14 @@ def _prior(frames: NDArray[np.float64], folds: float) -> NDArray[np.float64]:
     fine = [np.hypot(x, y) > FINEST_LINE_CPP for x, y in ((ux, uy), (vx, vy))]
     folded = folds * _FOLDED * np.add(*fine, dtype=float)
     return np.asarray(
-        -0.5 * ((tilt / _TILT_DEG) ** 2 + (skew / _SQUARE_DEG) ** 2 + (ratio / 0.6) ** 2) - folded
+        -0.5 * ((skew / _SQUARE_DEG) ** 2 + (ratio / 0.6) ** 2)
+        - np.minimum(0.5 * (tilt / _TILT_DEG) ** 2, math.inf if level else _ANYHOW_NAT)
+        - folded
     )
 
 
 def _settle(
-    weave: _Weave,
+    weave: WeaveLines,
     frame: NDArray[np.float64],
     lines: tuple[SpectralLine, ...],
     size: int,
@@ -252,7 +272,7 @@ def _settle(
     )
 
 
-def _absent(weave: _Weave, frame: NDArray[np.float64], z: NDArray[np.float32]) -> float:
+def _absent(weave: WeaveLines, frame: NDArray[np.float64], z: NDArray[np.float32]) -> float:
     """Price of lines that the weave should show within the band and does not."""
     size = len(z)
 
@@ -298,7 +318,7 @@ def _misnumbered(frame: NDArray[np.float64], lines: tuple[SpectralLine, ...], si
     return price
 
 
-def _z_plane(spectrum: Spectrum) -> NDArray[np.float32]:
+def z_plane(spectrum: Spectrum) -> NDArray[np.float32]:
     """How far each bin stands above its background, in robust standard deviations."""
     return np.maximum(spectrum.mean_relief.z, spectrum.top_relief.z)
 

@@ -9,14 +9,17 @@ import numpy as np
 from numpy.typing import NDArray
 
 from moire.bindings import swapped
-from moire.model import Finding, Scan, WarpRuns, Weave
-from moire.peaks import Candidate, Peak
+from moire.model import Candidate, Finding, Scan, WarpRuns, Weave
+from moire.peaks import Candidate as Bin
+from moire.peaks import Peak
 from moire.refinement import refine
+from moire.units import fold_angle, page_angle
 from moire.weavealias import WeaveAlias, explain_alias, thread_aliases
 from moire.weaves import SURE, Threads, measure_weave
 
 _MEMBER_BINS, _PATCH = 0.8, 0.005
 _DRIFT = 0.05
+_NEXT = "a second scan at a higher rate settles it (--second)"
 _COARSER, _BEAT_BINS, _HIGHEST_BEAT = 0.75, 0.4, 3.0
 
 
@@ -36,7 +39,7 @@ def cloth_finding(threads: Threads, scan: Scan, warp: WarpRuns = "vertical") -> 
     as_seen = warp == "vertical" or threads.fit.binding.pattern == "knit"
     ends, picks = (threads.warp, threads.weft) if as_seen else (threads.weft, threads.warp)
     sizes = [float(1 / np.hypot(*f)) for f in (ends, picks)]
-    evidence = [*_binding_words(threads, warp)]
+    evidence = [*_binding_words(threads, warp), *_reach_words(threads)]
     if weave is None:
         evidence.append(f"sampling rate unknown: {sizes[0]:.2f} pixels an end, {sizes[1]:.2f} a pick")
     else:
@@ -51,8 +54,43 @@ def cloth_finding(threads: Threads, scan: Scan, warp: WarpRuns = "vertical") -> 
         period_px=sizes[0],
         period_mm=None if rate is None else float(25.4 / np.hypot(*(ends * np.array(rate)))),
         weave=weave,
+        candidates=() if rate is None else _candidates(threads, rate, as_seen=as_seen),
+        settled=threads.settled,
         evidence=tuple(evidence),
     )
+
+
+def _reach_words(threads: Threads) -> tuple[str, ...]:
+    """Whether threads lie beyond the grid's reach, and what would settle it."""
+    if threads.proven:
+        return ("a second scan bears out this reading of the threads",)
+    if threads.beyond_reach:
+        fold = "threads are finer than half the sampling rate and fold; their binding shows which they are"
+        return (f"{fold}; {_NEXT}",)
+    if not threads.settled:
+        return (f"threads finer than the sampling grid reaches would look like these; {_NEXT}",)
+    return ()
+
+
+def _candidates(threads: Threads, ppi: tuple[float, float], *, as_seen: bool) -> tuple[Candidate, ...]:
+    """Readings that one scan leaves open, the ends' lines as rulings; none where it leaves none."""
+    out = []
+    for rival in threads.rivals[:5]:
+        warp, weft = (rival.fit.warp, rival.fit.weft) if as_seen else (rival.fit.weft, rival.fit.warp)
+        ends, picks = (f * np.array(ppi) for f in (warp, weft))
+        order = np.rint(warp).astype(int)
+        out.append(
+            Candidate(
+                ruling_lpi=float(np.hypot(*ends)),
+                angle_deg=fold_angle(page_angle(*ends), 180),
+                order=(int(order[0]), int(order[1])),
+                probability=rival.probability,
+                ends_per_cm=float(np.hypot(*ends)) / 2.54,
+                picks_per_cm=float(np.hypot(*picks)) / 2.54,
+                structure=rival.fit.binding.structure if as_seen else swapped(rival.fit.binding).structure,
+            )
+        )
+    return tuple(out)
 
 
 def _binding_words(threads: Threads, warp: WarpRuns) -> tuple[str, str]:
@@ -118,7 +156,7 @@ def thread_lines(
         if np.abs(f).max() >= 0.5:
             continue
         kx, ky = np.rint(f * size).astype(int)
-        candidate = Candidate(kx=int(kx), ky=int(ky), z=z, excess_nat=excess)
+        candidate = Bin(kx=int(kx), ky=int(ky), z=z, excess_nat=excess)
         (peak,) = refine(image, (candidate,), size=size)
         sigma = np.hypot(*(np.array(order) * np.array(threads.count.sigma) / threads.reduction))
         whole = all(float(c).is_integer() for c in order)
@@ -140,9 +178,18 @@ def thread_lines(
 
 def thread_beat(threads: Threads, f: NDArray[np.float64], *, size: int) -> WeaveAlias | None:
     """The order of the threads that has folded to a line coarser than they are, or None."""
-    finest = min(float(np.hypot(*threads.warp)), float(np.hypot(*threads.weft)))
-    if np.hypot(*f) > _COARSER * finest:
-        return None
+    frame = np.stack([threads.warp, threads.weft], axis=1)
+    finest = float(np.hypot(*frame).min())
+    beat = folded_order(threads, f, size=size)
+    if beat is None or np.hypot(*f) < _COARSER * finest:
+        return beat
+    # Threads that fold themselves are seen coarser than they are, though not than each other.
+    own = abs(beat.order[0]) + abs(beat.order[1]) == 1 and 0 in beat.order
+    return beat if own and np.hypot(*f) < np.hypot(*(frame @ np.array(beat.order))) else None
+
+
+def folded_order(threads: Threads, f: NDArray[np.float64], *, size: int) -> WeaveAlias | None:
+    """The order of the threads that has folded to a line, coarser than they are or not, or None."""
     aliases = thread_aliases(threads.warp, threads.weft, orders=threads.fit.binding.orders(_HIGHEST_BEAT))
     return explain_alias(f, aliases, tolerance=_BEAT_BINS / size)
 

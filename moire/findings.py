@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from moire.beats import rosette_parents
 from moire.blocks import BlockGrid
-from moire.clothfinding import cloth_finding, thread_beat, thread_lines
+from moire.clothfinding import cloth_finding, folded_order, thread_beat, thread_lines
 from moire.folds import Fold, judge_folds
 from moire.grids import find_line_screen, sort_line
 from moire.lattice import Lattice
@@ -19,7 +19,7 @@ from moire.peaks import Peak
 from moire.screens import measure_line_screen, name_inks, name_line_ink, on_axis, order_of
 from moire.survey import Survey
 from moire.weavealias import WeaveAlias
-from moire.weaves import find_threads, is_surely_cloth
+from moire.weaves import Threads, find_threads, is_surely_cloth, settle_threads
 
 _TEXTURE_LINES, _TEXTURE_OBLIQUE = 4, 2
 _OF_THE_CLOTH, _BEAT_SHARE = 0.15, 0.03
@@ -42,7 +42,7 @@ def group_lines(survey: Survey, second: Survey | None = None, warp: WarpRuns = "
     if 1 <= len(survey.lattices) <= _LATTICES_OF_CLOTH and is_surely_cloth(_strong_window(survey)):
         survey = replace(survey, lattices=(), drifts=(), chroma=())
     if not survey.lattices:
-        threads = find_threads(survey.mixed, survey.spectrum)
+        threads = _threads(survey, second)
     inks = name_inks(survey.lattices, survey.chroma)
     folds = judge_folds(survey, inks, second)
     groups = [
@@ -80,6 +80,8 @@ def group_lines(survey: Survey, second: Survey | None = None, warp: WarpRuns = "
             found = _beat_group(survey, peak, beat, parent=len(survey.lattices))
         else:
             found = _leftover(survey, peak, tuple(rest), woven=woven, textured=textured)
+            if found.finding.kind in ("content", "unexplained") and threads is not None:
+                found = _fine_beat(survey, peak, threads, parent=len(survey.lattices)) or found
         key = (found.finding.kind, found.finding.parents)
         if key in merged and found.finding.kind != "banding":
             merged[key].lines.extend(found.lines)
@@ -89,6 +91,16 @@ def group_lines(survey: Survey, second: Survey | None = None, warp: WarpRuns = "
     if survey.blocks is not None and all(g.finding.kind != "block-grid" for g in groups):
         groups.append(_block_group(survey.blocks))
     return groups
+
+
+def _threads(survey: Survey, second: Survey | None) -> Threads | None:
+    """The cloth in a scan; where its threads may have folded, as another scan settles it."""
+    threads = find_threads(survey.mixed, survey.spectrum)
+    rate, other_rate = survey.scan.ppi, None if second is None else second.scan.ppi
+    if threads is None or not threads.rivals or second is None or rate is None or other_rate is None:
+        return threads
+    other = find_threads(second.mixed, second.spectrum)
+    return threads if other is None else settle_threads(threads, survey.mixed, rate, other, other_rate)
 
 
 def _strong_window(survey: Survey) -> NDArray[np.float32]:
@@ -194,6 +206,16 @@ def _beat_group(survey: Survey, peak: Peak, beat: WeaveAlias, *, parent: int) ->
     a, b = beat.order
     words = f"a beat with the pixel grid: order ({a:g}, {b:g}) of the threads, folded by {beat.fold}"
     return _lone_line(survey, peak, "alias", words, settled=True, parents=(parent,))
+
+
+def _fine_beat(survey: Survey, peak: Peak, threads: Threads, *, parent: int) -> Group | None:
+    """An order of the threads folded to a line as fine as they are: part of how the cloth looks."""
+    order = folded_order(threads, peak.f, size=survey.size)
+    if order is None:
+        return None
+    a, b = order.order
+    words = f"order ({a:g}, {b:g}) of the threads, folded by {order.fold} to a line no coarser than they are"
+    return _lone_line(survey, peak, "content", words, settled=True, parents=(parent,))
 
 
 def _lone_line(

@@ -28,6 +28,7 @@ Pixels = NDArray[Any]
 _TILE_PX = 768
 _BEAT_REACH_PX = 25.0
 _NOTCH_MARGIN_PX = 120
+_LEAST_REACH_PX, _THREAD_REACH = 5.0, 1.2
 _PLACES = 4
 _SAME_CPP = 0.002
 _PLACE_PX = 96
@@ -127,7 +128,9 @@ def _encoded(scan: Scan) -> Pixels:
 def _remove(master: Pixels, recipe: Recipe, progress: Callable[[float], None]) -> Pixels:
     lattices = _lattices(recipe)
     notches = [r for r in recipe.removals if r.method == "notch"]
-    lines = [v for r in notches if r.kind != "rosette" for v in r.vectors_cpp]
+    lines = [v for r in notches if r.kind not in ("rosette", "weave") for v in r.vectors_cpp]
+    woven = [v for r in notches if r.kind == "weave" for v in r.vectors_cpp]
+    beside = [v for r in notches for v in r.beside_cpp]
     beats = [v for r in notches if r.kind == "rosette" for v in r.vectors_cpp]
     mended = np.empty_like(master)
     # Plates of a CMYK file are one ink each; three channels are one colour picture.
@@ -137,7 +140,8 @@ def _remove(master: Pixels, recipe: Recipe, progress: Callable[[float], None]) -
         ready = prepare(part, lattices)
 
         def work(tile: Pixels, ready: Preparation = ready) -> Pixels:
-            level = remove_lines(tile, lines)
+            level = remove_lines(tile, lines, beside=beside)
+            level = remove_lines(level, woven, reach_px=_thread_reach(woven))
             clear = apply(level, ready, quick=recipe.quick)
             if not beats:
                 return clear
@@ -145,10 +149,17 @@ def _remove(master: Pixels, recipe: Recipe, progress: Callable[[float], None]) -
             inside = _where_changed(clear, level) if lattices else np.float32(1)
             return clear + inside * (remove_lines(clear, beats, reach_px=_BEAT_REACH_PX) - clear)
 
-        margin = max(margin_px(lattices), _NOTCH_MARGIN_PX if lines or beats else 0)
+        margin = max(margin_px(lattices), _NOTCH_MARGIN_PX if lines or beats or woven else 0)
         mended[..., group] = map_tiles(part, work, size=_TILE_PX, margin=margin, progress=progress)
     mended = np.clip(mended, 0, 1)
     return master + np.float32(recipe.strength) * (mended - master)
+
+
+def _thread_reach(lines: list[tuple[float, float]]) -> float:
+    """Over how far threads keep step: uneven as yarns are, hardly further than to the next thread."""
+    if not lines:
+        return 1.0
+    return max(_LEAST_REACH_PX, _THREAD_REACH / float(np.median([np.hypot(*f) for f in lines])))
 
 
 def _where_changed(after: Pixels, before: Pixels) -> Pixels:

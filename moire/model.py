@@ -154,12 +154,18 @@ class Weave:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Candidate:
-    """One true screen that would look like the observed one on this sampling grid."""
+    """One true screen or cloth that would look like the observed one on this sampling grid.
+
+    Of a cloth ``ruling_lpi``, ``angle_deg`` and ``order`` are those of its ends.
+    """
 
     ruling_lpi: float
     angle_deg: float
     order: tuple[int, int]
     probability: float
+    ends_per_cm: float | None = None
+    picks_per_cm: float | None = None
+    structure: str = ""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -227,13 +233,15 @@ class Removal:
     """One step of a recipe: the lattice or line that a filter takes out.
 
     ``method`` is ``descreen`` for a screen with harmonics (two generators ``(fx, fy)`` in
-    cycles per pixel) or ``notch`` for isolated lines (one vector for each line).
+    cycles per pixel) or ``notch`` for isolated lines (one vector for each line). ``beside_cpp`` are
+    strong lines that stay and must not be taken for these: a weave's own, beside its beats.
     """
 
     kind: Kind
     method: Literal["descreen", "notch"]
     vectors_cpp: tuple[tuple[float, float], ...]
     ink: Ink = "unknown"
+    beside_cpp: tuple[tuple[float, float], ...] = ()
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -21,6 +21,7 @@ def remove_lines(
     frequencies: Sequence[tuple[float, float]],
     *,
     reach_px: float = 40.0,
+    beside: Sequence[tuple[float, float]] = (),
 ) -> NDArray[np.float32]:
     """Image without the given lines.
 
@@ -32,6 +33,8 @@ def remove_lines(
         Cycles per pixel; one of each pair of opposite lines.
     reach_px : float
         Gaussian sigma over which a line's amplitude and phase may change.
+    beside : sequence of (fx, fy)
+        Strong lines that stay: fitted along, lest what edges make of them passes for the others.
 
     Returns
     -------
@@ -39,15 +42,17 @@ def remove_lines(
     """
     if not frequencies:
         return image
-    lines = [np.asarray(f, float) for f in frequencies]
+    lines = [np.asarray(f, float) for f in (*beside, *frequencies)]
     out = np.empty_like(image)
     for c in range(image.shape[2]):
-        out[..., c] = image[..., c] - _fit(image[..., c], lines, reach_px)
+        out[..., c] = image[..., c] - _fit(image[..., c], lines, reach_px, kept=len(beside))
     return out
 
 
-def _fit(plane: NDArray[np.float32], lines: list[NDArray[np.float64]], reach: float) -> NDArray[np.float32]:
-    """Sum of the fitted lines: first plainly, then twice with weights from what that leaves."""
+def _fit(
+    plane: NDArray[np.float32], lines: list[NDArray[np.float64]], reach: float, kept: int
+) -> NDArray[np.float32]:
+    """Sum of the fitted lines but the first `kept`; fitted plainly, then twice with weights."""
     import cv2
 
     waves = [_wave(plane.shape, f) for f in lines]
@@ -61,9 +66,9 @@ def _fit(plane: NDArray[np.float32], lines: list[NDArray[np.float64]], reach: fl
     rest = plane - base - _sum(amplitudes, waves)
     above = [
         _above_background(rest, weight, f, amplitude, reach)
-        for f, amplitude in zip(lines, amplitudes, strict=True)
+        for f, amplitude in zip(lines[kept:], amplitudes[kept:], strict=True)
     ]
-    return _sum(above, waves)
+    return _sum(above, waves[kept:])
 
 
 def _evenness(clean: NDArray[np.float32], base: NDArray[np.float32]) -> NDArray[np.float32]:

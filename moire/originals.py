@@ -8,6 +8,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from moire.bindings import parse_binding
 from moire.dots import Shape
 from moire.errors import BadRequest
 from moire.model import Examination, Finding, Screen, Weave, WeavePattern
@@ -113,13 +114,35 @@ def measured_originals(found: Examination, *, shape: Shape = "round") -> tuple[O
     printed = [f for f in found.findings if f.screen is not None]
     if printed:
         return _readings(printed, shape)
-    woven = [f.weave for f in found.findings if f.weave is not None]
+    woven = [f for f in found.findings if f.weave is not None]
     if woven:
-        return (woven_original(woven[0]),)
+        return _woven_readings(woven[0])
     raise BadRequest(
         f"{found.file}: no screen and no cloth was found in it: "
         "give --ruling and --angles, or --ends and --picks"
     )
+
+
+def _woven_readings(finding: Finding) -> tuple[Original, ...]:
+    """The cloth as it was read, or each reading that one scan leaves open."""
+    assert finding.weave is not None
+    if finding.settled or len(finding.candidates) < 2:
+        return (woven_original(finding.weave),)
+    out = []
+    for c in finding.candidates[:_READINGS]:
+        if c.ends_per_cm is None or c.picks_per_cm is None or c.probability < _LEAST_PROBABLE:
+            continue
+        cloth = replace(
+            finding.weave,
+            ends_per_cm=c.ends_per_cm,
+            picks_per_cm=c.picks_per_cm,
+            ends_per_inch=c.ends_per_cm * 2.54,
+            picks_per_inch=c.picks_per_cm * 2.54,
+            pattern=parse_binding(c.structure).pattern,
+            structure=c.structure,
+        )
+        out.append(replace(woven_original(cloth), probability=c.probability))
+    return tuple(out)
 
 
 def _readings(findings: Sequence[Finding], shape: Shape) -> tuple[Original, ...]:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Collection
+from dataclasses import replace
 
 import msgspec
 import numpy as np
@@ -56,7 +57,12 @@ def prescribe(
         raise BadRequest(f"--to-ppi {to_ppi:g} must lie between 10 and the scan's own rate")
     wanted = frozenset(only) or MENDED_UNASKED
     chosen = wanted - frozenset(keep)
-    removals = [r for f in examination.findings if f.kind in chosen - {"rosette"} for r in _removals(f)]
+    removals = [
+        replace(r, beside_cpp=_beside(f, examination)) if "weave" not in chosen else r
+        for f in examination.findings
+        if f.kind in chosen - {"rosette"}
+        for r in _removals(f)
+    ]
     screens = [
         (np.array(r.vectors_cpp[0]), np.array(r.vectors_cpp[1])) for r in removals if r.method == "descreen"
     ]
@@ -74,6 +80,12 @@ def prescribe(
         to_ppi=to_ppi,
         removals=tuple(removals),
     )
+
+
+def _beside(finding: Finding, examination: Examination) -> tuple[tuple[float, float], ...]:
+    """Lines of the weave that a beat is of."""
+    parents = [examination.findings[i] for i in finding.parents]
+    return tuple((line.fx_cpp, line.fy_cpp) for p in parents if p.kind == "weave" for line in p.lines)
 
 
 def _removals(finding: Finding) -> list[Removal]:
@@ -114,8 +126,8 @@ def from_json(text: bytes, *, name: str = "recipe") -> Recipe:
         )
     for removal in recipe.removals:
         wrong = removal.method == "descreen" and len(removal.vectors_cpp) != 2
-        numbers = [v for vector in removal.vectors_cpp for v in vector]
-        if wrong or not numbers or not all(math.isfinite(v) and abs(v) <= 1 for v in numbers):
+        numbers = [v for vector in (*removal.vectors_cpp, *removal.beside_cpp) for v in vector]
+        if wrong or not removal.vectors_cpp or not all(math.isfinite(v) and abs(v) <= 1 for v in numbers):
             raise RecipeMismatch(
                 f"{name}: a removal has vectors that are not frequencies in cycles per pixel"
             )

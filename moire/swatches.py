@@ -29,6 +29,8 @@ def count_cloth(
     ThreadCount or None
         None where no swatch shows six threads both ways.
     """
+    if np.linalg.matrix_rank(orders) < 2:
+        return None
     if max(image.shape) <= _WHOLE_PX:
         return count_threads(image, frame, orders)
     down, across = (max(1, round(side / _SWATCH_PX)) for side in image.shape)

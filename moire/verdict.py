@@ -43,7 +43,14 @@ def judge(
     advice = []
     if "halftone" in kinds:
         advice.append("The printed screen is apart from picture detail: mend a derivative with `moire mend`.")
-    if "alias" in kinds:
+    # A cloth's beats name the weave that they are of; a folded screen is of nothing else.
+    folds = [f for f in seen if f.kind == "alias"]
+    if any(f.parents for f in folds):
+        advice.append(
+            "The threads of a cloth beat with the pixel grid: mend a derivative with `moire mend`, which "
+            "keeps the weave; a finer scan, or a reduction that averages, shows no beat."
+        )
+    if any(not f.parents for f in folds):
         advice.append(
             "A screen is folded, but above picture detail: mend a derivative, or settle the cause with a "
             f"second scan at {_better_ppi(seen, rates)} ppi."

@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 
 from moire.bindingfit import BindingFit, fit_binding
 from moire.bindings import Binding, swapped
+from moire.foldedcloth import REACH_CPP, Rival, fit_folded, is_beyond_reach, settle_setts, weigh
 from moire.model import WarpRuns, Weave
 from moire.setts import coarse_map, sett_map, sett_places, sett_range
 from moire.spectrallines import find_lines
@@ -22,7 +23,9 @@ _SMALLEST_PX = 200
 _COARSEST = 8
 # Nats gained and weight of lines at fractions of the threads' frequencies, either pair being enough.
 SURE = ((14.0, 0.8), (9.0, 2.2), (20.0, 0.4))
-_COUNTED_LINES = 8
+_COUNTED_LINES, _SETTLED = 8, 0.9
+# No reading that folds is worth as much: it would need lines that lens and aperture do not leave.
+_CLEAR_GAIN = 45.0
 _KNIT_GAIN = 20.0
 _SQUARE, _SURE_GAIN, _UNEVEN = 0.01, 24.0, 0.02
 _JERSEY = Binding(pattern="knit", structure="single jersey", direction=None, matrix=np.zeros((1, 1), bool))
@@ -40,11 +43,17 @@ class Threads:
         In pixels of that size.
     reduction : int
         By how many pixels that picture was reduced, each way.
+    rivals : tuple of Rival
+        Readings to choose from where threads may be finer than the grid reaches, most probable first.
+    proven : bool
+        Whether another scan bears out the reading that was taken.
     """
 
     fit: BindingFit
     count: ThreadCount
     reduction: int
+    rivals: tuple[Rival, ...] = ()
+    proven: bool = False
 
     @property
     def warp(self) -> NDArray[np.float64]:
@@ -55,6 +64,17 @@ class Threads:
     def weft(self) -> NDArray[np.float64]:
         """Thread frequency of the picks, cycles per pixel of the scan."""
         return self.count.weft / self.reduction
+
+    @property
+    def beyond_reach(self) -> bool:
+        """Whether threads are finer than the sampling grid can show."""
+        return is_beyond_reach(self.warp, self.weft)
+
+    @property
+    def settled(self) -> bool:
+        """Whether one reading is the right one: of folded threads no single scan can tell."""
+        clear = not self.rivals or self.rivals[0].probability > _SETTLED
+        return clear and (self.proven or not self.beyond_reach)
 
     @property
     def like_screen(self) -> bool:
@@ -88,14 +108,43 @@ def find_threads(image: NDArray[np.float32], spectrum: Spectrum | None = None) -
         Of this picture, where it has been measured already.
     """
     reading = read_cloth(image, spectrum)
-    if reading is None:
-        return None
-    fit = reading.fit
-    count = count_cloth(reading.image, fit.frame, reading.orders)
+    threads = None if reading is None else _count(reading)
+    return None if threads is None or (threads.like_screen and not threads.surely_cloth) else threads
+
+
+def settle_threads(
+    threads: Threads,
+    image: NDArray[np.float32],
+    ppi: tuple[float, float],
+    other: Threads,
+    other_ppi: tuple[float, float],
+) -> Threads:
+    """Threads counted anew by the reading that another scan of the same cloth bears out.
+
+    Parameters
+    ----------
+    threads, other : Threads
+        As found in this scan and in the other.
+    image : ndarray, shape (rows, columns)
+        This scan.
+    ppi, other_ppi : (float, float)
+        Rates of both.
+    """
+    scaled = replace(other.fit, warp=other.warp, weft=other.weft)
+    others = other.rivals or (Rival(fit=scaled, probability=1.0),)
+    rivals = settle_setts(threads.rivals, ppi, others, other_ppi)
+    if not rivals or rivals is threads.rivals:
+        return threads
+    fit = rivals[0].fit
+    chosen = threads if fit is threads.fit else _count(_Reading(fit=fit, image=image, reduction=1))
+    return threads if chosen is None else replace(chosen, rivals=rivals, proven=True)
+
+
+def _count(reading: _Reading) -> Threads | None:
+    count = count_cloth(reading.image, reading.fit.frame, reading.orders)
     if count is None:
         return None
-    threads = Threads(fit=fit, count=count, reduction=reading.reduction)
-    return None if threads.like_screen and not threads.surely_cloth else threads
+    return Threads(fit=reading.fit, count=count, reduction=reading.reduction, rivals=reading.rivals)
 
 
 def is_surely_cloth(image: NDArray[np.float32]) -> bool:
@@ -113,11 +162,13 @@ class _Reading:
     fit: BindingFit
     image: NDArray[np.float32]
     reduction: int
+    rivals: tuple[Rival, ...] = ()
 
     @property
     def orders(self) -> NDArray[np.float64]:
-        """Lines to count by, strongest first, as orders of warp and weft."""
-        return np.array([o for _, o in self.fit.lines if max(map(abs, o)) <= 2][:_COUNTED_LINES])
+        """Lines to count by, strongest first, as orders of warp and weft; those that do not fold."""
+        low = [o for line, o in self.fit.lines if max(map(abs, o)) <= 2 and np.abs(line.f).max() < REACH_CPP]
+        return np.array(low[:_COUNTED_LINES]).reshape(-1, 2)
 
 
 def read_cloth(image: NDArray[np.float32], spectrum: Spectrum | None = None) -> _Reading | None:
@@ -129,12 +180,33 @@ def read_cloth(image: NDArray[np.float32], spectrum: Spectrum | None = None) -> 
         if reduction > 1 or spectrum is None or spectrum.size != _TILE:
             pitch = max(_PITCH, math.isqrt(small.size // _TILES_AT_MOST))
             spectrum = tile_spectrum(small, size=_TILE, pitch=pitch)
-        fit = as_cloth(fit_binding(spectrum, find_lines(spectrum)))
-        if fit is not None and (best is None or fit.gain > best.fit.gain):
+        lines = find_lines(spectrum)
+        fits = fit_binding(spectrum, lines)
+        fit = as_cloth(fits)
+        if reduction == 1:
+            unsure = fit is None or fit.gain < _CLEAR_GAIN
+            best = _full_size(fit, fits, fit_folded(spectrum, lines) if unsure else (), small)
+        elif fit is not None and (best is None or fit.gain > best.fit.gain):
             best = _Reading(fit=fit, image=small, reduction=reduction)
         reduction *= 2
         small = _halve(small)
     return best
+
+
+def _full_size(
+    fit: BindingFit | None,
+    fits: tuple[BindingFit, ...],
+    folded: tuple[BindingFit, ...],
+    image: NDArray[np.float32],
+) -> _Reading | None:
+    """The reading at full size, where threads may also have folded."""
+    ruled = tuple(f for f in fits if f.binding.pattern == "unknown")
+    beyond = as_cloth((*folded, *ruled))
+    if fit is None and beyond is None:
+        return None
+    best = max((f for f in (fit, beyond) if f is not None), key=lambda f: f.gain)
+    sure = tuple(f for f in (*fits, *folded) if f.binding.pattern != "unknown" and f.gain > SURE[1][0])
+    return _Reading(fit=best, image=image, reduction=1, rivals=weigh(sure, _TILE))
 
 
 def as_cloth(fits: tuple[BindingFit, ...]) -> BindingFit | None:

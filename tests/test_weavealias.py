@@ -1,8 +1,13 @@
 """A cloth's beats with a pixel grid are where, and as strong, as the kernel of the reduction makes them."""
 
+from dataclasses import replace
+from functools import cache
+from typing import Any
+
 import cv2
 import numpy as np
 import pytest
+import skimage.data
 from numpy.typing import NDArray
 from PIL import Image
 from prints import as_scan
@@ -26,11 +31,11 @@ PILLOW = {
 SIDE = 900
 
 
-def reduced(image: NDArray[np.float32], kernel: str, size: int) -> NDArray[np.float32]:
+def reduced(image: NDArray[Any], kernel: str, size: int) -> NDArray[Any]:
     if kernel.startswith("opencv"):
         flag = cv2.INTER_NEAREST if kernel == "opencv-nearest" else cv2.INTER_AREA
-        return np.asarray(cv2.resize(image, (size, size), interpolation=flag), np.float32)
-    return np.asarray(Image.fromarray(image).resize((size, size), PILLOW[kernel]), np.float32)
+        return np.asarray(cv2.resize(image, (size, size), interpolation=flag))
+    return np.asarray(Image.fromarray(image).resize((size, size), PILLOW[kernel]))
 
 
 def amplitude(image: NDArray[np.float32], f: tuple[float, float]) -> float:
@@ -87,25 +92,82 @@ def test_a_line_of_its_own_is_no_alias_of_the_threads() -> None:
     assert explain_alias(np.array([0.111, 0.077]), aliases, tolerance=0.004) is None
 
 
-def test_beats_of_a_reduced_cloth_are_mended_and_its_weave_stays() -> None:
-    """Thread lines keep 95 % and more; the strongest beat loses 10 dB and more."""
+@cache
+def fine_master(pattern: str, ends: float, picks: float) -> NDArray[np.uint8]:
     cloth = Cloth(
-        width_in=2.2, height_in=2.2, ends_per_cm=22, picks_per_cm=16, unevenness=0.1, jitter=0.01, hair=0.2
-    )
+        width_in=2.2, height_in=2.2, ends_per_cm=ends, picks_per_cm=picks, pattern=pattern, unevenness=0.1,
+        jitter=0.01, hair=0.2,
+    )  # fmt: skip
     scanner = Scanner(ppi=(600, 600))
-    pixels = digitise(sample(cloth, scanner), scanner, np.random.default_rng(0))
-    small = cv2.resize(pixels, (300, 300), interpolation=cv2.INTER_NEAREST)
+    return digitise(sample(cloth, scanner), scanner, np.random.default_rng(0))
+
+
+@pytest.mark.parametrize(
+    ("cloth", "kernel"),
+    [
+        (("plain", 26, 20), "opencv-nearest"),
+        (("plain", 26, 20), "opencv-area"),
+        (("plain", 26, 20), "pillow-hamming"),
+        (("twill2/2Z", 22, 16), "opencv-nearest"),
+        (("twill2/2Z", 22, 16), "pillow-box"),
+    ],
+)
+def test_beats_of_a_reduced_cloth_are_explained_and_mended_and_its_weave_stays(
+    cloth: tuple[str, float, float], kernel: Kernel
+) -> None:
+    """Thread lines keep 95 % and more; the strongest beat loses 9 dB, none grows."""
+    small = reduced(fine_master(*cloth), kernel, 300)
     mending = mend(as_scan(small, 300 / 2.2))
     before, after = (lightness(p.astype(np.float32)) for p in (small, mending.scan.pixels))
     found = {f.kind: f for f in mending.before.findings}
-    assert found["alias"].parents == (mending.before.findings.index(found["weave"]),)
-    assert "order" in found["alias"].evidence[0]
+    assert found["weave"].weave is not None
+    assert found["weave"].weave.ends_per_cm == pytest.approx(cloth[1], rel=0.005)
     for line in found["weave"].lines:
         f = (line.fx_cpp, line.fy_cpp)
         assert amplitude(after, f) > 0.95 * amplitude(before, f)
-    beat = max(found["alias"].lines, key=lambda line: line.amplitude)
-    f = (beat.fx_cpp, beat.fy_cpp)
-    assert amplitude(after, f) < 10 ** (-10 / 20) * amplitude(before, f)
+    assert found["alias"].parents == (mending.before.findings.index(found["weave"]),)
+    assert "order" in found["alias"].evidence[0]
+    for line in found["alias"].lines:
+        f = (line.fx_cpp, line.fy_cpp)
+        strong = amplitude(before, f) > 0.3
+        assert amplitude(after, f) < (10 ** (-9 / 20) if strong else 0.9) * amplitude(before, f)
+
+
+@pytest.mark.parametrize("kernel", ["pillow-bilinear", "pillow-lanczos"])
+def test_kernels_that_average_leave_no_beat_to_mend(kernel: Kernel) -> None:
+    small = reduced(fine_master("plain", 26, 20), kernel, 300)
+    mending = mend(as_scan(small, 300 / 2.2))
+    assert not mending.recipe.removals
+    assert (mending.scan.pixels == small).all()
+
+
+def test_the_weave_itself_is_removed_only_when_asked() -> None:
+    """For those who want the picture on the canvas: it comes nearer to what was printed."""
+    figure = (0.35 + 0.65 * (skimage.data.astronaut()[:400, :400] / 255) ** 2.2).astype(np.float32)
+    cloth = Cloth(
+        width_in=1.5, height_in=1.5, ends_per_cm=16, picks_per_cm=13, jitter=0.03, thickness=0.08, hair=0.2,
+        figure=figure, warp=(0.6, 0.55, 0.5), weft=(0.8, 0.75, 0.7), dpi=1200,
+    )  # fmt: skip
+    scanner = Scanner(ppi=(300, 300), turn_deg=0.4)
+    canvas = digitise(sample(cloth, scanner), scanner, np.random.default_rng(0))
+    smooth = replace(cloth, woven=False, hair=0.0)
+    printed = lightness(
+        digitise(sample(smooth, scanner), scanner, np.random.default_rng(0)).astype(np.float32)
+    )
+    kept = mend(as_scan(canvas, 300))
+    assert all(r.kind != "weave" for r in kept.recipe.removals)
+    bare = mend(as_scan(canvas, 300), kept.before, only=["weave"])
+    before, after = (lightness(p.astype(np.float32)) for p in (canvas, bare.scan.pixels))
+    (found,) = [f for f in kept.before.findings if f.kind == "weave"]
+    for line in sorted(found.lines, key=lambda line: -line.amplitude)[:4]:
+        f = (line.fx_cpp, line.fy_cpp)
+        assert amplitude(after, f) < 10 ** (-15 / 20) * amplitude(before, f)
+
+    def apart(plane: NDArray[np.float32]) -> float:
+        gap = plane - printed
+        return float((gap - cv2.GaussianBlur(gap, (0, 0), 20)).std())
+
+    assert apart(after) < 0.4 * apart(before)
 
 
 def test_plans_and_examinations_reckon_alike() -> None:

@@ -188,3 +188,20 @@ def test_cloth_photographed_at_a_slant_is_followed(slant: float) -> None:
     assert low == pytest.approx(16, rel=0.03)
     # The range leaves out the outermost twentieth of the picture.
     assert high == pytest.approx(16 / (1 - 2 * slant), rel=0.045)
+
+
+@pytest.mark.parametrize(("pattern", "turn"), [("plain", 30.0), ("twill2/2Z", -27.0), ("satin5/2", 38.0)])
+def test_cloth_that_lies_askew_is_read_all_the_same(pattern: str, turn: float) -> None:
+    ends, picks = SETTS[pattern]
+    cloth = Cloth(
+        width_in=1.6, height_in=1.6, ends_per_cm=ends, picks_per_cm=picks, pattern=pattern, jitter=0.03
+    )
+    scanner = Scanner(ppi=(400, 400), turn_deg=turn)
+    pixels = digitise(sample(cloth, scanner), scanner, np.random.default_rng(1))
+    inside = lightness(pixels.astype(np.float32))[130:-130, 130:-130]
+    threads = find_threads(np.ascontiguousarray(inside))
+    assert threads is not None
+    weave = measure_weave(threads, (400, 400))
+    assert weave.structure == parse_binding(pattern).structure
+    assert weave.ends_per_cm == pytest.approx(ends, rel=0.01)
+    assert weave.picks_per_cm == pytest.approx(picks, rel=0.01)

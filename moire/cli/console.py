@@ -97,7 +97,8 @@ def _what(finding: Finding) -> str:
         w = finding.weave
         what, by = ("wales", "courses") if w.pattern == "knit" else ("ends", "picks")
         name = w.structure or w.pattern
-        return f"{name}, {w.ends_per_cm:.2f} {what}/cm by {w.picks_per_cm:.2f} {by}/cm"
+        text = f"{name}, {w.ends_per_cm:.2f} {what}/cm by {w.picks_per_cm:.2f} {by}/cm"
+        return text if finding.settled else text + ", not settled by one scan"
     if finding.parents:
         return f"beat of {' and '.join(str(p) for p in finding.parents)}"
     return finding.evidence[0] if finding.evidence else ""
