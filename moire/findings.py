@@ -23,7 +23,7 @@ from moire.weaves import Threads, find_threads, is_surely_cloth, settle_threads
 
 _TEXTURE_LINES, _TEXTURE_OBLIQUE = 4, 2
 _OF_THE_CLOTH, _BEAT_SHARE = 0.15, 0.03
-_LATTICES_OF_CLOTH = 2
+_LATTICES_OF_CLOTH, _KEEPS_STEP = 2, 0.995
 _WINDOW_PX = 1024
 
 
@@ -39,7 +39,7 @@ def group_lines(survey: Survey, second: Survey | None = None, warp: WarpRuns = "
     """Findings without visibility, screens first, then what remains."""
     threads = None
     # Cloth of equal setts is as square as a screen, but a press keeps step and threads do not.
-    if 1 <= len(survey.lattices) <= _LATTICES_OF_CLOTH and is_surely_cloth(_strong_window(survey)):
+    if _may_be_cloth(survey.lattices) and is_surely_cloth(_strong_window(survey)):
         survey = replace(survey, lattices=(), drifts=(), chroma=())
     if not survey.lattices:
         threads = _threads(survey, second)
@@ -101,6 +101,13 @@ def _threads(survey: Survey, second: Survey | None) -> Threads | None:
         return threads
     other = find_threads(second.mixed, second.spectrum)
     return threads if other is None else settle_threads(threads, survey.mixed, rate, other, other_rate)
+
+
+def _may_be_cloth(lattices: tuple[Lattice, ...]) -> bool:
+    """Whether the strongest lattice is out of step enough to be of threads."""
+    if not 1 <= len(lattices) <= _LATTICES_OF_CLOTH:
+        return False
+    return min(lattices[0].first.coherence, lattices[0].second.coherence) < _KEEPS_STEP
 
 
 def _strong_window(survey: Survey) -> NDArray[np.float32]:
