@@ -15,6 +15,8 @@ from numpy.typing import NDArray
 from moire.lattice import Lattice, Vector, alike, grid_distance, transfer
 
 _TAU_BINS = 0.06
+# Images of the block grid are many and exact: a near miss is a chance.
+_IMAGE_TAU = 0.7
 # Cosine of colours; what a codec leaves of chroma differs less.
 _SAME_COLOUR, _SAME_COLOUR_JPEG = 0.90, 0.97
 
@@ -82,7 +84,7 @@ def _is_sum(
 ) -> bool:
     # Light passes every ink: their beat has the product of their colours, and where that can be
     # seen to fit it may be as strong as they are.
-    first = 1.0 if likeness == _SAME_COLOUR else 0.6
+    first = 1.0 if likeness == _SAME_COLOUR else 0.5
     for (a, sa), (b, sb) in combinations(parents, 2):
         if alike(pair.colour, _product(a, b)) < likeness:
             continue
@@ -113,12 +115,12 @@ def _is_block_image(pair: Lattice, strength: float, parents: list[tuple[Lattice,
         for orders, share in ((_ORDERS_3, 0.65), (_ORDERS_5, 0.3), (_SUBORDERS_9, 0.2)):
             if strength < share * parent:
                 place = _places(orders, g)[:, None, :] + _EIGHTHS[None, :, :]
-                if _near(pair, place, 1.5 * tau).any():
+                if _near(pair, place, _IMAGE_TAU * tau).any():
                     return True
     for (a, sa), (b, sb) in combinations(parents, 2):
         if strength < 0.3 * min(sa, sb):
             place = _places(_ORDERS_2, a)[:, None, None, :] + _places(_ORDERS_2, b)[None, :, None, :]
-            if _near(pair, place + _EIGHTHS[None, None, :, :], 1.5 * tau).any():
+            if _near(pair, place + _EIGHTHS[None, None, :, :], _IMAGE_TAU * tau).any():
                 return True
     return False
 

@@ -9,6 +9,7 @@ from itertools import permutations
 import numpy as np
 from numpy.typing import NDArray
 
+from moire.beats import rosette_parents
 from moire.chroma import ChromaReading
 from moire.lattice import Lattice, grid_distance, wrap
 from moire.model import Ink, Screen
@@ -158,8 +159,8 @@ def name_line_ink(colour: NDArray[np.float64]) -> Ink:
 def is_halftone(lattice: Lattice, lattices: tuple[Lattice, ...], peaks: tuple[Peak, ...], size: int) -> bool:
     """Vote on whether a square lattice is print or cloth.
 
-    Print: its fundamentals dominate every line over the same tiles that no screen explains, in
-    step or not, and at least one of: the screens explain most of the energy, the (1,1) order is
+    Print: its fundamentals dominate every line over the same tiles that neither a screen nor a sum
+    of two explains, in step or not, and at least one of: the screens explain most of the energy, the (1,1) order is
     present, or the square is exact. Cloth has its strongest lines elsewhere. Long periods on an
     axis are text lines or rules and do not count.
     """
@@ -168,6 +169,7 @@ def is_halftone(lattice: Lattice, lattices: tuple[Lattice, ...], peaks: tuple[Pe
         p.amplitude * max(p.coherence, 0.5)
         for p in peaks
         if not any(_belongs(p, g, tolerance) for g in lattices)
+        and rosette_parents(p.f, lattices, tolerance) is None
         and not (on_axis(p.f) and np.hypot(*p.f) < 1 / _TEXT_PERIOD_PX)
         and _shares_tiles(p, lattice)
     ]

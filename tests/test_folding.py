@@ -73,7 +73,7 @@ def test_candidates_of_an_unfolded_screen_name_it_first(ruling: float) -> None:
 def test_candidates_of_a_folded_screen_hold_the_true_one() -> None:
     true = np.array(page_vector(150, 0))
     alias, order = fold(true, (200, 200))
-    options = unfold(alias / 200, (200, 200), contrast=0.15)
+    options = unfold(alias / 200, (200, 200), contrast=0.05)
     match = [o for o in options if o.order == order]
     assert match[0].ruling_lpi == pytest.approx(150)
     assert match[0] is options[0]
@@ -83,7 +83,7 @@ def test_remaining_contrast_tells_direct_from_folded() -> None:
     """A folded screen was blurred at its true frequency, so it cannot be strong."""
     k = np.array(page_vector(67 / 200, 0))
     strong = unfold(k, (200, 200), contrast=0.7)
-    weak = unfold(k, (200, 200), contrast=0.2)
+    weak = unfold(k, (200, 200), contrast=0.08)
     assert strong[0].ruling_lpi == pytest.approx(67)
     assert weak[0].ruling_lpi == pytest.approx(133)
 

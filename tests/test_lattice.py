@@ -9,7 +9,7 @@ from moire.beats import rosette_parents
 from moire.lattice import Lattice, grid_distance, quarter_turn, wrap
 from moire.pairing import find_lattices, missing_partners
 from moire.peaks import Peak
-from moire.screens import measure_screen, name_inks, order_of
+from moire.screens import is_halftone, measure_screen, name_inks, order_of
 from moire.units import page_vector
 
 SIZE = 128
@@ -51,6 +51,17 @@ def test_screens_of_several_inks_are_all_kept() -> None:
         + screen(0.21, 2, 4, (0, 0.1, 1))
     )
     assert len(find_lattices(peaks, size=SIZE)) == 3
+
+
+def test_a_print_may_show_its_rosette_more_than_its_screens() -> None:
+    """Near half the rate the lens takes most of the screens and little of their coarse sums."""
+    first, second = screen(0.44, 15, 2), screen(0.45, 45, 2.5)
+    sums = tuple(peak(tuple(wrap(a.f - b.f)), 6) for a, b in zip(first, second, strict=True))
+    peaks = (*first, *second, *sums)
+    lattices = find_lattices((*first, *second), size=SIZE)
+    assert is_halftone(lattices[0], lattices, peaks, SIZE)
+    elsewhere = (*first, *second, peak((0.1, 0.23), 6), peak((0.23, 0.12), 6))
+    assert not is_halftone(lattices[0], lattices, elsewhere, SIZE)
 
 
 @pytest.mark.parametrize(

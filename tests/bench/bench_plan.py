@@ -1,6 +1,7 @@
 """Predictions of `plan` against scans that were really rendered: remakes a table of docs/planning.md.
 
-    python tests/bench/bench_plan.py prints|half|cloth|uneven|reductions|followed|reduced [--cases N]
+    python tests/bench/bench_plan.py prints|half|cloth|uneven|reductions|followed|reduced
+        [--cases N] [--viewing monitor|print]
 
 ``prints``: flat tints screened by Ghostscript and scanned by the tests' own sampling model.
 ``half``: the same with cells of half pixels. ``cloth``, ``uneven``: swatches of the product's
@@ -16,6 +17,7 @@ import math
 import sys
 from dataclasses import dataclass, replace
 from pathlib import Path
+from typing import Literal
 
 import cv2
 import numpy as np
@@ -45,6 +47,7 @@ from moire.verdict import ARTIFACTS
 from moire.vision import viewing_condition
 
 SEED = 20
+Condition = Literal["monitor", "print"]
 SIDE_IN = 1.5
 GAIN_UM, LENS_PX = 25.0, 0.3
 # Cells of whole device pixels: an interpreter prints no sub-harmonics of these.
@@ -217,7 +220,7 @@ class Followed:
         return f"| {' | '.join(map(str, cells))} |"
 
 
-def follow(case: Case, *, kernel: Kernel | None = None) -> Followed:
+def follow(case: Case, *, viewing: Condition, kernel: Kernel | None = None) -> Followed:
     """Scan (or reduce a 600 ppi master) as recommended, mend if need be; and as the worst choice says."""
     if kernel is None:
         rates, turns, master = (150, 200, 300, 400, 600, 1200), (0.0, 5.0), None
@@ -226,6 +229,7 @@ def follow(case: Case, *, kernel: Kernel | None = None) -> Followed:
     made = plan(
         [case.screen()], rates=[(float(r), float(r)) for r in rates], turns=turns, shape=case.spot,  # type: ignore[arg-type]
         scanning=Scanning(optics=Optics(lens_px=LENS_PX), master=master, kernel=kernel or "opencv-area"),
+        viewing=viewing,
     )  # fmt: skip
     best, worst = made.choices[0], made.choices[-1]
 
@@ -239,7 +243,7 @@ def follow(case: Case, *, kernel: Kernel | None = None) -> Followed:
         return as_scan(pixels, choice.ppi[0])
 
     scan = done(best)
-    found = examine(scan)
+    found = examine(scan, viewing=viewing)
     own = printed_places(case, best)
     beats = [
         f for f in found.findings if f.kind in ARTIFACTS and f.visibility >= 1 and not is_own(f.lines, own)
@@ -248,7 +252,7 @@ def follow(case: Case, *, kernel: Kernel | None = None) -> Followed:
     shows = None
     foreseen = [b for b in worst.beats if b.source == "sampling" and b.visibility >= 1]
     if foreseen:
-        listed = examine(done(worst))
+        listed = examine(done(worst), viewing=viewing)
         place = foreseen[0].frequency_cpi / worst.ppi[0]
         shows = any(
             abs(math.hypot(li.fx_cpp, li.fy_cpp) - place) < 0.004 and f.visibility >= 1
@@ -306,14 +310,15 @@ def table(rows: list[tuple[str, Fit]]) -> None:
     )
 
 
-def tell(what: str, cases: int) -> None:
+def tell(what: str, cases: int, viewing: Condition) -> None:
     """Recommendations followed, a row each and the counts."""
     kernels: tuple[Kernel, ...] = ("pillow-lanczos", "pillow-bicubic", "pillow-hamming", "opencv-area")
     print("| original: recommended | beats | foretold | examined | others seen | mended | worst shows |")
     print("|---|---|---|---|---|---|---|")
     done = []
     for n in range(cases):
-        done.append(follow(draw_case(n), kernel=kernels[n % 4] if what == "reduced" else None))
+        kernel = kernels[n % 4] if what == "reduced" else None
+        done.append(follow(draw_case(n), viewing=viewing, kernel=kernel))
         print(done[-1].line, flush=True)
     free = [d for d in done if d.free]
     shown = [d.worst_shows for d in done if d.worst_shows is not None]
@@ -332,9 +337,10 @@ def main() -> None:
         "what", choices=["prints", "half", "cloth", "uneven", "reductions", "followed", "reduced"]
     )
     parser.add_argument("--cases", type=int, default=48)
+    parser.add_argument("--viewing", choices=["monitor", "print"], default="monitor")
     args = parser.parse_args()
     if args.what in ("followed", "reduced"):
-        tell(args.what, args.cases)
+        tell(args.what, args.cases, args.viewing)
         return
     rows: list[tuple[str, Fit]] = []
     for n in range(args.cases):
