@@ -117,8 +117,8 @@ def _count_words(weave: Weave, jitter: float) -> list[str]:
     places = "; ".join(f"{e:.1f} x {p:.1f}" for e, p in weave.places_per_cm)
     drift = max(high / max(low, 1e-9) - 1 for low, high in (ends, picks))
     drifts = drift > _DRIFT and jitter < drift
-    caution = ["the sett changes over the picture, as in a photograph taken at a slant: read the range, "
-               "not the mean"] if drifts else []  # fmt: skip
+    caution = ["the sett changes over the picture, as in a photograph taken at a slant or "
+               "through a lens that bends lines: read the range, not the mean"] if drifts else []  # fmt: skip
     return [
         *caution,
         f"at five places {places} ends x picks per cm (as ISO 7211-2 and ASTM D3775 count, which ask for "

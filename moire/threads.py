@@ -103,10 +103,11 @@ def count_threads(
         return None
     moved = np.stack([t[0] for t in totals if t], axis=1)
     sigma = np.stack([t[1] for t in totals if t], axis=1)
-    strength = _strength(fields)
-    present = _present(strength)
+    present = _present(_strength(fields))
     jitter = (_jitter(fields, present, 0), _jitter(fields, present, 1))
-    near = fields.frame.T + local_departures(fields, _MAP_PERIODS, _MAP_PERIODS)
+    # Where the sett drifts far the lines are seen only once they are straightened.
+    strength = _strength(again)
+    near = fields.frame.T + _slopes(turns, fields) + local_departures(again, _MAP_PERIODS, _MAP_PERIODS)
     threads = fields.frame.T + moved
     lengths = []
     for i in (0, 1):
@@ -123,7 +124,7 @@ def count_threads(
         x=fields.x,
         y=fields.y,
         strength=strength,
-        present=present,
+        present=_present(strength),
         warp_map=near[..., 0, :],
         weft_map=near[..., 1, :],
         bow=float(drift[1, 2] / (np.hypot(*threads[1]) * image.shape[1])),
@@ -143,6 +144,19 @@ def gap_jitter(
     fields = bring_to_rest(image, frame, orders)
     present = _present(_strength(fields))
     return _jitter(fields, present, 0), _jitter(fields, present, 1)
+
+
+def _slopes(turns: NDArray[np.float64], fields: RestingLines) -> NDArray[np.float64]:
+    """Frequencies that turns of warp and weft add around each place, shape (rows, columns, 2, 2)."""
+    import cv2
+
+    reach = [_MAP_PERIODS * fields.period / step for step in fields.step]
+    out = np.empty((*turns.shape[1:], 2, 2))
+    for thread, plane in enumerate(turns):
+        for axis in (0, 1):
+            slope = np.gradient(plane, fields.step[axis], axis=1 - axis).astype(np.float32)
+            out[..., thread, axis] = cv2.GaussianBlur(slope, (0, 0), reach[0], sigmaY=reach[1])
+    return out
 
 
 def _rows(planes: NDArray[Any], axis: int) -> list[NDArray[Any]]:

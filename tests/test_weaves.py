@@ -205,3 +205,25 @@ def test_cloth_that_lies_askew_is_read_all_the_same(pattern: str, turn: float) -
     assert weave.structure == parse_binding(pattern).structure
     assert weave.ends_per_cm == pytest.approx(ends, rel=0.01)
     assert weave.picks_per_cm == pytest.approx(picks, rel=0.01)
+
+
+@pytest.mark.parametrize(("barrel", "tolerance"), [(0.06, 0.035), (0.12, 0.095)])
+def test_cloth_through_a_barrel_lens_has_the_range_that_the_lens_makes(
+    barrel: float, tolerance: float
+) -> None:
+    """A point r from the middle is seen where r (1 + k r^2) / (1 + k) was: threads crowd at the edges."""
+    cloth = Cloth(width_in=1.6, height_in=1.6, ends_per_cm=16, picks_per_cm=14, jitter=0.02, dpi=1200)
+    scanner = Scanner(ppi=(400, 400))
+    pixels = digitise(sample(cloth, scanner), scanner, np.random.default_rng(1))
+    half = pixels.shape[0] / 2
+    y, x = (np.mgrid[: 2 * half, : 2 * half] - half) / half
+    grown = (1 + barrel * (x**2 + y**2)) / (1 + barrel)
+    seen_at = [((v * grown + 1) * half).astype(np.float32) for v in (x, y)]
+    photograph = cv2.remap(pixels, *seen_at, cv2.INTER_CUBIC)
+    inside = np.s_[32:-32, 32:-32]
+    threads = find_threads(np.ascontiguousarray(lightness(photograph.astype(np.float32))[inside]))
+    assert threads is not None
+    local = 16 * (1 + barrel * (3 * x**2 + y**2)) / (1 + barrel)
+    low, high = np.quantile(local[inside], [0.05, 0.95])
+    found = measure_weave(threads, (400, 400)).ends_range_per_cm
+    assert found == pytest.approx((low, high), rel=tolerance)
