@@ -160,9 +160,9 @@ def is_halftone(lattice: Lattice, lattices: tuple[Lattice, ...], peaks: tuple[Pe
     """Vote on whether a square lattice is print or cloth.
 
     Print: its fundamentals dominate every line over the same tiles that neither a screen nor a sum
-    of two explains, in step or not, and at least one of: the screens explain most of the energy, the (1,1) order is
-    present, or the square is exact. Cloth has its strongest lines elsewhere. Long periods on an
-    axis are text lines or rules and do not count.
+    of two explains, in step or not, and at least one of: the screens explain most of the energy, the
+    (1,1) order is present, or the square is exact. Cloth has its strongest lines elsewhere. Long
+    periods on an axis are text lines or rules and do not count.
     """
     tolerance = 0.35 / size
     others = [
