@@ -2,8 +2,7 @@
 
 from __future__ import annotations
 
-import math
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,18 +11,16 @@ from moire.banding import Band, find_bands
 from moire.blocks import BlockGrid, find_block_grid
 from moire.chroma import ChromaReading, read_chroma
 from moire.drift import DriftingLine, find_drifting_lines
-from moire.lattice import Lattice, wrap
+from moire.lattice import Lattice
 from moire.model import Scan
-from moire.pairing import find_lattices, half_orders, missing_partners
+from moire.pairing import find_lattices
 from moire.patches import Codes
-from moire.peaks import Peak, find_candidates, measure_bins
-from moire.refinement import polish, refine, with_colours
+from moire.peaks import Peak
 from moire.samples import code_planes, mixed_plane, rate_aspect
 from moire.screens import is_halftone, on_axis
-from moire.spectrum import Spectrum, tile_spectrum
+from moire.sighting import View, coloured, look_closer, sight_screens
+from moire.spectrum import Spectrum
 
-_TILES_AT_MOST = 600
-_CALLED_Z = 3.0
 # Excess that is worth one robust standard deviation, for a profile's line beside a tile's.
 _NAT_OF_Z = 0.35
 _BANDS_AT_MOST = 3
@@ -83,31 +80,17 @@ def take_survey(scan: Scan, size: int) -> Survey:
     codes = code_planes(scan)
     mixed = mixed_plane(codes)
     blocks = find_block_grid(mixed)
-    pitch = max(size // 2, math.isqrt(mixed.size // _TILES_AT_MOST))
-    spectrum = tile_spectrum(mixed, size=size, pitch=pitch)
-    seen = refine(mixed, find_candidates(spectrum), size=size)
-    peaks = tuple(p for p in seen if _credible(p))
-    # A partner too weak to stand out by itself counts where a coherent line calls for it, and a
-    # screen whose (1, 1) order was seen where its own lines are.
-    aspect, jpeg = rate_aspect(scan), scan.jpeg or _in_place(blocks)
-    peaks += _called(missing_partners(peaks, size=size, aspect=aspect), mixed, spectrum)
-    seen_lattices = find_lattices(peaks, size=size, aspect=aspect, jpeg=jpeg)
-    peaks += _called(half_orders(seen_lattices, peaks, size=size), mixed, spectrum)
-    peaks = polish(mixed, peaks, size=min(size, 64))
-    halved = jpeg and codes.shape[2] == 3
-    peaks = _coloured(peaks, codes, size, halved=halved)
-    lattices = find_lattices(peaks, size=size, aspect=aspect, jpeg=jpeg)
-    # Print or cloth is asked once, of the strongest: weak inks of a print cannot dominate it.
-    if lattices and not is_halftone(lattices[0], lattices, seen, size):
-        lattices = ()
+    view = View(size=size, aspect=rate_aspect(scan), jpeg=scan.jpeg or _in_place(blocks))
+    sighting = look_closer(sight_screens(codes, mixed, view), codes, mixed, view)
+    lattices, peaks, spectrum = sighting.lattices, sighting.peaks, sighting.spectrum
     drifts = (0.0,) * len(lattices)
     hop = size // 2
     grid = (mixed.shape[0] // hop - 1, mixed.shape[1] // hop - 1)
     if size >= _FOLLOWED_TILE and not _is_steady(lattices):
-        moving, moved = _follow_screens(spectrum, grid, codes, aspect, jpeg=jpeg, halved=halved)
+        moving, moved = _follow_screens(spectrum, grid, codes, view)
         if moving:
             lattices, drifts = moving, moved
-    chroma = _read_inks(lattices, codes, size) if halved else ()
+    chroma = _read_inks(lattices, codes, size) if view.halves_chroma(codes) else ()
     peaks += _band_peaks(find_bands(mixed), peaks, blocks, size=size, grid=grid)
     return Survey(
         scan=scan, codes=codes, mixed=mixed, size=size, spectrum=spectrum, peaks=peaks,
@@ -124,19 +107,16 @@ def _follow_screens(
     spectrum: Spectrum,
     grid: tuple[int, int],
     codes: Codes,
-    aspect: tuple[float, float],
-    *,
-    jpeg: bool,
-    halved: bool,
+    view: View,
 ) -> tuple[tuple[Lattice, ...], tuple[float, ...]]:
     """Screens among lines followed from tile to tile, and how far each drifts."""
     size = spectrum.size
     lines = find_drifting_lines(spectrum, grid)
     peaks = tuple(_followed(line, size) for line in lines)
-    if not find_lattices(peaks, size=size, aspect=aspect, jpeg=jpeg, slack=_DRIFT_SLACK):
+    if not find_lattices(peaks, size=size, aspect=view.aspect, jpeg=view.jpeg, slack=_DRIFT_SLACK):
         return (), ()
-    peaks = _coloured(peaks, codes, size, halved=halved)
-    lattices = find_lattices(peaks, size=size, aspect=aspect, jpeg=jpeg, slack=_DRIFT_SLACK)
+    peaks = coloured(peaks, codes, view)
+    lattices = find_lattices(peaks, size=size, aspect=view.aspect, jpeg=view.jpeg, slack=_DRIFT_SLACK)
     if not lattices or not is_halftone(lattices[0], lattices, peaks, size):
         return (), ()
     # Tables, staves and threads lie along the axes and drift as well: there the map proves nothing.
@@ -216,24 +196,6 @@ def _in_place(blocks: BlockGrid | None) -> bool:
     return blocks is not None and blocks.period_px == 8
 
 
-def _coloured(peaks: tuple[Peak, ...], codes: Codes, size: int, *, halved: bool) -> tuple[Peak, ...]:
-    """Peaks with their colours, read elsewhere where a codec's halved chroma moved them."""
-    if not halved or not peaks:
-        return with_colours(codes, peaks, size=size)
-    places, weights = np.array([wrap(p.f) for p in peaks]), np.stack([p.weight for p in peaks])
-    readings = read_chroma(codes, places, weights, size=size)
-    return tuple(replace(p, colour=r.colour) for p, r in zip(peaks, readings, strict=True))
-
-
-def _called(
-    bins: tuple[tuple[int, int], ...], mixed: NDArray[np.float32], spectrum: Spectrum
-) -> tuple[Peak, ...]:
-    """Coherent lines at bins that others call for."""
-    called = tuple(c for c in measure_bins(spectrum, bins) if c.z > _CALLED_Z)
-    found = refine(mixed, called, size=spectrum.size)
-    return tuple(p for p in found if _credible(p) and p.coherence > 0.9)
-
-
 def _read_inks(
     lattices: tuple[Lattice, ...], codes: Codes, size: int
 ) -> tuple[tuple[ChromaReading, ChromaReading], ...]:
@@ -244,9 +206,3 @@ def _read_inks(
     weights = np.stack([p.weight for g in lattices for p in (g.first, g.second)])
     readings = read_chroma(codes, vectors, weights, size=size)
     return tuple(zip(readings[::2], readings[1::2], strict=True))
-
-
-def _credible(peak: Peak) -> bool:
-    # A line far above its background is there, even where its phase wanders with the paper.
-    in_step = max(peak.coherence, peak.local_coherence) > (0.75 if peak.z > 20 else 0.85)
-    return in_step and peak.tiles >= 6 and peak.off_bin < (1.1 if peak.coherence > 0.97 else 0.85)

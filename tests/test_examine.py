@@ -2,6 +2,7 @@
 
 import math
 
+import cv2
 import numpy as np
 import pytest
 import skimage.data
@@ -103,6 +104,23 @@ def test_a_screen_on_part_of_the_page_has_a_region() -> None:
     assert y >= 300 - 128
     assert x + w <= 200 + scan.width_px + 128
     assert y + h <= 300 + scan.height_px + 128
+
+
+def test_a_small_picture_on_a_text_page_shows_all_its_inks() -> None:
+    """A sixtieth of the page: too few tiles for the page's own spectrum, enough for the picture's."""
+    picture, _ = scanned(card_print(*FOUR_INKS, width_in=1.2), 300)
+    text = cv2.resize(skimage.data.page(), (1100, 560))
+    page = np.full((2480, 2480, 3), 236.0, np.float32)
+    for y in range(120, 1900, 640):
+        for x in (100, 1280):
+            page[y : y + 560, x : x + 1100] = text[..., None]
+    page[333 : 333 + picture.height_px, 1217 : 1217 + picture.width_px] = picture.pixels
+    noisy = page + np.random.default_rng(0).normal(0, 1.5, page.shape)
+    found = screens(examine(as_scan(np.clip(noisy, 0, 255).astype(np.uint8), 300)))
+    assert {(f.screen.ink, round(f.screen.ruling_lpi)) for f in found} == {
+        ("cyan", 133), ("magenta", 133), ("yellow", 141), ("black", 133),
+    }  # fmt: skip
+    assert all(f.coverage < 0.05 for f in found)
 
 
 @pytest.mark.parametrize("name", ["astronaut", "camera", "coffee", "brick", "grass", "moon", "coins", "page"])
