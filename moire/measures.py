@@ -13,6 +13,7 @@ from moire.spectrum import tile_means, tile_phasors
 from moire.vision import lightness
 
 _EDGES = 300
+_COARSEST_PX = 16.0
 
 
 def line_levels(
@@ -148,6 +149,7 @@ def _edge_profiles(
 ) -> tuple[NDArray[np.float32], NDArray[np.float32]] | None:
     import cv2
 
+    period = min(period, _COARSEST_PX)
     smooth = cv2.GaussianBlur(after, (0, 0), max(1.0, period / 2))
     gx, gy = (
         cv2.Sobel(smooth, cv2.CV_32F, 1, 0, scale=0.125),
@@ -176,9 +178,13 @@ def _edge_profiles(
     taper /= taper.sum()
 
     def profile(plane: NDArray[np.float32]) -> NDArray[np.float32]:
-        flat_x = at_x.reshape(len(xs), -1).astype(np.float32)
-        flat_y = at_y.reshape(len(xs), -1).astype(np.float32)
-        patch = cv2.remap(plane, flat_x, flat_y, cv2.INTER_LINEAR).reshape(at_x.shape)
+        # One edge at a time: the remap of all at once would be too large a picture for it.
+        patch = np.stack(
+            [
+                cv2.remap(plane, x, y, cv2.INTER_LINEAR)
+                for x, y in zip(at_x.astype(np.float32), at_y.astype(np.float32), strict=True)
+            ]
+        )
         return np.asarray((patch * taper[None, :, None]).sum(axis=1))
 
     return profile(before), profile(after)

@@ -25,9 +25,10 @@ from moire.verdict import judge
 from moire.vision import lightness, visibility
 
 Pixels = NDArray[Any]
-_TILE_PX = 768
+_TILE_PX = 1024
 _BEAT_REACH_PX = 25.0
 _NOTCH_MARGIN_PX = 120
+_BEAT_MARGIN_PX = 80
 _PLACES = 4
 _SAME_CPP = 0.002
 _PLACE_PX = 96
@@ -145,7 +146,7 @@ def _remove(master: Pixels, recipe: Recipe, progress: Callable[[float], None]) -
             inside = _where_changed(clear, level) if lattices else np.float32(1)
             return clear + inside * (remove_lines(clear, beats, reach_px=_BEAT_REACH_PX) - clear)
 
-        margin = max(margin_px(lattices), _NOTCH_MARGIN_PX if lines or beats else 0)
+        margin = max(margin_px(lattices), _NOTCH_MARGIN_PX if lines else 0, _BEAT_MARGIN_PX if beats else 0)
         mended[..., group] = map_tiles(part, work, size=_TILE_PX, margin=margin, progress=progress)
     mended = np.clip(mended, 0, 1)
     return master + np.float32(recipe.strength) * (mended - master)

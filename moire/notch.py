@@ -9,11 +9,15 @@ nothing rings at edges.
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
+from moire.waves import Waves, smooth
+
 _NOISE_CODE = 1.5
+_LONGEST_STEP = 8
 
 
 def remove_lines(
@@ -39,31 +43,65 @@ def remove_lines(
     """
     if not frequencies:
         return image
-    lines = [np.asarray(f, float) for f in frequencies]
+    lines = np.asarray(frequencies, float)
+    shape = (image.shape[0], image.shape[1])
     out = np.empty_like(image)
     for c in range(image.shape[2]):
-        out[..., c] = image[..., c] - _fit(image[..., c], lines, reach_px)
+        plane = np.ascontiguousarray(image[..., c])
+        out[..., c] = plane - _Fit.of(shape, lines, reach_px).lines_in(plane)
     return out
 
 
-def _fit(plane: NDArray[np.float32], lines: list[NDArray[np.float64]], reach: float) -> NDArray[np.float32]:
-    """Sum of the fitted lines: first plainly, then twice with weights from what that leaves."""
-    import cv2
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class _Fit:
+    """Demodulation of the same lines over and over."""
 
-    waves = [_wave(plane.shape, f) for f in lines]
-    slow = max(1 / max(min(float(np.hypot(*f)) for f in lines), 1e-3), 4.0)
-    even = np.ones_like(plane)
-    amplitudes = _demodulate(plane - cv2.GaussianBlur(plane, (0, 0), slow), even, waves, reach)
-    for _ in range(2):
-        base = np.asarray(cv2.bilateralFilter(plane - _sum(amplitudes, waves), 0, 12 / 255, 2), np.float32)
-        weight = _evenness(plane - _sum(amplitudes, waves), base)
-        amplitudes = _demodulate(plane - base, weight, waves, reach)
-    rest = plane - base - _sum(amplitudes, waves)
-    above = [
-        _above_background(rest, weight, f, amplitude, reach)
-        for f, amplitude in zip(lines, amplitudes, strict=True)
-    ]
-    return _sum(above, waves)
+    waves: Waves
+    sides: Waves
+    reach: float
+
+    @staticmethod
+    def of(shape: tuple[int, int], lines: NDArray[np.float64], reach: float) -> _Fit:
+        step = int(np.clip(reach // 4, 1, _LONGEST_STEP))
+        gap = 3 / (2 * np.pi * reach)
+        aside = np.array([0, gap])
+        sides = np.concatenate([lines + aside, lines - aside])
+        return _Fit(
+            waves=Waves(frequencies=lines, shape=shape, step=step),
+            sides=Waves(frequencies=sides, shape=shape, step=step),
+            reach=reach,
+        )
+
+    def lines_in(self, plane: NDArray[np.float32]) -> NDArray[np.float32]:
+        """Sum of the fitted lines: first plainly, then twice with weights from what that leaves."""
+        import cv2
+
+        lowest = float(np.hypot(*self.waves.frequencies.T).min())
+        slow = _low_pass(plane, max(1 / max(lowest, 1e-3), 4.0))
+        model = self.waves.synthesise(self.demodulate(plane - slow, np.ones_like(plane)))
+        for _ in range(2):
+            clean = plane - model
+            base = np.asarray(cv2.bilateralFilter(clean, 0, 12 / 255, 2), np.float32)
+            weight = _evenness(clean, base)
+            amplitudes = self.demodulate(plane - base, weight)
+            model = self.waves.synthesise(amplitudes)
+            # Neighbouring lines leak into one another: what the first fit leaves is fitted again.
+            amplitudes = amplitudes + self.demodulate(plane - base - model, weight)
+            model = self.waves.synthesise(amplitudes)
+        rest = self.demodulate(plane - base - model, weight, aside=True)
+        return self.waves.synthesise(_above_background(amplitudes, rest))
+
+    def demodulate(
+        self, residual: NDArray[np.float32], weight: NDArray[np.float32], *, aside: bool = False
+    ) -> NDArray[np.complex64]:
+        """Slowly varying complex amplitudes of the lines, or of their neighbours in frequency."""
+        import cv2
+
+        waves = self.sides if aside else self.waves
+        sigma = self.reach / waves.step
+        level = cv2.GaussianBlur(waves.means(weight), (0, 0), sigma, borderType=cv2.BORDER_REFLECT)
+        level = np.maximum(level, 1e-6)
+        return np.asarray(smooth(waves.analyse(weight * residual), sigma) / level[..., None], np.complex64)
 
 
 def _evenness(clean: NDArray[np.float32], base: NDArray[np.float32]) -> NDArray[np.float32]:
@@ -71,69 +109,29 @@ def _evenness(clean: NDArray[np.float32], base: NDArray[np.float32]) -> NDArray[
     import cv2
 
     gx, gy = cv2.Sobel(base, cv2.CV_32F, 1, 0, scale=0.125), cv2.Sobel(base, cv2.CV_32F, 0, 1, scale=0.125)
-    busy = cv2.GaussianBlur(gx**2 + gy**2, (0, 0), 2)
-    weight = 1 / ((_NOISE_CODE / 255) ** 2 + 4 * busy + cv2.GaussianBlur((clean - base) ** 2, (0, 0), 3))
+    busy = cv2.GaussianBlur(gx * gx + gy * gy, (0, 0), 2)
+    off = clean - base
+    weight = 1 / (np.float32((_NOISE_CODE / 255) ** 2) + 4 * busy + cv2.GaussianBlur(off * off, (0, 0), 3))
     return np.asarray(weight / weight.max(), np.float32)
 
 
-def _demodulate(
-    residual: NDArray[np.float32],
-    weight: NDArray[np.float32],
-    waves: list[NDArray[np.complex64]],
-    reach: float,
-) -> list[NDArray[np.complex64]]:
-    """Slowly varying complex amplitudes, each fitted to what the other lines leave."""
-    level = np.maximum(_smooth(weight, reach), 1e-6)
-    amplitudes: list[NDArray[np.complex64]] = [np.zeros_like(wave) for wave in waves]
-    left = residual.copy()
-    for i, wave in enumerate(waves):
-        product = weight * left * np.conj(wave)
-        fitted = (_smooth(product.real, reach) + 1j * _smooth(product.imag, reach)) / level
-        amplitudes[i] = fitted.astype(np.complex64)
-        left -= 2 * np.real(amplitudes[i] * wave)
-    return amplitudes
-
-
-def _sum(amplitudes: list[NDArray[np.complex64]], waves: list[NDArray[np.complex64]]) -> NDArray[np.float32]:
-    total = np.zeros(waves[0].shape, np.float32)
-    for amplitude, wave in zip(amplitudes, waves, strict=True):
-        total += 2 * np.real(amplitude * wave)
-    return total
-
-
-def _wave(shape: tuple[int, ...], f: NDArray[np.float64]) -> NDArray[np.complex64]:
-    along_x = np.exp(2j * np.pi * f[0] * np.arange(shape[1]))
-    along_y = np.exp(2j * np.pi * f[1] * np.arange(shape[0]))
-    return np.asarray(along_y[:, None] * along_x[None, :], np.complex64)
-
-
 def _above_background(
-    residual: NDArray[np.float32],
-    weight: NDArray[np.float32],
-    f: NDArray[np.float64],
-    amplitude: NDArray[np.complex64],
-    reach: float,
+    amplitudes: NDArray[np.complex64], sides: NDArray[np.complex64]
 ) -> NDArray[np.complex64]:
-    """The part of a line's amplitude above what its neighbours in frequency hold."""
-    level = np.maximum(_smooth(weight, reach), 1e-6)
-    gap = 1.5 / (2 * np.pi * reach)
-    power = np.zeros(residual.shape, np.float32)
-    for turn in (0.25, 0.75):
-        aside = f + gap * 2 * np.array([np.cos(2 * np.pi * turn), np.sin(2 * np.pi * turn)])
-        product = weight * residual * np.conj(_wave(residual.shape, aside))
-        local = (_smooth(product.real, reach) ** 2 + _smooth(product.imag, reach) ** 2) / level**2
-        power += local / 2
-    size2 = np.maximum(np.abs(amplitude) ** 2, 1e-12)
-    return np.asarray(amplitude * np.sqrt(np.clip(1 - power / size2, 0, 1)), np.complex64)
+    """The part of each line's amplitude above what its neighbours in frequency hold."""
+    lines = amplitudes.shape[2]
+    power = (np.abs(sides[..., :lines]) ** 2 + np.abs(sides[..., lines:]) ** 2) / 2
+    size2 = np.maximum(np.abs(amplitudes) ** 2, 1e-12)
+    return np.asarray(amplitudes * np.sqrt(np.clip(1 - power / size2, 0, 1)), np.complex64)
 
 
-def _smooth(plane: NDArray[np.floating], sigma: float) -> NDArray[np.float32]:
+def _low_pass(plane: NDArray[np.float32], sigma: float) -> NDArray[np.float32]:
     """Gaussian of `sigma` pixels, computed on a grid coarse enough to be cheap."""
     import cv2
 
     step = max(1, int(sigma // 4))
     rows, columns = plane.shape
     small_size = (max(1, -(-columns // step)), max(1, -(-rows // step)))
-    small = cv2.resize(np.asarray(plane, np.float32), small_size, interpolation=cv2.INTER_AREA)
+    small = cv2.resize(plane, small_size, interpolation=cv2.INTER_AREA)
     small = cv2.GaussianBlur(small, (0, 0), sigma / step, borderType=cv2.BORDER_REFLECT)
     return np.asarray(cv2.resize(small, (columns, rows), interpolation=cv2.INTER_CUBIC), np.float32)
