@@ -75,17 +75,20 @@ def presence(
     surroundings with them (hysteresis), so that dips of the dots' own beat do not open holes.
     """
     import cv2
-    from skimage.filters import apply_hysteresis_threshold
 
     sigma = 2.5 * lattice.period_px
     sought = [lattice.k1, lattice.k2, *_decoys(lattice, others)]
     found = local_amplitudes(plane, sought, sigma_px=sigma)
     floor = np.sqrt(np.mean(found[..., 2:] ** 2, axis=2) + np.float32(_NOISE**2))
     ratio = np.sqrt(found[..., 0] * found[..., 1]) / floor
-    gate = apply_hysteresis_threshold(ratio, _SUSPECT, _SURE).astype(np.uint8)
+    _, labels = cv2.connectedComponents((ratio > _SUSPECT).astype(np.uint8), connectivity=4)
+    sure = np.zeros(int(labels.max()) + 1, np.uint8)
+    sure[labels[ratio > _SURE]] = 1
     reach = max(1, round(2 * lattice.period_px / grid_step(sigma)))
-    gate = cv2.dilate(gate, cv2.getStructuringElement(cv2.MORPH_ELLIPSE, (2 * reach + 1, 2 * reach + 1)))
-    return _full_size(gate.astype(np.float32), plane.shape, grid_step(sigma))
+    gate = cv2.dilate(
+        sure[labels], cv2.getStructuringElement(cv2.MORPH_ELLIPSE, (2 * reach + 1, 2 * reach + 1))
+    )
+    return _full_size(np.asarray(gate, np.float32), plane.shape, grid_step(sigma))
 
 
 def _decoys(lattice: ScreenLattice, others: Sequence[ScreenLattice]) -> list[NDArray[np.float64]]:

@@ -115,7 +115,7 @@ def apply(tile: NDArray[np.float32], ready: Preparation, *, quick: bool = False)
     inside = (slice(margin, -margin), slice(margin, -margin))
     gate = gate[inside]
     mixed = nulls[1][inside] if quick else _mixed(tangent.encoded, nulls, ready, inside, gate > 0)
-    picture = _Tangent(base=tangent.base[inside], encoded=tangent.encoded[inside]).decode(mixed)
+    picture = tangent.decode(mixed, inside)
     gate = gate[..., None]
     return np.where(gate > 0, tile + gate * (picture - tile), tile).astype(np.float32)
 
@@ -146,22 +146,25 @@ class _Tangent:
     """A linear picture on the tangent of the sRGB curve at its local mean."""
 
     base: NDArray[np.float32]
+    tone: NDArray[np.float32]
+    slope: NDArray[np.float32]
     encoded: NDArray[np.float32]
 
     @staticmethod
     def of(linear: NDArray[np.float32], period: float) -> _Tangent:
         import cv2
 
-        tone = cv2.GaussianBlur(linear, (0, 0), period / 2, borderType=cv2.BORDER_REFLECT)
-        base = np.asarray(np.maximum(tone.reshape(linear.shape), 0.003), np.float32)
-        encoded = srgb_encode(base) + _slope(base) * (linear - base)
-        return _Tangent(base=base, encoded=encoded.astype(np.float32))
+        low = cv2.GaussianBlur(linear, (0, 0), period / 2, borderType=cv2.BORDER_REFLECT)
+        base = np.asarray(np.maximum(low.reshape(linear.shape), 0.003), np.float32)
+        tone, slope = srgb_encode(base).astype(np.float32), _slope(base)
+        return _Tangent(base=base, tone=tone, slope=slope, encoded=tone + slope * (linear - base))
 
     def residual(self) -> NDArray[np.float32]:
-        return np.asarray(self.encoded - srgb_encode(self.base), np.float32)
+        return np.asarray(self.encoded - self.tone, np.float32)
 
-    def decode(self, encoded: NDArray[np.float32]) -> NDArray[np.float32]:
-        linear = self.base + (encoded - srgb_encode(self.base)) / _slope(self.base)
+    def decode(self, encoded: NDArray[np.float32], inside: tuple[slice, slice]) -> NDArray[np.float32]:
+        """sRGB picture of the part `inside` from its encoding."""
+        linear = self.base[inside] + (encoded - self.tone[inside]) / self.slope[inside]
         return np.asarray(srgb_encode(linear), np.float32)
 
 

@@ -13,6 +13,7 @@ from moire.spectrum import tile_means, tile_phasors
 from moire.vision import lightness
 
 _EDGES = 300
+_CURVE_STEPS = 255 * 16
 _COARSEST_PX = 16.0
 
 
@@ -99,7 +100,7 @@ def edge_energy(before: NDArray[np.float32], after: NDArray[np.float32]) -> floa
 
     Parameters
     ----------
-    before, after : ndarray, shape (rows, columns)
+    before, after : ndarray, shape (windows, rows, columns)
         Lightness L* without the pattern's own bands, so that only picture is compared.
 
     Returns
@@ -107,14 +108,16 @@ def edge_energy(before: NDArray[np.float32], after: NDArray[np.float32]) -> floa
     float or None
         None where the picture has no strong edge.
     """
-    import cv2
-
-    one, two = (
-        cv2.Sobel(p, cv2.CV_32F, 1, 0, scale=0.125) ** 2 + cv2.Sobel(p, cv2.CV_32F, 0, 1, scale=0.125) ** 2
-        for p in (before, after)
-    )
+    one, two = (np.stack([_gradient_energy(p) for p in windows]) for windows in (before, after))
     strong = one >= max(float(np.quantile(one, 0.98)), 1.0)
     return float(two[strong].sum() / one[strong].sum()) if strong.sum() >= 50 else None
+
+
+def _gradient_energy(plane: NDArray[np.float32]) -> NDArray[np.float32]:
+    import cv2
+
+    gx, gy = cv2.Sobel(plane, cv2.CV_32F, 1, 0, scale=0.125), cv2.Sobel(plane, cv2.CV_32F, 0, 1, scale=0.125)
+    return np.asarray(gx * gx + gy * gy)
 
 
 def edge_widths(
@@ -218,9 +221,11 @@ def colour_shift(
         [[0.4124, 0.3576, 0.1805], [0.2126, 0.7152, 0.0722], [0.0193, 0.1192, 0.9505]], np.float32
     )
 
+    curve = srgb_decode(np.arange(_CURVE_STEPS + 1) / _CURVE_STEPS).astype(np.float32)
+
     def lab(picture: NDArray[np.float32]) -> NDArray[np.float64]:
         rgb = picture if picture.shape[2] == 3 else np.repeat(picture, 3, axis=2)
-        linear = cv2.GaussianBlur(srgb_decode(rgb).astype(np.float32), (0, 0), sigma_px)
+        linear = cv2.GaussianBlur(curve[np.rint(rgb * _CURVE_STEPS).astype(np.uint16)], (0, 0), sigma_px)
         step = max(1, min(int(sigma_px), min(picture.shape[:2])))
         return np.asarray(xyz2lab(linear[step // 2 :: step, step // 2 :: step] @ to_xyz.T))
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import hashlib
 from collections.abc import Callable, Collection
 from dataclasses import replace
+from itertools import product
 from typing import Any
 
 import numpy as np
@@ -32,6 +33,8 @@ _BEAT_MARGIN_PX = 80
 _PLACES = 4
 _SAME_CPP = 0.002
 _PLACE_PX = 96
+_WINDOW_PX = 384
+_WINDOWS = 3
 
 
 def mend(
@@ -252,14 +255,25 @@ def _measure(
 
 
 def _without_screens(plane: Pixels, recipe: Recipe) -> Pixels:
-    """A plane through the null of every screen removed: what is left of both states is picture."""
+    """Windows of a plane through the null of every screen removed: what both states keep is picture."""
     from scipy import fft
 
+    windows = _windows(plane)
     lattices = _lattices(recipe)
     if not lattices:
-        return plane
-    spectrum = fft.rfft2(plane) * null_transfer(plane.shape, lattices, [1.0] * len(lattices))
-    return np.asarray(fft.irfft2(spectrum, s=plane.shape), np.float32)
+        return windows
+    shape = (windows.shape[1], windows.shape[2])
+    null = null_transfer(shape, lattices, [1.0] * len(lattices))
+    return np.asarray(fft.irfft2(fft.rfft2(windows) * null, s=shape), np.float32)
+
+
+def _windows(plane: Pixels) -> Pixels:
+    """A plane as a stack: itself if small, else evenly spread windows of it."""
+    rows, columns = plane.shape
+    if rows * columns <= _WINDOWS**2 * _WINDOW_PX**2 or min(rows, columns) < _WINDOW_PX:
+        return plane[None]
+    starts = (np.rint(np.linspace(0, n - _WINDOW_PX, _WINDOWS)).astype(int) for n in (rows, columns))
+    return np.stack([plane[y : y + _WINDOW_PX, x : x + _WINDOW_PX] for y, x in product(*starts)])
 
 
 def _lattices(recipe: Recipe) -> tuple[ScreenLattice, ...]:

@@ -51,17 +51,17 @@ class Mixer:
 
         Where not `wanted` the first feature may stand instead.
         """
-        shape = features[0].shape
-        flat_features = [f.ravel() for f in features]
-        flat_inputs = [i.ravel() for i in inputs]
-        flat_wanted = np.ones(flat_features[0].size, bool) if wanted is None else wanted.ravel()
-        out = flat_features[0].copy()
-        for start in range(0, out.size, _BLOCK):
-            part = slice(start, start + _BLOCK)
-            if flat_wanted[part].any():
-                weights = self.weights(np.stack([i[part] for i in flat_inputs]))
-                out[part] = np.einsum("kn,kn->n", weights, np.stack([f[part] for f in flat_features]))
-        return out.reshape(shape)
+        rows, columns = features[0].shape
+        out = np.array(features[0])
+        band = max(1, _BLOCK // columns)
+        for start in range(0, rows, band):
+            part = slice(start, start + band)
+            if wanted is None or wanted[part].any():
+                steering = np.stack([i[part] for i in inputs]).reshape(len(inputs), -1)
+                pictures = np.stack([f[part] for f in features]).reshape(len(features), -1)
+                mixed = np.einsum("kn,kn->n", self.weights(steering), pictures)
+                out[part] = mixed.reshape(-1, columns)
+        return out
 
 
 @lru_cache(maxsize=1)

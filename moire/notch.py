@@ -85,9 +85,9 @@ class _Fit:
             weight = _evenness(clean, base)
             amplitudes = self.demodulate(plane - base, weight)
             model = self.waves.synthesise(amplitudes)
-            # Neighbouring lines leak into one another: what the first fit leaves is fitted again.
-            amplitudes = amplitudes + self.demodulate(plane - base - model, weight)
-            model = self.waves.synthesise(amplitudes)
+        # Neighbouring lines leak into one another: what the fit leaves is fitted once more.
+        amplitudes = amplitudes + self.demodulate(plane - base - model, weight)
+        model = self.waves.synthesise(amplitudes)
         rest = self.demodulate(plane - base - model, weight, aside=True)
         return self.waves.synthesise(_above_background(amplitudes, rest))
 
