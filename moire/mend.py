@@ -28,10 +28,12 @@ from moire.vision import lightness, visibility
 Pixels = NDArray[Any]
 _TILE_PX = 1024
 _BEAT_REACH_PX = 25.0
-_NOTCH_MARGIN_PX = 120
+_NOTCH_MARGIN_PX = 160
 _BEAT_MARGIN_PX = 80
 _PLACES = 4
 _SAME_CPP = 0.002
+# Threads shade what is under them; banding and beats add to it.
+_SHADING: tuple[Kind, ...] = ("weave",)
 _PLACE_PX = 96
 _WINDOW_PX = 384
 _WINDOWS = 3
@@ -131,7 +133,8 @@ def _encoded(scan: Scan) -> Pixels:
 def _remove(master: Pixels, recipe: Recipe, progress: Callable[[float], None]) -> Pixels:
     lattices = _lattices(recipe)
     notches = [r for r in recipe.removals if r.method == "notch"]
-    lines = [v for r in notches if r.kind != "rosette" for v in r.vectors_cpp]
+    lines = [v for r in notches if r.kind not in ("rosette", *_SHADING) for v in r.vectors_cpp]
+    shading = [v for r in notches if r.kind in _SHADING for v in r.vectors_cpp]
     beats = [v for r in notches if r.kind == "rosette" for v in r.vectors_cpp]
     mended = np.empty_like(master)
     # Plates of a CMYK file are one ink each; three channels are one colour picture.
@@ -141,15 +144,18 @@ def _remove(master: Pixels, recipe: Recipe, progress: Callable[[float], None]) -
         ready = prepare(part, lattices)
 
         def work(tile: Pixels, ready: Preparation = ready) -> Pixels:
-            level = remove_lines(tile, lines)
+            level = remove_lines(remove_lines(tile, lines), shading, of_tone=True)
             clear = apply(level, ready, quick=recipe.quick)
             if not beats:
                 return clear
             # Without screens to mend, the beats themselves are all there is; else they end with them.
             inside = _where_changed(clear, level) if lattices else np.float32(1)
-            return clear + inside * (remove_lines(clear, beats, reach_px=_BEAT_REACH_PX) - clear)
+            still = remove_lines(clear, beats, reach_px=_BEAT_REACH_PX)
+            return clear + inside * (still - clear)
 
-        margin = max(margin_px(lattices), _NOTCH_MARGIN_PX if lines else 0, _BEAT_MARGIN_PX if beats else 0)
+        margin = max(
+            margin_px(lattices), _NOTCH_MARGIN_PX if lines or shading else 0, _BEAT_MARGIN_PX if beats else 0
+        )
         mended[..., group] = map_tiles(part, work, size=_TILE_PX, margin=margin, progress=progress)
     mended = np.clip(mended, 0, 1)
     return master + np.float32(recipe.strength) * (mended - master)

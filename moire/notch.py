@@ -18,13 +18,16 @@ from moire.waves import Waves, smooth
 
 _NOISE_CODE = 1.5
 _LONGEST_STEP = 8
+_DARKEST = 8 / 255
+_CLIPPED = 0.001
 
 
 def remove_lines(
     image: NDArray[np.float32],
     frequencies: Sequence[tuple[float, float]],
     *,
-    reach_px: float = 40.0,
+    reach_px: float = 60.0,
+    of_tone: bool = False,
 ) -> NDArray[np.float32]:
     """Image without the given lines.
 
@@ -36,6 +39,8 @@ def remove_lines(
         Cycles per pixel; one of each pair of opposite lines.
     reach_px : float
         Gaussian sigma over which a line's amplitude and phase may change.
+    of_tone : bool
+        The lines' swing is a share of the local tone, as a cloth's shading is; else it is even.
 
     Returns
     -------
@@ -44,11 +49,10 @@ def remove_lines(
     if not frequencies:
         return image
     lines = np.asarray(frequencies, float)
-    shape = (image.shape[0], image.shape[1])
     out = np.empty_like(image)
     for c in range(image.shape[2]):
         plane = np.ascontiguousarray(image[..., c])
-        out[..., c] = plane - _Fit.of(shape, lines, reach_px).lines_in(plane)
+        out[..., c] = plane - _Fit.of(plane.shape, lines, reach_px).lines_in(plane, of_tone=of_tone)
     return out
 
 
@@ -61,47 +65,79 @@ class _Fit:
     reach: float
 
     @staticmethod
-    def of(shape: tuple[int, int], lines: NDArray[np.float64], reach: float) -> _Fit:
+    def of(shape: tuple[int, ...], lines: NDArray[np.float64], reach: float) -> _Fit:
         step = int(np.clip(reach // 4, 1, _LONGEST_STEP))
         gap = 3 / (2 * np.pi * reach)
         aside = np.array([0, gap])
         sides = np.concatenate([lines + aside, lines - aside])
         return _Fit(
-            waves=Waves(frequencies=lines, shape=shape, step=step),
-            sides=Waves(frequencies=sides, shape=shape, step=step),
+            waves=Waves(frequencies=lines, shape=(shape[0], shape[1]), step=step),
+            sides=Waves(frequencies=sides, shape=(shape[0], shape[1]), step=step),
             reach=reach,
         )
 
-    def lines_in(self, plane: NDArray[np.float32]) -> NDArray[np.float32]:
-        """Sum of the fitted lines: first plainly, then twice with weights from what that leaves."""
+    def lines_in(self, plane: NDArray[np.float32], *, of_tone: bool) -> NDArray[np.float32]:
+        """Sum of the fitted lines: first plainly, then with weights from what that leaves."""
         import cv2
 
         lowest = float(np.hypot(*self.waves.frequencies.T).min())
         slow = _low_pass(plane, max(1 / max(lowest, 1e-3), 4.0))
-        model = self.waves.synthesise(self.demodulate(plane - slow, np.ones_like(plane)))
-        for _ in range(2):
+        # What is burnt out or blocked up has no swing to take away, and the halves of a wave
+        # beside it do not tell its swing: a whole period around is left out of the fit.
+        whole = ((plane > _CLIPPED) & (plane < 1 - _CLIPPED)).astype(np.float32)
+        period = 2 * int(np.clip(1 / max(lowest, 1e-3), 1, 16)) + 1
+        sound = np.asarray(cv2.erode(whole, np.ones((period, period), np.uint8)), np.float32)
+
+        def tone_of(base: NDArray[np.float32]) -> NDArray[np.float32]:
+            if not of_tone:
+                return np.ones_like(plane)
+            soft = np.asarray(cv2.GaussianBlur(base, (0, 0), 2), np.float32)
+            return 2 * np.maximum(soft, np.float32(_DARKEST))
+
+        model = self._model(plane - slow, sound, tone_of(slow), last=False)
+        for last in (False, True):
             clean = plane - model
             base = np.asarray(cv2.bilateralFilter(clean, 0, 12 / 255, 2), np.float32)
-            weight = _evenness(clean, base)
-            amplitudes = self.demodulate(plane - base, weight)
-            model = self.waves.synthesise(amplitudes)
+            weight = _evenness(clean, base) * sound
+            model = self._model(plane - base, weight, tone_of(base), last=last)
+        return np.asarray(model * whole)
+
+    def _model(
+        self,
+        residual: NDArray[np.float32],
+        weight: NDArray[np.float32],
+        tone: NDArray[np.float32],
+        *,
+        last: bool,
+    ) -> NDArray[np.float32]:
+        """The lines with a swing in step with a tone, brought down to their background at the end."""
+        amplitudes = self.demodulate(residual, weight, tone)
+        model = tone * self.waves.synthesise(amplitudes)
+        if not last:
+            return model
         # Neighbouring lines leak into one another: what the fit leaves is fitted once more.
-        amplitudes = amplitudes + self.demodulate(plane - base - model, weight)
-        model = self.waves.synthesise(amplitudes)
-        rest = self.demodulate(plane - base - model, weight, aside=True)
-        return self.waves.synthesise(_above_background(amplitudes, rest))
+        amplitudes = amplitudes + self.demodulate(residual - model, weight, tone)
+        model = tone * self.waves.synthesise(amplitudes)
+        rest = self.demodulate(residual - model, weight, tone, aside=True)
+        return np.asarray(tone * self.waves.synthesise(_above_background(amplitudes, rest)))
 
     def demodulate(
-        self, residual: NDArray[np.float32], weight: NDArray[np.float32], *, aside: bool = False
+        self,
+        residual: NDArray[np.float32],
+        weight: NDArray[np.float32],
+        tone: NDArray[np.float32],
+        *,
+        aside: bool = False,
     ) -> NDArray[np.complex64]:
         """Slowly varying complex amplitudes of the lines, or of their neighbours in frequency."""
         import cv2
 
         waves = self.sides if aside else self.waves
         sigma = self.reach / waves.step
-        level = cv2.GaussianBlur(waves.means(weight), (0, 0), sigma, borderType=cv2.BORDER_REFLECT)
-        level = np.maximum(level, 1e-6)
-        return np.asarray(smooth(waves.analyse(weight * residual), sigma) / level[..., None], np.complex64)
+        mass = waves.means(weight * tone * tone)
+        level = np.maximum(cv2.GaussianBlur(mass, (0, 0), sigma, borderType=cv2.BORDER_REFLECT), 1e-6)
+        found = smooth(waves.analyse(weight * tone * residual), sigma)
+        return np.asarray(found / level[..., None], np.complex64)
 
 
 def _evenness(clean: NDArray[np.float32], base: NDArray[np.float32]) -> NDArray[np.float32]:
