@@ -118,3 +118,14 @@ def test_tiles_agree_with_the_whole() -> None:
 def test_a_screen_too_fine_to_part_from_the_picture_is_left_alone() -> None:
     image = np.random.default_rng(0).random((200, 200, 3)).astype(np.float32)
     assert descreen(image, [lattice(0.65, 45)]) is image
+
+
+def test_a_lattice_a_little_wrong_costs_little() -> None:
+    """An error of 0.0001 cycles per pixel is many times what an examination leaves."""
+    scan, truth = scanned(
+        card_print(ScreenOrder(ruling_lpi=100, angle_deg=25, ink="black"), width_in=1.2), 300
+    )
+    image = (scan.pixels / 255).astype(np.float32)
+    right, wrong = (descreen(image, [lattice(100 / 300 + error, 25)]) for error in (0, 1e-4))
+    loss = np.log10(np.mean((wrong - truth) ** 2) / np.mean((right - truth) ** 2))
+    assert 10 * loss < 0.3
