@@ -8,69 +8,61 @@ import numpy as np
 from numpy.typing import NDArray
 
 from moire.nulls import ScreenLattice
+from moire.waves import Waves, smooth
 
 _DECOYS = 4
 _NOISE = 0.002
 _SUSPECT, _SURE = 1.8, 6.0
 
 
-def local_amplitude(
-    plane: NDArray[np.float32], f: NDArray[np.float64], *, sigma_px: float
+def local_amplitudes(
+    plane: NDArray[np.float32], frequencies: Sequence[NDArray[np.float64]], *, sigma_px: float
 ) -> NDArray[np.float32]:
-    """Amplitude of one line in a Gaussian neighbourhood, on a grid about a sigma apart.
+    """Amplitude of each line in a Gaussian neighbourhood, on a grid less than a sigma apart.
 
     Parameters
     ----------
     plane : ndarray, shape (rows, columns)
-        Zero-mean around the line, for example a picture less its low-pass.
-    f : ndarray, shape (2,)
+        Zero-mean around the lines, for example a picture less its low-pass.
+    frequencies : sequence of ndarray, shape (2,)
         ``(fx, fy)`` cycles per pixel.
     sigma_px : float
 
     Returns
     -------
-    ndarray, shape (rows, columns) / step
-        With step as in `grid_step`.
+    ndarray, shape (rows / step, columns / step, lines)
+        With step as in `grid_step`, rounded up.
     """
-    import cv2
-
-    rows, columns = plane.shape
-    x = np.exp(-2j * np.pi * f[0] * np.arange(columns)).astype(np.complex64)
-    y = np.exp(-2j * np.pi * f[1] * np.arange(rows)).astype(np.complex64)
-    product = plane * y[:, None] * x[None, :]
     step = grid_step(sigma_px)
-    size = (max(1, columns // step), max(1, rows // step))
-    parts = [
-        cv2.GaussianBlur(
-            cv2.resize(np.ascontiguousarray(part), size, interpolation=cv2.INTER_AREA),
-            (0, 0),
-            sigma_px / step,
-        )
-        for part in (product.real, product.imag)
-    ]
-    return np.asarray(2 * np.hypot(parts[0], parts[1]), np.float32)
+    waves = Waves(
+        frequencies=np.asarray(frequencies, float), shape=(plane.shape[0], plane.shape[1]), step=step
+    )
+    return np.asarray(2 * np.abs(smooth(waves.analyse(plane), sigma_px / step)), np.float32)
 
 
 def grid_step(sigma_px: float) -> int:
     """Pixels between the samples of a local amplitude."""
-    return max(1, int(sigma_px / 2))
+    return max(1, int(sigma_px / 1.5))
 
 
 def coherent_amplitude(
     plane: NDArray[np.float32], lattices: Sequence[ScreenLattice], *, sigma_px: float
 ) -> NDArray[np.float32]:
     """Root sum of squares of the local amplitudes of all fundamentals, at full size."""
+    if not lattices:
+        return np.zeros_like(plane)
+    lines = local_amplitudes(plane, [k for g in lattices for k in (g.k1, g.k2)], sigma_px=sigma_px)
+    total = np.sqrt(np.einsum("yxl,yxl->yx", lines, lines))
+    return _full_size(total, plane.shape, grid_step(sigma_px))
+
+
+def _full_size(coarse: NDArray[np.float32], shape: tuple[int, ...], step: int) -> NDArray[np.float32]:
+    """A grid of block values brought to the pixels, blocks that overhang cut."""
     import cv2
 
-    total = None
-    for lattice in lattices:
-        for k in (lattice.k1, lattice.k2):
-            a = local_amplitude(plane, k, sigma_px=sigma_px) ** 2
-            total = a if total is None else total + a
-    if total is None:
-        return np.zeros_like(plane)
-    rows, columns = plane.shape
-    return np.asarray(cv2.resize(np.sqrt(total), (columns, rows), interpolation=cv2.INTER_LINEAR))
+    rows, columns = coarse.shape
+    whole = cv2.resize(coarse, (columns * step, rows * step), interpolation=cv2.INTER_LINEAR)
+    return np.ascontiguousarray(whole[: shape[0], : shape[1]], np.float32)
 
 
 def presence(
@@ -83,18 +75,20 @@ def presence(
     surroundings with them (hysteresis), so that dips of the dots' own beat do not open holes.
     """
     import cv2
-    from skimage.filters import apply_hysteresis_threshold
 
     sigma = 2.5 * lattice.period_px
-    lines = [local_amplitude(plane, k, sigma_px=sigma) for k in (lattice.k1, lattice.k2)]
-    decoys = [local_amplitude(plane, f, sigma_px=sigma) for f in _decoys(lattice, others)]
-    floor = np.sqrt(np.mean(np.square(decoys), axis=0) + np.float32(_NOISE**2))
-    ratio = np.sqrt(lines[0] * lines[1]) / floor
-    gate = apply_hysteresis_threshold(ratio, _SUSPECT, _SURE).astype(np.uint8)
+    sought = [lattice.k1, lattice.k2, *_decoys(lattice, others)]
+    found = local_amplitudes(plane, sought, sigma_px=sigma)
+    floor = np.sqrt(np.mean(found[..., 2:] ** 2, axis=2) + np.float32(_NOISE**2))
+    ratio = np.sqrt(found[..., 0] * found[..., 1]) / floor
+    _, labels = cv2.connectedComponents((ratio > _SUSPECT).astype(np.uint8), connectivity=4)
+    sure = np.zeros(int(labels.max()) + 1, np.uint8)
+    sure[labels[ratio > _SURE]] = 1
     reach = max(1, round(2 * lattice.period_px / grid_step(sigma)))
-    gate = cv2.dilate(gate, cv2.getStructuringElement(cv2.MORPH_ELLIPSE, (2 * reach + 1, 2 * reach + 1)))
-    rows, columns = plane.shape
-    return np.asarray(cv2.resize(gate.astype(np.float32), (columns, rows), interpolation=cv2.INTER_LINEAR))
+    gate = cv2.dilate(
+        sure[labels], cv2.getStructuringElement(cv2.MORPH_ELLIPSE, (2 * reach + 1, 2 * reach + 1))
+    )
+    return _full_size(np.asarray(gate, np.float32), plane.shape, grid_step(sigma))
 
 
 def _decoys(lattice: ScreenLattice, others: Sequence[ScreenLattice]) -> list[NDArray[np.float64]]:

@@ -11,6 +11,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -27,6 +28,7 @@ _STRONG, _FAINT = (0.004, 0.12), (0.0012, 0.02)
 _FINEST_PX = 1.75
 _SLACK = 0.004
 _TILE = 64
+_STEADY = 5
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -47,6 +49,11 @@ class Preparation:
     @property
     def period_px(self) -> float:
         return float(np.mean([g.period_px for g in self.lattices]))
+
+    @property
+    def key(self) -> tuple[float, ...]:
+        """The lattices as plain numbers, four for each."""
+        return tuple(float(v) for g in self.lattices for k in (g.k1, g.k2) for v in k)
 
 
 def descreen(
@@ -104,11 +111,12 @@ def apply(tile: NDArray[np.float32], ready: Preparation, *, quick: bool = False)
     gate = _gate(tangent.residual(), ready)
     if not gate.any():
         return tile
-    nulls = _nulls(tangent.encoded, ready)
-    mixed = nulls[1] if quick else _mixed(tangent.encoded, nulls, ready)
-    picture = tangent.decode(mixed)
-    inside = slice(margin, -margin)
-    picture, gate = picture[inside, inside], gate[inside, inside, None]
+    nulls = _nulls(tangent.encoded, ready, (1,) if quick else (1, *POWERS))
+    inside = (slice(margin, -margin), slice(margin, -margin))
+    gate = gate[inside]
+    mixed = nulls[1][inside] if quick else _mixed(tangent.encoded, nulls, ready, inside, gate > 0)
+    picture = tangent.decode(mixed, inside)
+    gate = gate[..., None]
     return np.where(gate > 0, tile + gate * (picture - tile), tile).astype(np.float32)
 
 
@@ -138,22 +146,25 @@ class _Tangent:
     """A linear picture on the tangent of the sRGB curve at its local mean."""
 
     base: NDArray[np.float32]
+    tone: NDArray[np.float32]
+    slope: NDArray[np.float32]
     encoded: NDArray[np.float32]
 
     @staticmethod
     def of(linear: NDArray[np.float32], period: float) -> _Tangent:
         import cv2
 
-        tone = cv2.GaussianBlur(linear, (0, 0), period / 2, borderType=cv2.BORDER_REFLECT)
-        base = np.asarray(np.maximum(tone.reshape(linear.shape), 0.003), np.float32)
-        encoded = srgb_encode(base) + _slope(base) * (linear - base)
-        return _Tangent(base=base, encoded=encoded.astype(np.float32))
+        low = cv2.GaussianBlur(linear, (0, 0), period / 2, borderType=cv2.BORDER_REFLECT)
+        base = np.asarray(np.maximum(low.reshape(linear.shape), 0.003), np.float32)
+        tone, slope = srgb_encode(base).astype(np.float32), _slope(base)
+        return _Tangent(base=base, tone=tone, slope=slope, encoded=tone + slope * (linear - base))
 
     def residual(self) -> NDArray[np.float32]:
-        return np.asarray(self.encoded - srgb_encode(self.base), np.float32)
+        return np.asarray(self.encoded - self.tone, np.float32)
 
-    def decode(self, encoded: NDArray[np.float32]) -> NDArray[np.float32]:
-        linear = self.base + (encoded - srgb_encode(self.base)) / _slope(self.base)
+    def decode(self, encoded: NDArray[np.float32], inside: tuple[slice, slice]) -> NDArray[np.float32]:
+        """sRGB picture of the part `inside` from its encoding."""
+        linear = self.base[inside] + (encoded - self.tone[inside]) / self.slope[inside]
         return np.asarray(srgb_encode(linear), np.float32)
 
 
@@ -162,32 +173,49 @@ def _slope(linear: NDArray[np.float32]) -> NDArray[np.float32]:
     return np.asarray(1.055 / 2.4 * np.maximum(linear, 0.012) ** (1 / 2.4 - 1), np.float32)
 
 
-def _nulls(encoded: NDArray[np.float32], ready: Preparation) -> dict[int, NDArray[np.float32]]:
-    """The picture through the null and its powers: keys 1, 4, 10 and 30."""
+def _nulls(
+    encoded: NDArray[np.float32], ready: Preparation, powers: Sequence[int] = (1, *POWERS)
+) -> dict[int, NDArray[np.float32]]:
+    """The picture through the null and its powers, one for each of `powers`."""
     from scipy import fft
 
     rows, columns, channels = encoded.shape
     shape = (fft.next_fast_len(rows, real=True), fft.next_fast_len(columns, real=True))
-    out = {k: np.empty_like(encoded) for k in (1, *POWERS)}
+    out = {k: np.empty_like(encoded) for k in powers}
     for c in range(channels):
         padded = np.pad(encoded[..., c], ((0, shape[0] - rows), (0, shape[1] - columns)), mode="symmetric")
         spectrum = fft.rfft2(padded)
-        null = null_transfer(shape, ready.lattices, ready.shares[c])
-        for k in out:
-            passed = null if k == 1 else 1 - (1 - null) ** k
-            out[k][..., c] = fft.irfft2(spectrum * passed, s=shape)[:rows, :columns]
+        for k in powers:
+            passed = spectrum * _transfer(shape, ready.key, tuple(ready.shares[c]), k)
+            out[k][..., c] = fft.irfft2(passed, s=shape)[:rows, :columns]
     return out
 
 
+@lru_cache(maxsize=24)
+def _transfer(
+    shape: tuple[int, int], key: tuple[float, ...], shares: tuple[float, ...], power: int
+) -> NDArray[np.float32]:
+    """One power of the null; neighbouring tiles and channels ask for the same one again."""
+    if power == 1:
+        vectors = np.reshape(key, (-1, 2, 2))
+        return null_transfer(shape, [ScreenLattice(k1=a, k2=b) for a, b in vectors], shares)
+    return 1 - (1 - _transfer(shape, key, shares, 1)) ** power
+
+
 def _mixed(
-    encoded: NDArray[np.float32], nulls: dict[int, NDArray[np.float32]], ready: Preparation
+    encoded: NDArray[np.float32],
+    nulls: dict[int, NDArray[np.float32]],
+    ready: Preparation,
+    inside: tuple[slice, slice],
+    wanted: NDArray[np.bool_],
 ) -> NDArray[np.float32]:
     mixer = shipped_mixer()
-    out = np.empty_like(encoded)
+    out = np.empty((*wanted.shape, encoded.shape[2]), np.float32)
     for c, features in enumerate(channel_features(encoded, nulls, ready.lattices, ready.shares)):
-        picture = mixer.mix(features.pictures, features.inputs)
-        steady = [nulls[k][..., c] for k in nulls] + [encoded[..., c]]
-        low, high = np.minimum.reduce(steady), np.maximum.reduce(steady)
+        pictures = [p[inside] for p in features.pictures]
+        picture = mixer.mix(pictures, [i[inside] for i in features.inputs], wanted)
+        # The picture's own nulls and the scan come first among the features.
+        low, high = np.minimum.reduce(pictures[:_STEADY]), np.maximum.reduce(pictures[:_STEADY])
         out[..., c] = np.clip(picture, low - _SLACK, high + _SLACK)
     return out
 

@@ -72,6 +72,7 @@ def _common_shift(vectors: NDArray[np.float64], longest: int) -> tuple[int, int]
     along = np.arange(-_SIDEWAYS_PX, _SIDEWAYS_PX + 1)
     x, y = np.meshgrid(across, along)
     phase = vectors[:, 0, None, None] * x + vectors[:, 1, None, None] * y
-    cost = (2 - 2 * np.cos(2 * np.pi * phase)).sum(axis=0)
+    # Of equal shifts the straightest: one along the border runs out at the corners.
+    cost = (2 - 2 * np.cos(2 * np.pi * phase)).sum(axis=0) + 1e-6 * np.abs(y)
     row, column = np.unravel_index(int(np.argmin(cost)), cost.shape)
     return int(x[row, column]), int(y[row, column])

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -30,8 +30,8 @@ def channel_features(
     nulls: dict[int, NDArray[np.float32]],
     lattices: Sequence[ScreenLattice],
     shares: NDArray[np.float64],
-) -> list[Features]:
-    """Feature pictures and steering inputs of every channel, on the tangent encoding."""
+) -> Iterator[Features]:
+    """Feature pictures and steering inputs of each channel in turn, on the tangent encoding."""
     period = float(np.mean([g.period_px for g in lattices]))
     channels = encoded.shape[2]
     luma = np.asarray(_LUMA if channels == 3 else (1.0,), np.float32)
@@ -41,10 +41,10 @@ def channel_features(
     along_4, along_10 = _along_edges(l_4, l_null, 0.45 * period), _along_edges(l_10, l_null, 1.1 * period)
     structure, coherence = _structure(l_null, max(0.8, 0.5 * period))
     fine, _ = _structure(l_4, max(0.8, 0.25 * period))
-    out = []
     for c in range(channels):
-        z, n1 = encoded[..., c], nulls[1][..., c]
-        f4, f10, f30 = (nulls[k][..., c] for k in POWERS)
+        z, n1, f4, f10, f30 = (
+            np.ascontiguousarray(p[..., c]) for p in (encoded, *(nulls[k] for k in (1, *POWERS)))
+        )
         carrier = coherent_amplitude(
             z - n1, [g for g, s in zip(lattices, shares[c], strict=True) if s > 0], sigma_px=1.5 * period
         )
@@ -72,8 +72,7 @@ def channel_features(
             np.full_like(n1, np.log(period)),
             np.full_like(n1, float((shares[c] > 0).sum())),
         ]
-        out.append(Features(pictures=pictures, inputs=[np.asarray(i, np.float32) for i in inputs]))
-    return out
+        yield Features(pictures=pictures, inputs=[np.asarray(i, np.float32) for i in inputs])
 
 
 def guided_filter(picture: Plane, guide: Plane, *, radius: float, eps: Plane | np.float32) -> Plane:

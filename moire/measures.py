@@ -14,6 +14,8 @@ from moire.vision import lightness
 
 _EDGES = 300
 _LEVEL_TILES = 16
+_CURVE_STEPS = 255 * 16
+_COARSEST_PX = 16.0
 
 
 def line_levels(
@@ -98,7 +100,7 @@ def edge_energy(before: NDArray[np.float32], after: NDArray[np.float32]) -> floa
 
     Parameters
     ----------
-    before, after : ndarray, shape (rows, columns)
+    before, after : ndarray, shape (windows, rows, columns)
         Lightness L* without the pattern's own bands, so that only picture is compared.
 
     Returns
@@ -106,14 +108,16 @@ def edge_energy(before: NDArray[np.float32], after: NDArray[np.float32]) -> floa
     float or None
         None where the picture has no strong edge.
     """
-    import cv2
-
-    one, two = (
-        cv2.Sobel(p, cv2.CV_32F, 1, 0, scale=0.125) ** 2 + cv2.Sobel(p, cv2.CV_32F, 0, 1, scale=0.125) ** 2
-        for p in (before, after)
-    )
+    one, two = (np.stack([_gradient_energy(p) for p in windows]) for windows in (before, after))
     strong = one >= max(float(np.quantile(one, 0.98)), 1.0)
     return float(two[strong].sum() / one[strong].sum()) if strong.sum() >= 50 else None
+
+
+def _gradient_energy(plane: NDArray[np.float32]) -> NDArray[np.float32]:
+    import cv2
+
+    gx, gy = cv2.Sobel(plane, cv2.CV_32F, 1, 0, scale=0.125), cv2.Sobel(plane, cv2.CV_32F, 0, 1, scale=0.125)
+    return np.asarray(gx * gx + gy * gy)
 
 
 def edge_widths(
@@ -148,6 +152,7 @@ def _edge_profiles(
 ) -> tuple[NDArray[np.float32], NDArray[np.float32]] | None:
     import cv2
 
+    period = min(period, _COARSEST_PX)
     smooth = cv2.GaussianBlur(after, (0, 0), max(1.0, period / 2))
     gx, gy = (
         cv2.Sobel(smooth, cv2.CV_32F, 1, 0, scale=0.125),
@@ -176,9 +181,13 @@ def _edge_profiles(
     taper /= taper.sum()
 
     def profile(plane: NDArray[np.float32]) -> NDArray[np.float32]:
-        flat_x = at_x.reshape(len(xs), -1).astype(np.float32)
-        flat_y = at_y.reshape(len(xs), -1).astype(np.float32)
-        patch = cv2.remap(plane, flat_x, flat_y, cv2.INTER_LINEAR).reshape(at_x.shape)
+        # One edge at a time: the remap of all at once would be too large a picture for it.
+        patch = np.stack(
+            [
+                cv2.remap(plane, x, y, cv2.INTER_LINEAR)
+                for x, y in zip(at_x.astype(np.float32), at_y.astype(np.float32), strict=True)
+            ]
+        )
         return np.asarray((patch * taper[None, :, None]).sum(axis=1))
 
     return profile(before), profile(after)
@@ -212,9 +221,11 @@ def colour_shift(
         [[0.4124, 0.3576, 0.1805], [0.2126, 0.7152, 0.0722], [0.0193, 0.1192, 0.9505]], np.float32
     )
 
+    curve = srgb_decode(np.arange(_CURVE_STEPS + 1) / _CURVE_STEPS).astype(np.float32)
+
     def lab(picture: NDArray[np.float32]) -> NDArray[np.float64]:
         rgb = picture if picture.shape[2] == 3 else np.repeat(picture, 3, axis=2)
-        linear = cv2.GaussianBlur(srgb_decode(rgb).astype(np.float32), (0, 0), sigma_px)
+        linear = cv2.GaussianBlur(curve[np.rint(rgb * _CURVE_STEPS).astype(np.uint16)], (0, 0), sigma_px)
         step = max(1, min(int(sigma_px), min(picture.shape[:2])))
         return np.asarray(xyz2lab(linear[step // 2 :: step, step // 2 :: step] @ to_xyz.T))
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import hashlib
 from collections.abc import Callable, Collection
 from dataclasses import replace
+from itertools import product
 from typing import Any
 
 import numpy as np
@@ -25,13 +26,18 @@ from moire.verdict import judge
 from moire.vision import lightness, visibility
 
 Pixels = NDArray[Any]
-_TILE_PX = 768
+_TILE_PX = 1024
 _BEAT_REACH_PX = 25.0
-_NOTCH_MARGIN_PX = 120
+_NOTCH_MARGIN_PX = 160
+_BEAT_MARGIN_PX = 80
 _LEAST_REACH_PX, _THREAD_REACH = 5.0, 1.2
 _PLACES = 4
 _SAME_CPP = 0.002
+# Threads shade what is under them; banding and beats add to it.
+_SHADING: tuple[Kind, ...] = ("weave",)
 _PLACE_PX = 96
+_WINDOW_PX = 384
+_WINDOWS = 3
 
 
 def mend(
@@ -128,8 +134,8 @@ def _encoded(scan: Scan) -> Pixels:
 def _remove(master: Pixels, recipe: Recipe, progress: Callable[[float], None]) -> Pixels:
     lattices = _lattices(recipe)
     notches = [r for r in recipe.removals if r.method == "notch"]
-    lines = [v for r in notches if r.kind not in ("rosette", "weave") for v in r.vectors_cpp]
-    woven = [v for r in notches if r.kind == "weave" for v in r.vectors_cpp]
+    lines = [v for r in notches if r.kind not in ("rosette", *_SHADING) for v in r.vectors_cpp]
+    shading = [v for r in notches if r.kind in _SHADING for v in r.vectors_cpp]
     beside = [v for r in notches for v in r.beside_cpp]
     beats = [v for r in notches if r.kind == "rosette" for v in r.vectors_cpp]
     mended = np.empty_like(master)
@@ -141,15 +147,18 @@ def _remove(master: Pixels, recipe: Recipe, progress: Callable[[float], None]) -
 
         def work(tile: Pixels, ready: Preparation = ready) -> Pixels:
             level = remove_lines(tile, lines, beside=beside)
-            level = remove_lines(level, woven, reach_px=_thread_reach(woven))
+            level = remove_lines(level, shading, reach_px=_thread_reach(shading), of_tone=True)
             clear = apply(level, ready, quick=recipe.quick)
             if not beats:
                 return clear
             # Without screens to mend, the beats themselves are all there is; else they end with them.
             inside = _where_changed(clear, level) if lattices else np.float32(1)
-            return clear + inside * (remove_lines(clear, beats, reach_px=_BEAT_REACH_PX) - clear)
+            still = remove_lines(clear, beats, reach_px=_BEAT_REACH_PX)
+            return clear + inside * (still - clear)
 
-        margin = max(margin_px(lattices), _NOTCH_MARGIN_PX if lines or beats or woven else 0)
+        margin = max(
+            margin_px(lattices), _NOTCH_MARGIN_PX if lines or shading else 0, _BEAT_MARGIN_PX if beats else 0
+        )
         mended[..., group] = map_tiles(part, work, size=_TILE_PX, margin=margin, progress=progress)
     mended = np.clip(mended, 0, 1)
     return master + np.float32(recipe.strength) * (mended - master)
@@ -262,14 +271,25 @@ def _measure(
 
 
 def _without_screens(plane: Pixels, recipe: Recipe) -> Pixels:
-    """A plane through the null of every screen removed: what is left of both states is picture."""
+    """Windows of a plane through the null of every screen removed: what both states keep is picture."""
     from scipy import fft
 
+    windows = _windows(plane)
     lattices = _lattices(recipe)
     if not lattices:
-        return plane
-    spectrum = fft.rfft2(plane) * null_transfer(plane.shape, lattices, [1.0] * len(lattices))
-    return np.asarray(fft.irfft2(spectrum, s=plane.shape), np.float32)
+        return windows
+    shape = (windows.shape[1], windows.shape[2])
+    null = null_transfer(shape, lattices, [1.0] * len(lattices))
+    return np.asarray(fft.irfft2(fft.rfft2(windows) * null, s=shape), np.float32)
+
+
+def _windows(plane: Pixels) -> Pixels:
+    """A plane as a stack: itself if small, else evenly spread windows of it."""
+    rows, columns = plane.shape
+    if rows * columns <= _WINDOWS**2 * _WINDOW_PX**2 or min(rows, columns) < _WINDOW_PX:
+        return plane[None]
+    starts = (np.rint(np.linspace(0, n - _WINDOW_PX, _WINDOWS)).astype(int) for n in (rows, columns))
+    return np.stack([plane[y : y + _WINDOW_PX, x : x + _WINDOW_PX] for y, x in product(*starts)])
 
 
 def _lattices(recipe: Recipe) -> tuple[ScreenLattice, ...]:

@@ -8,7 +8,7 @@ from functools import lru_cache
 import numpy as np
 from numpy.typing import NDArray
 
-_BLOCK = 1 << 16
+_BLOCK = 1 << 12
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -28,27 +28,40 @@ class Mixer:
     layers: tuple[tuple[NDArray[np.float32], NDArray[np.float32]], ...]
 
     def weights(self, inputs: NDArray[np.float32]) -> NDArray[np.float32]:
-        """Mixing weights, shape (pixels, features), of inputs of shape (pixels, inputs)."""
-        x = (inputs - self.centre) / self.scale
+        """Mixing weights, shape (features, pixels), of inputs of shape (inputs, pixels)."""
+        x = (inputs - self.centre[:, None]) / self.scale[:, None]
         for matrix, bias in self.layers[:-1]:
-            x = np.maximum(x @ matrix + bias, 0)
-        x = x @ self.layers[-1][0] + self.layers[-1][1]
-        x = np.exp(x - x.max(axis=1, keepdims=True))
-        return np.asarray(x / x.sum(axis=1, keepdims=True))
+            x = matrix.T @ x
+            x += bias[:, None]
+            np.maximum(x, 0, out=x)
+        x = self.layers[-1][0].T @ x
+        x += self.layers[-1][1][:, None]
+        x -= x.max(axis=0)
+        np.exp(x, out=x)
+        x /= x.sum(axis=0)
+        return np.asarray(x)
 
     def mix(
-        self, features: list[NDArray[np.float32]], inputs: list[NDArray[np.float32]]
+        self,
+        features: list[NDArray[np.float32]],
+        inputs: list[NDArray[np.float32]],
+        wanted: NDArray[np.bool_] | None = None,
     ) -> NDArray[np.float32]:
-        """Weighted sum of feature planes, steered by input planes; all of one shape."""
-        shape = features[0].shape
-        flat_features = [f.ravel() for f in features]
-        flat_inputs = [i.ravel() for i in inputs]
-        out = np.empty(flat_features[0].size, np.float32)
-        for start in range(0, out.size, _BLOCK):
-            part = slice(start, start + _BLOCK)
-            weights = self.weights(np.stack([i[part] for i in flat_inputs], axis=1))
-            out[part] = np.einsum("nk,kn->n", weights, np.stack([f[part] for f in flat_features]))
-        return out.reshape(shape)
+        """Weighted sum of feature planes, steered by input planes; all of one shape.
+
+        Where not `wanted` the first feature may stand instead.
+        """
+        rows, columns = features[0].shape
+        out = np.array(features[0])
+        band = max(1, _BLOCK // columns)
+        for start in range(0, rows, band):
+            part = slice(start, start + band)
+            if wanted is None or wanted[part].any():
+                steering = np.stack([i[part] for i in inputs]).reshape(len(inputs), -1)
+                pictures = np.stack([f[part] for f in features]).reshape(len(features), -1)
+                mixed = np.einsum("kn,kn->n", self.weights(steering), pictures)
+                out[part] = mixed.reshape(-1, columns)
+        return out
 
 
 @lru_cache(maxsize=1)

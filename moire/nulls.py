@@ -49,33 +49,44 @@ def null_transfer(
     -------
     ndarray, shape (rows, columns // 2 + 1), 0..1
     """
-    fy = np.fft.fftfreq(shape[0]).astype(np.float32)[:, None]
-    fx = np.fft.rfftfreq(shape[1]).astype(np.float32)[None, :]
+    fy = np.fft.fftfreq(shape[0])
+    fx = np.fft.rfftfreq(shape[1])
     total = np.ones((shape[0], shape[1] // 2 + 1), np.float32)
     for lattice, share in zip(lattices, shares, strict=True):
         if share <= 0:
             continue
         cell = np.linalg.inv(np.stack([lattice.k1, lattice.k2]))
-        one = np.ones_like(total)
-        for a in cell.T.astype(np.float32):
-            one *= _sinc(fx * a[0] + fy * a[1])
+        one = _sinc(fx, fy, cell[:, 0])
+        one *= _sinc(fx, fy, cell[:, 1])
         np.clip(one, 0, 1, out=one)
         if share < 1:
             one = 1 - (1 - one) ** _FAINT_POWER
         total *= one
         for place in _folded_orders(lattice):
-            distance = _wrapped(fx - place[0]) ** 2 + _wrapped(fy - place[1]) ** 2
-            total *= 1 - np.exp(-distance / np.float32(2 * _FOLDED_SIGMA**2))
+            across, down = (_bell(f - p) for f, p in zip((fx, fy), place, strict=True))
+            total *= 1 - down[:, None] * across[None, :]
     return total
 
 
-def _sinc(x: NDArray[np.float32]) -> NDArray[np.float32]:
-    at = np.float32(np.pi) * x
-    return np.where(np.abs(at) < 1e-4, np.float32(1), np.sin(at) / np.where(at == 0, np.float32(1), at))
+def _sinc(
+    fx: NDArray[np.floating], fy: NDArray[np.floating], side: NDArray[np.float64]
+) -> NDArray[np.float32]:
+    """sin(t) / t of t = pi f.side on the grid of both axes; the sine of a sum needs no sine a bin."""
+    x, y = (np.pi * f * a for f, a in zip((fx, fy), side, strict=True))
+    angle = np.add.outer(y, x).astype(np.float32)
+    sin_x, cos_x, sin_y, cos_y = (v.astype(np.float32) for v in (np.sin(x), np.cos(x), np.sin(y), np.cos(y)))
+    sine = np.multiply.outer(sin_y, cos_x)
+    sine += np.multiply.outer(cos_y, sin_x)
+    near = np.abs(angle) < 1e-3
+    angle[near] = 1
+    sine /= angle
+    sine[near] = 1
+    return sine
 
 
-def _wrapped(f: NDArray[np.float32]) -> NDArray[np.float32]:
-    return f - np.rint(f)
+def _bell(f: NDArray[np.floating]) -> NDArray[np.float32]:
+    """Gaussian of a folded order along one axis, periodic."""
+    return np.exp(-((f - np.rint(f)) ** 2) / (2 * _FOLDED_SIGMA**2)).astype(np.float32)
 
 
 def _folded_orders(lattice: ScreenLattice) -> list[NDArray[np.float64]]:

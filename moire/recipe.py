@@ -40,7 +40,7 @@ def prescribe(
     strength : float
         Share of the correction applied, 0..1.
     quick : bool
-        Lattice null only.
+        Lattice null only: beats of screens are left unless they are asked for with `only`.
     to_ppi : float or None
         Sampling rate of the derivative.
 
@@ -55,7 +55,7 @@ def prescribe(
         raise BadRequest("the scan's own ppi is unknown: give it with --ppi before asking for another")
     if to_ppi is not None and not 10 <= to_ppi <= min(examination.ppi or (0.0,)):
         raise BadRequest(f"--to-ppi {to_ppi:g} must lie between 10 and the scan's own rate")
-    wanted = frozenset(only) or MENDED_UNASKED
+    wanted = frozenset(only) or (MENDED_UNASKED - {"rosette"} if quick else MENDED_UNASKED)
     chosen = wanted - frozenset(keep)
     removals = [
         replace(r, beside_cpp=_beside(f, examination)) if "weave" not in chosen else r

@@ -9,7 +9,7 @@ from hypothesis import strategies as st
 from numpy.typing import NDArray
 from prints import card_print, scanned
 
-from moire.carrier import local_amplitude, presence
+from moire.carrier import local_amplitudes, presence
 from moire.descreen import apply, descreen, margin_px, prepare
 from moire.extend import extend
 from moire.mixing import shipped_mixer
@@ -64,7 +64,7 @@ def test_dots_go_on_beyond_the_border(f: float, angle: float) -> None:
 def test_local_amplitude_is_the_lines_own() -> None:
     screen = lattice(0.23, 31)
     wave = dots((240, 240), screen) - 0.5
-    assert np.median(local_amplitude(wave, screen.k1, sigma_px=10)) == pytest.approx(0.1, rel=0.03)
+    assert np.median(local_amplitudes(wave, [screen.k1], sigma_px=10)) == pytest.approx(0.1, rel=0.03)
 
 
 def test_presence_is_shut_where_no_screen_is() -> None:
@@ -79,13 +79,13 @@ def test_presence_is_shut_where_no_screen_is() -> None:
 def test_mixing_stays_between_its_features() -> None:
     mixer = shipped_mixer()
     rng = np.random.default_rng(0)
-    inputs = rng.normal(mixer.centre, mixer.scale, (500, len(mixer.centre))).astype(np.float32)
+    inputs = rng.normal(mixer.centre, mixer.scale, (500, len(mixer.centre))).T.astype(np.float32)
     weights = mixer.weights(inputs)
     assert weights.min() >= 0
-    assert weights.sum(axis=1) == pytest.approx(np.ones(500), abs=1e-5)
-    count = weights.shape[1]
+    assert weights.sum(axis=0) == pytest.approx(np.ones(500), abs=1e-5)
+    count = weights.shape[0]
     features = [rng.random((20, 25)).astype(np.float32) for _ in range(count)]
-    planes = [inputs[:, i].reshape(20, 25) for i in range(inputs.shape[1])]
+    planes = [row.reshape(20, 25) for row in inputs]
     mixed = mixer.mix(features, planes)
     assert (mixed >= np.min(features, axis=0) - 1e-5).all()
     assert (mixed <= np.max(features, axis=0) + 1e-5).all()
@@ -118,3 +118,14 @@ def test_tiles_agree_with_the_whole() -> None:
 def test_a_screen_too_fine_to_part_from_the_picture_is_left_alone() -> None:
     image = np.random.default_rng(0).random((200, 200, 3)).astype(np.float32)
     assert descreen(image, [lattice(0.65, 45)]) is image
+
+
+def test_a_lattice_a_little_wrong_costs_little() -> None:
+    """An error of 0.0001 cycles per pixel is many times what an examination leaves."""
+    scan, truth = scanned(
+        card_print(ScreenOrder(ruling_lpi=100, angle_deg=25, ink="black"), width_in=1.2), 300
+    )
+    image = (scan.pixels / 255).astype(np.float32)
+    right, wrong = (descreen(image, [lattice(100 / 300 + error, 25)]) for error in (0, 1e-4))
+    loss = np.log10(np.mean((wrong - truth) ** 2) / np.mean((right - truth) ** 2))
+    assert 10 * loss < 0.3

@@ -31,7 +31,7 @@ def test_line_level_is_its_amplitude() -> None:
 
 
 def test_same_picture_keeps_everything() -> None:
-    assert edge_energy(bars(1.0), bars(1.0)) == pytest.approx(1)
+    assert edge_energy(bars(1.0)[None], bars(1.0)[None]) == pytest.approx(1)
     before, after = edge_widths(bars(1.0), bars(1.0), period_px=3)
     assert before == after
 
@@ -41,14 +41,14 @@ def test_blur_shows_in_energy_and_in_width() -> None:
     before, after = edge_widths(bars(1.0), bars(2.0), period_px=3)
     assert before == pytest.approx(2.563, abs=0.5)
     assert after == pytest.approx(5.126, abs=0.6)
-    kept = edge_energy(bars(1.0), bars(2.0))
+    kept = edge_energy(bars(1.0)[None], bars(2.0)[None])
     assert kept is not None
     assert 0.2 < kept < 0.6
 
 
 def test_a_flat_page_has_no_edges() -> None:
     flat = np.full((300, 300), 70, np.float32)
-    assert edge_energy(flat, flat) is None
+    assert edge_energy(flat[None], flat[None]) is None
     assert edge_widths(flat, flat, period_px=3) == (None, None)
 
 
