@@ -9,12 +9,11 @@ from numpy.typing import NDArray
 
 from moire.patches import Codes, cut_patches, patch_phasors, strong_tiles
 from moire.peaks import Peak
-from moire.spectrum import tile_means, tile_phasors
-from moire.vision import lightness
+from moire.spectrum import tile_phasors
+from moire.vision import lightness, linear_light
 
 _EDGES = 300
-_LEVEL_TILES = 16
-_CURVE_STEPS = 255 * 16
+_LEVEL_TILES, _LINE_TILES = 16, 128
 _COARSEST_PX = 16.0
 
 
@@ -48,22 +47,31 @@ def line_levels(
     weights : ndarray
         The weights used.
     """
-    v = np.abs(tile_phasors(plane, frequencies, size=size)[0])
     if weights is None:
+        v = np.abs(tile_phasors(plane, frequencies, size=size)[0])
         sought = v if inside is None else np.where(inside, v, np.nan)
         strong = np.nanquantile(sought, 0.95, axis=(1, 2), keepdims=True)
         weights = np.clip((v / np.maximum(strong, 1e-9) - 0.15) / 0.35, 0, 1).astype(np.float32)
         weights = weights if inside is None else weights * inside
-    total = np.maximum(weights.sum(axis=(1, 2)), 1e-9)
-    amplitude = (v * weights).sum(axis=(1, 2)) / total
     ring = 4 / size * np.array([(np.cos(a), np.sin(a)) for a in np.pi * np.arange(8) / 4])
-    around = np.zeros(len(frequencies))
-    for offset in ring:
-        side = np.abs(tile_phasors(plane, frequencies + offset, size=size)[0])
-        around += (side**2 * weights).sum(axis=(1, 2)) / total
-    tone = tile_means(plane, size=size)
-    mean = (tone[None] * weights).sum(axis=(1, 2)) / total
-    return amplitude, np.sqrt(around / 8), mean, weights
+    aside = np.concatenate([np.zeros((1, 2)), ring])
+    levels = np.zeros((3, len(frequencies)))
+    for i, (f, weight) in enumerate(zip(frequencies, weights, strict=True)):
+        tiles = _spread_tiles(weight)
+        phasors, tone = patch_phasors(cut_patches(plane[..., None], tiles, size=size), f + aside)
+        swing, share = np.abs(phasors[..., 0]), weight[tuple(tiles.T)]
+        around = (swing[1:] ** 2).mean(axis=0)
+        total = max(float(share.sum()), 1e-9)
+        levels[:, i] = [float((x * share).sum()) / total for x in (swing[0], around, tone[:, 0])]
+    return levels[0], np.sqrt(levels[1]), levels[2], weights
+
+
+def _spread_tiles(weight: NDArray[np.float32]) -> NDArray[np.int64]:
+    """Rows and columns of tiles that carry a line at all, evenly spread, at least one."""
+    some = np.argwhere(weight > 0)
+    if not len(some):
+        return np.zeros((1, 2), int)
+    return some[np.linspace(0, len(some) - 1, min(_LINE_TILES, len(some))).astype(int)]
 
 
 def levels_where_strong(
@@ -205,29 +213,34 @@ def _rise_width(row: NDArray[np.float32]) -> float:
     return max(end - start, 1) / 4
 
 
-def colour_shift(
-    before: NDArray[np.float32], after: NDArray[np.float32], *, sigma_px: float
-) -> tuple[float, float]:
-    """Mean and largest CIEDE2000 difference of low-passed sRGB pictures, 0..1, same shape.
+def colour_shift(before: Codes, after: Codes, *, sigma_px: float) -> tuple[float, float]:
+    """Mean and largest CIEDE2000 difference of low-passed pictures.
 
     Averages are taken in linear light, where ink and paper mix truly.
+
+    Parameters
+    ----------
+    before, after : ndarray, shape (rows, columns, 1 or 3)
+        sRGB code values on a 0..255 scale.
+    sigma_px : float
+        Of the Gaussian that both are seen through.
     """
     import cv2
     from skimage.color import deltaE_ciede2000, xyz2lab
 
-    from moire.scanner import srgb_decode
-
     to_xyz = np.array(
         [[0.4124, 0.3576, 0.1805], [0.2126, 0.7152, 0.0722], [0.0193, 0.1192, 0.9505]], np.float32
     )
+    # Cells of half a sigma, then the Gaussian on them, seen at every other one.
+    rows, columns = before.shape[:2]
+    cell = max(1, min(int(sigma_px / 2), rows, columns))
 
-    curve = srgb_decode(np.arange(_CURVE_STEPS + 1) / _CURVE_STEPS).astype(np.float32)
-
-    def lab(picture: NDArray[np.float32]) -> NDArray[np.float64]:
-        rgb = picture if picture.shape[2] == 3 else np.repeat(picture, 3, axis=2)
-        linear = cv2.GaussianBlur(curve[np.rint(rgb * _CURVE_STEPS).astype(np.uint16)], (0, 0), sigma_px)
-        step = max(1, min(int(sigma_px), min(picture.shape[:2])))
-        return np.asarray(xyz2lab(linear[step // 2 :: step, step // 2 :: step] @ to_xyz.T))
+    def lab(codes: Codes) -> NDArray[np.float64]:
+        size = (columns // cell, rows // cell)
+        coarse = cv2.resize(linear_light(codes), size, interpolation=cv2.INTER_AREA)
+        light = np.asarray(cv2.GaussianBlur(coarse, (0, 0), sigma_px / cell)[::2, ::2], np.float32)
+        rgb = light if light.ndim == 3 else np.repeat(light[..., None], 3, axis=2)
+        return np.asarray(xyz2lab(rgb @ to_xyz.T))
 
     shift = deltaE_ciede2000(lab(before), lab(after))
     return float(shift.mean()), float(shift.max())

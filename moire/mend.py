@@ -20,7 +20,7 @@ from moire.notch import remove_lines
 from moire.nulls import ScreenLattice, null_transfer
 from moire.recipe import MENDED_UNASKED, check_fits, prescribe
 from moire.resample import reduce_picture
-from moire.samples import rgb_codes, tile_size
+from moire.samples import code_planes, tile_size
 from moire.tiles import map_tiles
 from moire.verdict import judge
 from moire.vision import lightness, visibility
@@ -214,7 +214,7 @@ def _measure(
     scan: Scan, mended: Scan, before: Examination, recipe: Recipe
 ) -> tuple[Measures, tuple[tuple[int, int], ...]]:
     removed = [f for f in before.findings if f.lines and f.kind in {r.kind for r in recipe.removals}]
-    one, two = rgb_codes(scan), rgb_codes(mended)
+    one, two = code_planes(scan), code_planes(mended)
     l_one, l_two = lightness(one), lightness(two)
     lines: list[LineRemoved] = []
     seen = [0.0, 0.0]
@@ -245,9 +245,7 @@ def _measure(
     period = max((f.period_px for f in removed), default=2.0)
     ratio = edge_energy(*(_without_screens(p, recipe) for p in (l_one, l_two)))
     width_before, width_after = edge_widths(l_one, l_two, period_px=period)
-    mean_shift, max_shift = colour_shift(
-        one / np.float32(255), two / np.float32(255), sigma_px=max(2.0, 2 * period)
-    )
+    mean_shift, max_shift = colour_shift(one, two, sigma_px=max(2.0, 2 * period))
     changed = np.abs(scan.pixels.astype(np.int32) - mended.pixels.astype(np.int32))
     changed = changed.max(axis=2) if changed.ndim == 3 else changed
     outside = ~_inside(scan, removed)

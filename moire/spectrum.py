@@ -165,14 +165,6 @@ def tile_phasors(
     return np.ascontiguousarray(2 * (upper[:-1] + lower[1:]).transpose(2, 0, 1)), x, y
 
 
-def tile_means(image: NDArray[np.float32], *, size: int) -> NDArray[np.float32]:
-    """Mean in the tiles of `tile_phasors`, shape (tile rows, tile columns)."""
-    hop = size // 2
-    ny, nx = image.shape[0] // hop, image.shape[1] // hop
-    cells = image[: ny * hop, : nx * hop].reshape(ny, hop, nx, hop).mean(axis=(1, 3))
-    return np.asarray((cells[:-1, :-1] + cells[1:, :-1] + cells[:-1, 1:] + cells[1:, 1:]) / 4)
-
-
 def _half_windows(
     frequency: NDArray[np.float64], window: NDArray[np.float32], hop: int, segments: int
 ) -> tuple[NDArray[np.complex64], NDArray[np.complex64], NDArray[np.complex64]]:

@@ -113,21 +113,24 @@ def visibility(
 
 def lightness(rgb: NDArray[np.uint8] | NDArray[np.floating]) -> NDArray[np.float32]:
     """CIE 1976 L* of sRGB code values on a 0..255 scale, shape (..., channels) or (rows, columns)."""
-    if rgb.ndim == 2:
-        rgb = rgb[..., None]
-    steps = 255 if rgb.dtype == np.uint8 else 4096
-    index = rgb if rgb.dtype == np.uint8 else np.rint(np.clip(rgb, 0, 255) * (steps / 255)).astype(np.uint16)
-    weights = (0.2126, 0.7152, 0.0722) if rgb.shape[-1] == 3 else (1.0,)
-    linear = _linear_light(steps)
-    y = sum((np.float32(w) * linear)[index[..., c]] for c, w in enumerate(weights))
-    y = np.asarray(y, np.float32)
+    light = linear_light(rgb if rgb.ndim > 2 else rgb[..., None])
+    weights = (0.2126, 0.7152, 0.0722) if light.shape[-1] == 3 else (1.0,)
+    y = np.asarray(light @ np.array(weights, np.float32))
     # The cube root by logarithms, which run on all lanes of the processor.
     root = np.exp(np.log(np.maximum(y, np.float32(1e-6))) / np.float32(3))
     return np.where(y > 216 / 24389, 116 * root - 16, np.float32(24389 / 27) * y)
 
 
+def linear_light(codes: NDArray[np.uint8] | NDArray[np.floating]) -> NDArray[np.float32]:
+    """Linear light 0..1 of sRGB code values on a 0..255 scale, same shape."""
+    if codes.dtype == np.uint8:
+        return _light_table(255)[codes]
+    steps = 4096
+    return _light_table(steps)[np.rint(np.clip(codes, 0, 255) * (steps / 255)).astype(np.uint16)]
+
+
 @lru_cache(maxsize=2)
-def _linear_light(steps: int) -> NDArray[np.float32]:
+def _light_table(steps: int) -> NDArray[np.float32]:
     """Linear light of equally spaced sRGB values 0..1 (IEC 61966-2-1)."""
     table = np.arange(steps + 1, dtype=np.float32) / steps
     return np.where(table <= 0.04045, table / 12.92, ((table + 0.055) / 1.055) ** 2.4).astype(np.float32)

@@ -57,7 +57,7 @@ def test_colour_shift_is_ciede2000() -> None:
     flat = np.broadcast_to(rgb.mean(axis=(0, 1)), rgb.shape).astype(np.float32)
     moved = np.clip(flat + np.float32([0.05, 0, -0.03]), 0, 1)
     expected = deltaE_ciede2000(rgb2lab(flat[:1, :1]), rgb2lab(moved[:1, :1]))[0, 0]
-    mean, largest = colour_shift(flat, moved, sigma_px=4)
+    mean, largest = colour_shift(255 * flat, 255 * moved, sigma_px=4)
     assert mean == pytest.approx(expected, abs=0.02)
     assert largest == pytest.approx(expected, abs=0.02)
 
@@ -68,4 +68,4 @@ def test_screening_alone_does_not_shift_colour() -> None:
     from moire.scanner import srgb_encode
 
     grey = np.full((256, 256, 1), float(srgb_encode(np.array(0.5))), np.float32)
-    assert colour_shift(dots, grey, sigma_px=12)[0] < 1.0
+    assert colour_shift(255 * dots, 255 * grey, sigma_px=12)[0] < 1.0

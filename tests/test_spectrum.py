@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from moire.spectrum import hann, tile_means, tile_phasors, tile_spectrum
+from moire.spectrum import hann, tile_phasors, tile_spectrum
 
 
 def test_hann_window_figures() -> None:
@@ -46,9 +46,3 @@ def test_phasor_is_amplitude_and_phase(f: tuple[float, float]) -> None:
     if f[0] != 0.5:
         assert np.abs(v) == pytest.approx(7, rel=2e-3)
         assert np.angle(v) == pytest.approx(0.6, abs=3e-3)
-
-
-def test_tile_means_are_local() -> None:
-    page = np.zeros((128, 128), np.float32)
-    page[:, 64:] = 10
-    assert tile_means(page, size=64) == pytest.approx(np.array([[0, 5, 10]] * 3))
