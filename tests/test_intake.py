@@ -239,6 +239,7 @@ def test_ctrl_c_keeps_what_is_done(tmp_path: Path) -> None:
     process = subprocess.Popen(
         [a for a in command(scans, tmp_path) if a != "--quiet"],
         start_new_session=True, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True,
+        preexec_fn=lambda: signal.signal(signal.SIGINT, signal.SIG_DFL),
     )  # fmt: skip
     wait_for(lambda: kept(tmp_path / "l.sqlite") >= 5)
     os.killpg(process.pid, signal.SIGINT)

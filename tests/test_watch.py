@@ -132,13 +132,18 @@ def test_ctrl_c_ends_watching_with_all_outputs_written(tmp_path: Path) -> None:
     process = subprocess.Popen(
         [sys.executable, "-m", "moire", "intake", str(scans), "--watch", "--jobs", "1",
          "--ledger", str(tmp_path / "l.sqlite"), "--jsonl", str(log)],
-        stdout=subprocess.PIPE, text=True,
+        stdout=subprocess.PIPE, text=True, preexec_fn=heed_interrupts,
     )  # fmt: skip
     wait_for_lines(log, 2)
     process.send_signal(signal.SIGINT)
     out, _ = process.communicate(timeout=20)
     assert process.returncode == 0
     assert "2 files" in out
+
+
+def heed_interrupts() -> None:
+    """A shell that runs tests in the background makes their children deaf to Ctrl-C."""
+    signal.signal(signal.SIGINT, signal.SIG_DFL)
 
 
 def wait_for_lines(log: Path, count: int) -> dict[str, str]:
