@@ -6,16 +6,17 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from moire.dots import round_coefficient
 from moire.folding import Unfolded, agree, temper, unfold
 from moire.lattice import Lattice
 from moire.model import Candidate, Ink, Kind, Screen
 from moire.patches import cut_patches, patch_phasors, strong_tiles
-from moire.scanner import srgb_decode
 from moire.screens import SIGNATURES, measure_screen, name_inks
 from moire.settling import settle
 from moire.survey import Survey
+from moire.vision import linear_light
 
 _SETTLED = 0.9
 _EDGE_CPP = 0.005
@@ -72,7 +73,8 @@ def judge_folds(survey: Survey, inks: Sequence[Ink], second: Survey | None = Non
 
 def _weigh(survey: Survey, ppi: tuple[float, float], inks: Sequence[Ink]) -> tuple[tuple[Unfolded, ...], ...]:
     alone = len(survey.lattices) == 1
-    contrasts = [_contrast(survey, g, ink) for g, ink in zip(survey.lattices, inks, strict=True)]
+    sample = linear_light(survey.codes[::_STRIDE, ::_STRIDE])
+    contrasts = [_contrast(survey, g, ink, sample) for g, ink in zip(survey.lattices, inks, strict=True)]
     print_of = agree(
         [unfold(g.k1, ppi, contrast=c, alone=alone) for g, c in zip(survey.lattices, contrasts, strict=True)]
     )
@@ -130,17 +132,17 @@ def _screen(best: Unfolded, lattice: Lattice, ppi: tuple[float, float], ink: Ink
     return measure_screen(k1, k2 * rate, (sigma[0], sigma[1]), ink=ink)
 
 
-def _contrast(survey: Survey, lattice: Lattice, ink: Ink) -> float | None:
+def _contrast(survey: Survey, lattice: Lattice, ink: Ink, sample: NDArray[np.float32]) -> float | None:
     """Observed modulation over that of a screen of this tone without loss.
 
-    In the channel that the ink takes most of, or in luma with the ink's share of it. None where
-    the tone is so light or dark that the expected modulation is itself uncertain.
+    In the channel that the ink takes most of, or in luma with the ink's share of it; `sample` is
+    light from all over the page, whose brightest is paper. None where the tone is so light or dark
+    that the expected modulation is itself uncertain.
     """
     codes = survey.codes
     weight = np.minimum(lattice.first.weight, lattice.second.weight)
     tiles = strong_tiles(np.where(weight >= 0.5 * weight.max(), weight, 0))
-    patches = srgb_decode(cut_patches(codes, tiles, size=survey.size) / 255).astype(np.float32)
-    sample = srgb_decode(codes[::_STRIDE, ::_STRIDE].astype(np.float32) / 255).astype(np.float32)
+    patches = linear_light(cut_patches(codes, tiles, size=survey.size))
     # A codec that halved the chroma leaves a coloured ink only its luma to be judged by.
     if survey.chroma:
         if ink == "unknown":
