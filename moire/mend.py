@@ -18,7 +18,7 @@ from moire.measures import colour_shift, edge_energy, edge_widths, line_levels
 from moire.model import Examination, Finding, Kind, LineRemoved, Measures, Mending, Recipe, Scan
 from moire.notch import remove_lines
 from moire.nulls import ScreenLattice, null_transfer
-from moire.recipe import MENDED_UNASKED, check_fits, prescribe
+from moire.recipe import MENDED_UNASKED, check_fits, prescribe, refit
 from moire.resample import reduce_picture
 from moire.samples import code_planes, tile_size
 from moire.tiles import map_tiles
@@ -63,7 +63,8 @@ def mend(
     only, keep, strength, quick, to_ppi
         See `moire.recipe.prescribe`.
     recipe : Recipe or None
-        A saved remedy to repeat instead; the choices above are then the recipe's own.
+        A saved remedy to repeat instead, its screens re-measured on this scan; the choices above are
+        then the recipe's own.
     progress : callable
         Told the share done, 0..1.
 
@@ -81,6 +82,7 @@ def mend(
         recipe = prescribe(before, only=only, keep=keep, strength=strength, quick=quick, to_ppi=to_ppi)
     else:
         check_fits(recipe, scan)
+        recipe = refit(recipe, before)
     master = _encoded(scan)
     mended = _remove(master, recipe, progress)
     full_size = _as_scan(mended, scan, master)

@@ -17,6 +17,9 @@ from moire.model import Examination, Finding, Kind, Recipe, Removal, Scan
 # Kinds that a filter takes out unasked. Content, an honest weave and paper's own lines stay.
 MENDED_UNASKED: frozenset[Kind] = frozenset({"halftone", "alias", "rosette", "banding", "display-grid"})
 _SCREENS: frozenset[Kind] = frozenset({"halftone", "alias"})
+# How far a screen may lie from where a recipe has it: leaves are laid down a little turned, and
+# paper swells.
+_RULING_SHARE, _TURN_DEG = 0.02, 3.0
 
 
 def prescribe(
@@ -101,6 +104,49 @@ def _removals(finding: Finding) -> list[Removal]:
         return []
     lines = tuple((line.fx_cpp, line.fy_cpp) for line in finding.lines)
     return [Removal(kind=finding.kind, method="notch", vectors_cpp=lines)]
+
+
+def refit(recipe: Recipe, examination: Examination) -> Recipe:
+    """The same remedy for another leaf of the same print, its screens as they lie on that leaf.
+
+    A screen of the leaf is taken for one of the recipe's if it is not of another ink and its ruling is
+    within 2 % and its angle within 3 degrees. A screen with no such match stays where the recipe has
+    it: what is not there is not filtered.
+
+    Parameters
+    ----------
+    recipe : Recipe
+    examination : Examination
+        Of the leaf.
+    """
+    seen = [r for f in examination.findings for r in _removals(f) if r.method == "descreen"]
+    removals = [
+        replace(r, vectors_cpp=_nearest(r, seen)) if r.method == "descreen" else r for r in recipe.removals
+    ]
+    screens = [
+        (np.array(r.vectors_cpp[0]), np.array(r.vectors_cpp[1])) for r in removals if r.method == "descreen"
+    ]
+    if len(screens) > 1:
+        beats = tuple((float(f[0]), float(f[1])) for f in rosette_frequencies(screens))
+        removals = [replace(r, vectors_cpp=beats) if r.kind == "rosette" else r for r in removals]
+    return replace(recipe, removals=tuple(r for r in removals if r.vectors_cpp))
+
+
+def _nearest(removal: Removal, seen: list[Removal]) -> tuple[tuple[float, float], ...]:
+    """Vectors of the screen seen nearest to a removal's own, or those."""
+    k = complex(*removal.vectors_cpp[0])
+    best, least = removal.vectors_cpp, math.inf
+    for other in seen:
+        if other.ink != removal.ink and "unknown" not in (other.ink, removal.ink):
+            continue
+        for vector in other.vectors_cpp:
+            for sign in (1, -1):
+                ratio = sign * complex(*vector) / k
+                turn = abs(math.degrees(math.atan2(ratio.imag, ratio.real)))
+                alike = abs(abs(ratio) - 1) < _RULING_SHARE and turn < _TURN_DEG
+                if alike and abs(ratio - 1) < least:
+                    best, least = other.vectors_cpp, abs(ratio - 1)
+    return best
 
 
 def to_json(recipe: Recipe) -> bytes:
