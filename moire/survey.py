@@ -19,11 +19,12 @@ from moire.peaks import Peak
 from moire.samples import code_planes, mixed_plane, rate_aspect
 from moire.screens import is_halftone, on_axis
 from moire.sighting import View, coloured, look_closer, sight_screens
-from moire.spectrum import Spectrum
+from moire.spectrum import Spectrum, tile_phasors
 
 # Excess that is worth one robust standard deviation, for a profile's line beside a tile's.
 _NAT_OF_Z = 0.35
 _BANDS_AT_MOST = 3
+_OF_CONTENT = 3.0
 # Smaller tiles part too few bins to follow a line by.
 _FOLLOWED_TILE = 128
 # A local map is good to about a tenth of a bin, and a bent page shears its squares.
@@ -91,7 +92,7 @@ def take_survey(scan: Scan, size: int) -> Survey:
         if moving:
             lattices, drifts = moving, moved
     chroma = _read_inks(lattices, codes, size) if view.halves_chroma(codes) else ()
-    peaks += _band_peaks(find_bands(mixed), peaks, blocks, size=size, grid=grid)
+    peaks += _band_peaks(find_bands(mixed), mixed, peaks, blocks, size=size, grid=grid)
     return Survey(
         scan=scan, codes=codes, mixed=mixed, size=size, spectrum=spectrum, peaks=peaks,
         lattices=lattices, drifts=drifts, chroma=chroma, blocks=blocks,
@@ -150,6 +151,7 @@ def _followed(line: DriftingLine, size: int) -> Peak:
 
 def _band_peaks(
     bands: tuple[Band, ...],
+    mixed: NDArray[np.float32],
     peaks: tuple[Peak, ...],
     blocks: BlockGrid | None,
     *,
@@ -166,6 +168,10 @@ def _band_peaks(
         if any(abs(p.f[1 - band.axis]) < 1 / size for p in peaks):
             continue
         if blocks is not None and abs(band.f_cpp * blocks.period_px % 1 - 0.5) > 0.45:
+            continue
+        # A scanner's line is as strong in flat places as elsewhere; lines of text are not.
+        (in_tiles,), _, _ = tile_phasors(mixed, f[None], size=size)
+        if abs(in_tiles.mean()) > _OF_CONTENT * band.amplitude:
             continue
         out.append(
             Peak(

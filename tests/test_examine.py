@@ -11,8 +11,9 @@ from prints import FOUR_INKS, as_scan, card_print, scanned
 from moire.examine import examine
 from moire.loom import Cloth
 from moire.model import Examination, Finding
-from moire.proof import ScreenOrder
-from moire.scanner import Scanner, digitise, sample
+from moire.proof import ScreenOrder, print_sheet
+from moire.scanner import Scanner, digitise, sample, srgb_decode
+from moire.testcard import draw_leaf
 from moire.units import angle_distance
 
 
@@ -128,6 +129,14 @@ def test_clean_pictures_are_not_accused(name: str) -> None:
     found = examine(as_scan(getattr(skimage.data, name)(), 300))
     assert found.verdict == "sound"
     assert not screens(found)
+
+
+def test_close_lines_of_text_are_no_banding() -> None:
+    """A leaf printed small, 0.76 mm from line to line: strong where type stands, faint in flat places."""
+    leaf = srgb_decode(draw_leaf()[:700, 40:740]).astype(np.float32)
+    order = ScreenOrder(ruling_lpi=120, angle_deg=37, ink="black")
+    sheet = print_sheet(leaf, (order,), width_in=1.5, height_in=1.5, gain=0.12, seed=11)
+    assert {f.kind for f in examine(scanned(sheet, 300)[0]).findings} == {"halftone", "content"}
 
 
 def test_cloth_is_a_weave_with_its_thread_count() -> None:
